@@ -1,0 +1,181 @@
+"""Options shared by the commands, and the small objects that commands receive from them.
+
+Three decorators, to be put under `@click.command(...)`; each adds its options and passes *one* object:
+
+- `@problem_options`: INPUTS, --only, --without, --set, --hypothesis, --theory-errors -> `request: ProblemRequest`
+- `@output_options`: --json, --out, --quiet -> `output: Output`
+- `@work_options`: --seed, --jobs -> `work: Work`
+"""
+
+from __future__ import annotations
+
+import functools
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import click
+
+from fitcore.commands.output import Output
+
+if TYPE_CHECKING:
+    from fitcore.problem import Problem
+
+Command = TypeVar("Command", bound=Callable[..., Any])
+
+THEORY_ERRORS = ("gaussian", "flat", "as-given")
+
+
+@dataclass(frozen=True)
+class ProblemRequest:
+    """What the command line asks to be fitted."""
+
+    inputs: str
+    only: tuple[str, ...] = ()
+    without: tuple[str, ...] = ()
+    settings: tuple[str, ...] = ()
+    hypothesis: tuple[str, ...] = ("standard",)
+    theory_errors: str = "as-given"
+
+    def load(self) -> Problem:
+        """Read the inputs and compile the problem.
+
+        Raises
+        ------
+        InputError, UnknownNameError
+            As `Problem.load` does.
+        """
+        from fitcore.problem import Problem
+
+        hypothesis = self.hypothesis[0] if len(self.hypothesis) == 1 else list(self.hypothesis)
+        return Problem.load(
+            self.inputs,
+            hypothesis=hypothesis,
+            only=self.only,
+            without=self.without,
+            settings=self.settings,
+            theory_errors=self.theory_errors,
+        )
+
+    def describe(self) -> dict[str, Any]:
+        """Return the request as plain data, for the record of a run."""
+        return {
+            "inputs": self.inputs,
+            "only": list(self.only),
+            "without": list(self.without),
+            "set": list(self.settings),
+            "hypothesis": list(self.hypothesis),
+            "theory_errors": self.theory_errors,
+        }
+
+
+@dataclass(frozen=True)
+class Work:
+    """How the work is done: seed of the random numbers and number of processes."""
+
+    seed: int = 0
+    jobs: int = 1
+
+
+def _gathered(name: str, build: Callable[..., Any], keys: tuple[str, ...]) -> Callable[[Command], Command]:
+    """Replace the keyword arguments `keys` of a command by one object called `name`."""
+
+    def decorate(function: Command) -> Command:
+        @functools.wraps(function)
+        def wrapped(*args: Any, **kwargs: Any) -> Any:
+            gathered = build(**{key: kwargs.pop(key) for key in keys})
+            return function(*args, **{name: gathered}, **kwargs)
+
+        return wrapped  # type: ignore[return-value]
+
+    return decorate
+
+
+def _chain(function: Command, decorators: list[Callable[[Any], Any]]) -> Command:
+    for decorator in reversed(decorators):
+        function = decorator(function)
+    return function
+
+
+def _split_hypotheses(_ctx: click.Context, _parameter: click.Parameter, value: tuple[str, ...]) -> tuple[str, ...]:
+    names = tuple(part.strip() for item in value for part in item.split("+") if part.strip())
+    return names or ("standard",)
+
+
+hypothesis_option = click.option(
+    "--hypothesis",
+    multiple=True,
+    metavar="NAME",
+    callback=_split_hypotheses,
+    help="New-physics hypothesis; repeat it or join names by + to combine.  [default: standard]",
+)
+
+
+def problem_options(function: Command) -> Command:
+    """Add INPUTS and the options that choose and change its entries; passes `request`."""
+    keys = ("inputs", "only", "without", "settings", "hypothesis", "theory_errors")
+    return _chain(
+        _gathered("request", ProblemRequest, keys)(function),
+        [
+            click.argument("inputs", metavar="INPUTS"),
+            click.option(
+                "--only", multiple=True, metavar="ID-OR-GROUP", help="Keep only these entries; repeatable."
+            ),
+            click.option(
+                "--without", multiple=True, metavar="ID-OR-GROUP", help="Leave these entries out; repeatable."
+            ),
+            click.option(
+                "--set",
+                "settings",
+                multiple=True,
+                metavar="ID.KEY=NUMBER",
+                help="Change an entry for this run, e.g. frequency-Bd.error=0.001; repeatable.",
+            ),
+            hypothesis_option,
+            click.option(
+                "--theory-errors",
+                type=click.Choice(THEORY_ERRORS),
+                default="as-given",
+                show_default=True,
+                help="Treat theory errors as Gaussian, as flat ranges, or as the file says.",
+            ),
+        ],
+    )
+
+
+json_option = click.option(
+    "--json", "json", metavar="FILE", help="Write the result as JSON; - is stdout, tables then go to stderr."
+)
+quiet_option = click.option("--quiet", "-q", is_flag=True, help="Print no tables.")
+out_option = click.option(
+    "--out",
+    metavar="DIR",
+    type=click.Path(path_type=Path, file_okay=True, dir_okay=True),
+    help="Run folder to write (an earlier run folder there is replaced).",
+)
+
+
+def output_options(function: Command) -> Command:
+    """Add --json, --out and --quiet; passes `output`."""
+    return _chain(_gathered("output", Output, ("json", "out", "quiet"))(function), [json_option, out_option, quiet_option])
+
+
+def reading_options(function: Command) -> Command:
+    """Add --json and --quiet for commands that only look things up; passes `output`."""
+    return _chain(_gathered("output", Output, ("json", "quiet"))(function), [json_option, quiet_option])
+
+
+def work_options(function: Command) -> Command:
+    """Add --seed and --jobs; passes `work`."""
+    return _chain(
+        _gathered("work", Work, ("seed", "jobs"))(function),
+        [
+            click.option(
+                "--seed", type=click.IntRange(min=0), default=0, show_default=True, help="Seed of all random numbers."
+            ),
+            click.option(
+                "--jobs", type=click.IntRange(min=1), default=1, show_default=True, help="Number of processes."
+            ),
+        ],
+    )

@@ -1,0 +1,187 @@
+"""One step of a batch of quadratic problems inside boxes and on linearised equality constraints.
+
+Every member of the batch minimises  h.s + s.(A + damping).s / 2  over  low <= s <= high  and, where asked,
+a_k.s = c_k. Bounds are found by a primal-dual active set (Bergounioux, Ito, Kunisch, SIAM J. Control Optim. 37,
+1176 (1999)): solve with the active components pinned to their bounds, pin what sticks out, release what pulls
+inwards, repeat. Clipping a free step instead is wrong as soon as the parameters are correlated.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fitcore.minimise.sparse_cholesky import FROZEN, Pattern, analyse
+
+ACTIVE_SET_ROUNDS = 12
+"""Rounds in which components may be released again; later ones only pin, which must end."""
+
+
+@dataclass
+class QuadraticBatch:
+    """The quadratic problems of a batch; batch axis last throughout.
+
+    Attributes
+    ----------
+    values : ndarray, shape (nnz, B)
+        Lower triangle of A in the order of the pattern.
+    half_gradient : ndarray, shape (n, B)
+        h, half the gradient of chi-square.
+    damping : ndarray, shape (n, B)
+        Non-negative numbers on the diagonal.
+    low, high : ndarray, shape (n, B)
+        Box of the step; equal for a component whose step is given.
+    constraint_gradient : ndarray, shape (k, n, B), or None
+    constraint_target : ndarray, shape (k, B), or None
+    """
+
+    pattern: Pattern
+    values: np.ndarray
+    half_gradient: np.ndarray
+    damping: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
+    constraint_gradient: np.ndarray | None = None
+    constraint_target: np.ndarray | None = None
+
+    def rows(self, pick: np.ndarray) -> QuadraticBatch:
+        """The members of the batch named by an index array."""
+        gradient, target = self.constraint_gradient, self.constraint_target
+        return QuadraticBatch(
+            self.pattern,
+            self.values[:, pick],
+            self.half_gradient[:, pick],
+            self.damping[:, pick],
+            self.low[:, pick],
+            self.high[:, pick],
+            None if gradient is None else gradient[:, :, pick],
+            None if target is None else target[:, pick],
+        )
+
+
+@dataclass
+class QuadraticStep:
+    """What `solve_step` found, for every member of the batch.
+
+    Attributes
+    ----------
+    step : ndarray, shape (n, B)
+    curvature_times_step : ndarray, shape (n, B)
+        A s, without the damping.
+    decrease : ndarray, shape (B,)
+        Predicted decrease of chi-square (not of its half), damping not counted as curvature.
+    multipliers : ndarray, shape (k, B)
+        Of the equality constraints; d (min chi2) / d target = -2 x multiplier.
+    reach : ndarray, shape (k, B)
+        Standard deviation of each constrained quantity in the (damped) quadratic model.
+    active : ndarray of int8, shape (n, B)
+        +1 at the upper bound, -1 at the lower one, 0 free.
+    singular, settled : ndarray of bool, shape (B,)
+        A pivot was lost; the active set came to rest.
+    """
+
+    step: np.ndarray
+    curvature_times_step: np.ndarray
+    decrease: np.ndarray
+    multipliers: np.ndarray
+    reach: np.ndarray
+    active: np.ndarray
+    singular: np.ndarray
+    settled: np.ndarray
+
+    def put(self, rows: np.ndarray, other: QuadraticStep) -> None:
+        """Overwrite the members `rows` with those of `other`."""
+        for name in self.__dataclass_fields__:
+            getattr(self, name)[..., rows] = getattr(other, name)
+
+
+def solve_step(problem: QuadraticBatch, active: np.ndarray | None = None) -> QuadraticStep:
+    """Solve a batch of box-constrained, equality-constrained quadratic problems.
+
+    Parameters
+    ----------
+    problem : QuadraticBatch
+    active : ndarray of int8, shape (n, B), optional
+        First guess of the active set, from the step before.
+    """
+    held = ~(problem.high > problem.low)
+    active = np.zeros(held.shape, dtype=np.int8) if active is None else active.copy()
+    active[held] = 0
+    result = _solve_pinned(problem, held, active)
+    wanted = _next_active(problem, result, held, release=True)
+    todo = np.flatnonzero((wanted != active).any(axis=0))
+    result.settled[todo] = False
+    for round_number in range(1, ACTIVE_SET_ROUNDS + held.shape[0] + 1):
+        if not todo.size:
+            break
+        part, part_held = problem.rows(todo), held[:, todo]
+        solved = _solve_pinned(part, part_held, wanted[:, todo])
+        result.put(todo, solved)
+        new = _next_active(part, solved, part_held, release=round_number < ACTIVE_SET_ROUNDS)
+        changed = (new != solved.active).any(axis=0)
+        result.settled[todo] = ~changed
+        wanted[:, todo] = new
+        todo = todo[changed]
+    return result
+
+
+def _solve_pinned(problem: QuadraticBatch, held: np.ndarray, active: np.ndarray) -> QuadraticStep:
+    """Solve with the active and the held components at their bounds."""
+    pattern, batch = problem.pattern, active.shape[1]
+    pinned = held | (active != 0)
+    any_pinned = bool(pinned.any())
+    added, right = problem.damping, -problem.half_gradient
+    if any_pinned:
+        # relative to the diagonal, so that no choice of units can overwhelm it
+        weight = FROZEN * np.maximum(pattern.diagonal(problem.values) + added, np.finfo(float).tiny**0.5)
+        bound = np.where(active > 0, problem.high, problem.low)
+        added = np.where(pinned, weight, added)
+        right = np.where(pinned, weight * np.where(pinned, bound, 0.0), right)
+    factor = pattern.factor(problem.values, added)
+    directions = problem.constraint_gradient
+    if directions is None or problem.constraint_target is None:
+        step = factor.solve(right)
+        multipliers = reach = np.zeros((0, batch))
+    else:
+        sides = np.concatenate([right[None], np.where(pinned, 0.0, directions)]).transpose(1, 0, 2)
+        solved = factor.solve(sides)
+        step, towards = solved[:, 0], solved[:, 1:].transpose(1, 0, 2)
+        multipliers, reach = _constrain(directions, towards, step, problem.constraint_target)
+        for k in range(len(multipliers)):
+            step -= towards[k] * multipliers[k]
+    if any_pinned:
+        step = np.where(pinned, bound, step)
+    product = pattern.product(problem.values, step)
+    decrease = -(step * (2.0 * problem.half_gradient + product)).sum(axis=0)
+    return QuadraticStep(
+        step, product, decrease, multipliers, reach, active.copy(), factor.singular, np.ones(batch, dtype=bool)
+    )
+
+
+def _constrain(
+    directions: np.ndarray, towards: np.ndarray, step: np.ndarray, target: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Multipliers that bring a step onto a.s = c, and the standard deviations sqrt(a A^-1 a)."""
+    count = len(directions)
+    rows, cols = np.tril_indices(count)
+    schur = np.array([(directions[i] * towards[j]).sum(axis=0) for i, j in zip(rows, cols, strict=True)])
+    missing = (directions * step).sum(axis=1) - target
+    # a direction that is blocked entirely gets a frozen pivot: multiplier zero, constraint left violated
+    multipliers = analyse(rows, cols, count).factor(schur).solve(missing)
+    return multipliers, np.sqrt(np.maximum(schur[rows == cols], 0.0))
+
+
+def _next_active(problem: QuadraticBatch, solved: QuadraticStep, held: np.ndarray, *, release: bool) -> np.ndarray:
+    """Pin what left the box; release what the model pulls back inside."""
+    active = solved.active.copy()
+    free = (active == 0) & ~held
+    active[free & (solved.step > problem.high)] = 1
+    active[free & (solved.step < problem.low)] = -1
+    if release and solved.active.any():
+        pull = problem.half_gradient + solved.curvature_times_step + problem.damping * solved.step
+        if problem.constraint_gradient is not None:
+            pull = pull + (problem.constraint_gradient * solved.multipliers[:, None, :]).sum(axis=0)
+        active[(solved.active > 0) & (pull > 0.0)] = 0
+        active[(solved.active < 0) & (pull < 0.0)] = 0
+    return active

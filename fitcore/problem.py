@@ -1,0 +1,508 @@
+"""A problem: an inputs file and a hypothesis, compiled into functions of batches of parameter points.
+
+>>> from fitcore import Problem
+>>> problem = Problem.load("tidewater")
+>>> problem.parameter_names[:4]
+('wolfenstein_lambda', 'wolfenstein_A', 'wolfenstein_rhobar', 'wolfenstein_etabar')
+>>> problem.fit().valid
+True
+"""
+
+from __future__ import annotations
+
+import hashlib
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from fitcore.evaluation import ChiSquare
+from fitcore.minimise.derivatives import call_with_derivatives, seed, tangents_of
+from fitcore.minimise.normal_matrix import Linearisation
+from fitcore.priors import log_prior
+from likelihoods import Entry, Inputs, Terms, load_inputs
+from likelihoods.ranges import apply_scheme
+from observables import Catalogue, Hypothesis
+from observables import catalogue as public_catalogue
+from observables.errors import InputError, UnknownNameError
+from observables.graph import Graph, compile_graph, find_parameters
+
+if TYPE_CHECKING:
+    from fitcore.result import FitResult
+
+__all__ = ["FreeParameter", "Problem"]
+
+
+@dataclass(frozen=True)
+class FreeParameter:
+    """One axis of theta.
+
+    Attributes
+    ----------
+    name, unit, title, latex : str
+    start, lower, upper, scale : float
+        In ``unit``; ``scale`` is about the size of the uncertainty.
+    period : float or None
+    prior : object or None
+        As the inputs file states it (posteriors only).
+    is_range : bool
+        A flat theory range: bounded, without a term of its own, not counted in degrees of freedom.
+    """
+
+    name: str
+    unit: str
+    start: float
+    lower: float
+    upper: float
+    scale: float
+    title: str = ""
+    latex: str = ""
+    period: float | None = None
+    prior: Any = None
+    is_range: bool = False
+
+
+class Problem:
+    """A chi-square over free parameters, evaluated on batches.
+
+    Points are arrays ``theta`` of shape (B, n), or (n,) for one point, or a dict of name -> value or (B,) array;
+    for one point the leading axis of every result is dropped.
+
+    Parameters
+    ----------
+    inputs : Inputs
+    hypothesis : str, Hypothesis or sequence of them
+    theory_errors : str
+        ``"as-given"``, ``"gaussian"`` or ``"flat"``.
+    catalogue : Catalogue, optional
+
+    Raises
+    ------
+    InputError
+        No entries are left, or the scheme of theory errors does not fit them.
+    UnknownNameError
+        An unknown hypothesis or quantity.
+    """
+
+    def __init__(
+        self,
+        inputs: Inputs,
+        hypothesis: str | Hypothesis | Sequence[str | Hypothesis] = "standard",
+        *,
+        theory_errors: str = "as-given",
+        catalogue: Catalogue | None = None,
+    ) -> None:
+        self.inputs = inputs
+        self.theory_errors = theory_errors
+        self._catalogue = public_catalogue if catalogue is None else catalogue
+        self._hypothesis = self._catalogue.get_hypothesis(hypothesis)
+        self.hypothesis = self._hypothesis.name
+        if not inputs.entries:
+            raise InputError(f"{inputs.name}: no entries are left to fit; see --only and --without")
+
+        scheme = apply_scheme(inputs.entries, theory_errors, self._is_leaf)
+        self.entries = scheme.entries
+        if not self.entries:
+            raise InputError(f"{inputs.name}: every entry became a flat range, nothing is left to fit")
+        self.ranges = scheme.halfwidths
+        # Quantities are targets even when their entry is flat: their parameters stay in the problem.
+        targets = tuple(dict.fromkeys(entry.quantity for entry in inputs.entries))
+        self._leaves = find_parameters(self._catalogue, targets, self._hypothesis)
+        measured = {entry.quantity for entry in inputs.entries}
+        self.parameters, self.fixed = self._sort_leaves(measured, scheme.bounds)
+        self.parameter_names = tuple(p.name for p in self.parameters)
+        self.n_parameters = len(self.parameters)
+        self.n_entries = len(self.entries)
+
+        inputs_of_graph = tuple(p.name for p in self.parameters if not self._is_shift(p))
+        used = tuple(dict.fromkeys(entry.quantity for entry in self.entries))
+        self._graph = compile_graph(self._catalogue, used, inputs_of_graph, self.fixed, self._hypothesis)
+        position = {name: i for i, name in enumerate(self.parameter_names)}
+        self.terms = _terms(inputs, self.entries)
+        self._chi_square = ChiSquare(
+            self._graph,
+            self.terms,
+            [used.index(entry.quantity) for entry in self.entries],
+            [position.get(_range_name(e.id)) if e.id in self.ranges else None for e in self.entries],
+            self.n_parameters,
+        )
+        self._graphs: dict[tuple[str, ...], Graph] = {}
+
+    @classmethod
+    def load(
+        cls,
+        source: str | Path,
+        hypothesis: str | Hypothesis | Sequence[str | Hypothesis] = "standard",
+        *,
+        only: Iterable[str] = (),
+        without: Iterable[str] = (),
+        settings: Iterable[str] = (),
+        theory_errors: str = "as-given",
+    ) -> Problem:
+        """Read an inputs file or bundled set and compile it.
+
+        Parameters
+        ----------
+        source : str or Path
+            Name of a bundled set, or path of a TOML file.
+        hypothesis : str, Hypothesis or sequence of them
+        only, without : iterable of str
+            Ids or groups to keep, to leave out.
+        settings : iterable of str
+            ``"ID.error=0.01"`` and the like.
+        theory_errors : str
+
+        Raises
+        ------
+        InputError, UnknownNameError
+        """
+        inputs = load_inputs(source, only=only, without=without, settings=settings)
+        return cls(inputs, hypothesis, theory_errors=theory_errors)
+
+    # -- set-up -------------------------------------------------------------------------------------------------
+
+    def _is_leaf(self, name: str) -> bool:
+        if name in self._hypothesis.parameters:
+            return True
+        return self._catalogue[name].kind != "quantity"
+
+    @staticmethod
+    def _is_shift(parameter: FreeParameter) -> bool:
+        return parameter.name.startswith("range:")
+
+    def _sort_leaves(
+        self, measured: set[str], bounds: Mapping[str, tuple[float, float]]
+    ) -> tuple[tuple[FreeParameter, ...], dict[str, float]]:
+        """Which leaves vary, where they start, and what the others are held at."""
+        free: list[FreeParameter] = []
+        fixed: dict[str, float] = {}
+        for name, leaf in self._leaves.items():
+            setting = self.inputs.parameters.get(name)
+            hold = getattr(leaf, "fixed", leaf.kind == "constant") and name not in measured
+            if setting is not None and setting.fixed is not None:
+                hold = setting.fixed
+            own = [e for e in self.entries if e.quantity == name]
+            value = getattr(leaf, "start", getattr(leaf, "value", 0.0))
+            # An own measurement starts the parameter; range and bound settings of the file come before it.
+            if own and not hold:
+                weights = [1.0 / (e.plus * e.minus) for e in own]
+                value = sum(w * e.value for w, e in zip(weights, own, strict=True)) / sum(weights)
+            if setting is not None and setting.start is not None:
+                value = setting.start
+            if hold:
+                # Constants at their catalogue value are no news; anything else is reported.
+                if leaf.kind == "parameter" or setting is not None:
+                    fixed[name] = float(value)
+                continue
+            lower, upper = getattr(leaf, "lower", -math.inf), getattr(leaf, "upper", math.inf)
+            if setting is not None:
+                lower = lower if setting.lower is None else setting.lower
+                upper = upper if setting.upper is None else setting.upper
+            is_range = name in bounds
+            if is_range:
+                lower, upper = max(lower, bounds[name][0]), min(upper, bounds[name][1])
+            if not lower < upper:
+                raise InputError(f"parameter {name!r}: the bounds {lower} and {upper} leave no room")
+            # A start on a bound has no room on one side: keep a thousandth of the range away.
+            if math.isfinite(lower) and math.isfinite(upper):
+                margin = 1e-3 * (upper - lower)
+                value = min(max(value, lower + margin), upper - margin)
+            value = min(max(value, lower), upper)
+            scale = min((min(e.plus, e.minus) for e in own), default=getattr(leaf, "scale", 0.0) or leaf.__dict__.get("error", 0.0))
+            if is_range:
+                scale = 0.25 * (upper - lower)
+            free.append(
+                FreeParameter(
+                    name=name,
+                    unit=leaf.unit,
+                    start=float(value),
+                    lower=float(lower),
+                    upper=float(upper),
+                    scale=float(scale) or 1.0,
+                    title=leaf.title,
+                    latex=leaf.latex,
+                    period=leaf.period,
+                    prior=None if setting is None else setting.prior,
+                    is_range=is_range,
+                )
+            )
+        for entry in self.entries:
+            if entry.id in self.ranges:
+                half = self.ranges[entry.id]
+                free.append(
+                    FreeParameter(
+                        name=_range_name(entry.id),
+                        unit=entry.unit,
+                        start=0.0,
+                        lower=-half,
+                        upper=half,
+                        scale=0.5 * half,
+                        title=f"flat theory range of {entry.id}",
+                        is_range=True,
+                    )
+                )
+        return tuple(free), fixed
+
+    # -- evaluation ---------------------------------------------------------------------------------------------
+
+    def theta(self, point: Any) -> tuple[np.ndarray, bool]:
+        """Points as an array of shape (n, B), and whether a single point was given.
+
+        Raises
+        ------
+        InputError
+            A wrong shape, or a parameter without value.
+        UnknownNameError
+            A name that is not a free parameter.
+        """
+        if isinstance(point, Mapping):
+            for name in point:
+                if name not in self.parameter_names:
+                    close = self._catalogue.close_matches(name, self.parameter_names)
+                    raise UnknownNameError(name, "free parameter", close)
+            missing = [name for name in self.parameter_names if name not in point]
+            if missing:
+                raise InputError(f"no value for the parameters {', '.join(missing)}")
+            columns = [np.asarray(point[name], dtype=float) for name in self.parameter_names]
+            single = all(column.ndim == 0 for column in columns)
+            return np.array(np.broadcast_arrays(*map(np.atleast_1d, columns))), single
+        array = np.asarray(point, dtype=float)
+        if array.ndim not in (1, 2) or array.shape[-1] != self.n_parameters:
+            raise InputError(f"a point has {self.n_parameters} parameters; the array given has shape {array.shape}")
+        return np.ascontiguousarray(np.atleast_2d(array).T), array.ndim == 1
+
+    def _data(self, data: Any, batch: int) -> np.ndarray | None:
+        if data is None:
+            return None
+        array = np.atleast_2d(np.asarray(data, dtype=float))
+        if array.shape not in ((batch, self.n_entries), (1, self.n_entries)):
+            raise InputError(f"data must have the shape ({batch}, {self.n_entries}), not {array.shape}")
+        return np.ascontiguousarray(np.broadcast_to(array, (batch, self.n_entries)).T)
+
+    def chi2(self, theta: Any, data: Any = None) -> Any:
+        """-2 ln L up to a constant.
+
+        Parameters
+        ----------
+        theta : array (B, n) or (n,), or dict
+        data : array (B, m), optional
+            Measured values in place of the entries' own, row by row.
+
+        Returns
+        -------
+        ndarray, shape (B,)
+            +inf where a formula has no value.
+        """
+        points, single = self.theta(theta)
+        result = self._chi_square.chi2(points, self._data(data, points.shape[1]))
+        return float(result[0]) if single else result
+
+    def residuals(self, theta: Any, data: Any = None) -> np.ndarray:
+        """Whitened residuals, shape (B, m); the sum of their squares is `chi2`."""
+        points, single = self.theta(theta)
+        result = self._chi_square.residuals(points, self._data(data, points.shape[1])).T
+        return result[0] if single else result
+
+    def jacobian(self, theta: Any, data: Any = None) -> np.ndarray:
+        """Exact derivatives of the whitened residuals, shape (B, m, n). For people; solvers use `linearise`."""
+        points, single = self.theta(theta)
+        result = np.moveaxis(self._chi_square.jacobian(points, self._data(data, points.shape[1])), -1, 0)
+        return result[0] if single else result
+
+    def linearise(self, theta: Any, data: Any = None) -> Linearisation:
+        """chi-square (B,), its gradient (B, n) and the sparse normal matrix J^T J."""
+        points, _ = self.theta(theta)
+        return self._chi_square.linearise(points, self._data(data, points.shape[1]))
+
+    def predictions(self, theta: Any) -> np.ndarray:
+        """Predicted value of every entry, shape (B, m)."""
+        points, single = self.theta(theta)
+        with np.errstate(all="ignore"):
+            result = self._chi_square.predictions(points).T
+        return result[0] if single else result
+
+    def values(self, theta: Any, names: Iterable[str]) -> dict[str, Any]:
+        """Any quantities or parameters at given points, real or complex, each of shape (B,).
+
+        Raises
+        ------
+        UnknownNameError
+            No such quantity.
+        InputError
+            It rests on parameters that this problem does not have.
+        """
+        wanted = tuple(names)
+        points, single = self.theta(theta)
+        graph = self._graph_for(wanted)
+        results = graph.evaluate(list(points[: len(graph.inputs)]))
+        shaped = {}
+        for name, result in zip(wanted, results, strict=True):
+            array = np.array(np.broadcast_to(result, points.shape[1:]))
+            shaped[name] = array[0] if single else array
+        return shaped
+
+    def linearise_quantities(self, theta: Any, names: Iterable[str]) -> tuple[np.ndarray, np.ndarray]:
+        """Real quantities and their exact gradients: shapes (B, q) and (B, q, n)."""
+        wanted = tuple(names)
+        points, single = self.theta(theta)
+        graph = self._graph_for(wanted)
+        batch = points.shape[1]
+        values = np.empty((len(wanted), batch))
+        gradient = np.zeros((len(wanted), self.n_parameters, batch))
+        with np.errstate(all="ignore"):
+            results = graph.evaluate(seed(points[: len(graph.inputs)]), call_with_derivatives)
+        for row, (name, result) in enumerate(zip(wanted, results, strict=True)):
+            if self.is_complex(name):
+                raise InputError(f"{name!r} is complex; take its real part, magnitude or phase")
+            values[row] = getattr(result, "value", result)
+            support = graph.supports[name]
+            gradient[row, list(support)] = tangents_of(result, support, batch)
+        value_rows, gradient_rows = values.T, np.moveaxis(gradient, -1, 0)
+        return (value_rows[0], gradient_rows[0]) if single else (value_rows, gradient_rows)
+
+    def _graph_for(self, names: tuple[str, ...]) -> Graph:
+        if names not in self._graphs:
+            known = self._graph.inputs
+            needed = find_parameters(self._catalogue, names, self._hypothesis)
+            default = {n: leaf.start for n, leaf in needed.items() if getattr(leaf, "fixed", False)}
+            absent = [
+                n
+                for n, leaf in needed.items()
+                if leaf.kind == "parameter" and n not in known and n not in self.fixed and n not in default
+            ]
+            if absent:
+                raise InputError(
+                    f"{', '.join(names)}: nothing in {self.inputs.name} determines {', '.join(absent)}; "
+                    "add a measurement of it, or give it a value with [parameters.NAME] fixed = true"
+                )
+            self._graphs[names] = compile_graph(
+                self._catalogue, names, known, default | self.fixed, self._hypothesis
+            )
+        return self._graphs[names]
+
+    def pseudo_data(
+        self, theta: Any, size: int, *, rng: np.random.Generator | int | None = None
+    ) -> np.ndarray:
+        """Measured values of all entries thrown around the predictions at one point, shape (size, m)."""
+        return np.asarray(self.terms.pseudo_data(self.predictions(theta), size, rng=rng))
+
+    def log_prior(self, theta: Any) -> Any:
+        """Log prior density, shape (B,); flat inside the bounds unless the inputs file says otherwise."""
+        points, single = self.theta(theta)
+        result = log_prior(self.parameters, points)
+        return float(result[0]) if single else result
+
+    def log_posterior(self, theta: Any) -> Any:
+        """-chi2 / 2 plus the log prior, shape (B,); -inf outside the priors and at impossible points."""
+        points, single = self.theta(theta)
+        prior = log_prior(self.parameters, points)
+        inside = np.isfinite(prior)
+        result = np.full(points.shape[1], -np.inf)
+        if inside.any():
+            chosen = points if inside.all() else np.ascontiguousarray(points[:, inside])
+            result[inside] = prior[inside] - 0.5 * self._chi_square.chi2(chosen)
+        return float(result[0]) if single else result
+
+    # -- descriptions -------------------------------------------------------------------------------------------
+
+    def _node(self, name: str) -> Any:
+        for parameter in self.parameters:
+            if parameter.name == name:
+                return parameter
+        if name in self._hypothesis.parameters:
+            return self._hypothesis.parameters[name]
+        return self._catalogue[name]
+
+    def unit_of(self, name: str) -> str:
+        """Unit of a quantity or parameter."""
+        return str(self._node(name).unit)
+
+    def title_of(self, name: str) -> str:
+        """What a quantity or parameter is, in words."""
+        return str(self._node(name).title)
+
+    def latex_of(self, name: str) -> str:
+        """Symbol of a quantity or parameter, without dollar signs; empty if it has none."""
+        return str(self._node(name).latex)
+
+    def period_of(self, name: str) -> float | None:
+        """Period of an angle, else None."""
+        period = self._node(name).period
+        return None if period is None else float(period)
+
+    def is_complex(self, name: str) -> bool:
+        """Whether a quantity has complex values."""
+        return bool(getattr(self._node(name), "is_complex", False))
+
+    def determines(self, name: str) -> bool:
+        """Whether every parameter that a quantity rests on has a value in this problem."""
+        try:
+            self._graph_for((name,))
+        except (InputError, UnknownNameError):
+            return False
+        return True
+
+    @property
+    def start(self) -> np.ndarray:
+        """Start values of the free parameters, shape (n,)."""
+        return np.array([p.start for p in self.parameters])
+
+    @property
+    def fingerprint(self) -> str:
+        """Hash of all that decides the numbers: inputs, hypothesis, theory errors, parameters and formulas' names."""
+        parts = [
+            self.inputs.resolved_toml(),
+            self.hypothesis,
+            self.theory_errors,
+            repr([(p.name, p.unit, p.lower, p.upper, p.prior) for p in self.parameters]),
+            repr(sorted(self.fixed.items())),
+            repr([(n, leaf.__dict__.get("value")) for n, leaf in self._leaves.items()]),
+        ]
+        return hashlib.sha256("\0".join(parts).encode()).hexdigest()
+
+    # -- other problems -----------------------------------------------------------------------------------------
+
+    def with_inputs(self, inputs: Inputs) -> Problem:
+        """The same hypothesis and treatment of theory errors with other inputs."""
+        return Problem(inputs, self._hypothesis, theory_errors=self.theory_errors, catalogue=self._catalogue)
+
+    def only(self, *names: str) -> Problem:
+        """The problem with just these ids or groups."""
+        return self.with_inputs(self.inputs.select(only=names))
+
+    def without(self, *names: str) -> Problem:
+        """The problem without these ids or groups."""
+        return self.with_inputs(self.inputs.select(without=names))
+
+    # -- what to do with it -------------------------------------------------------------------------------------
+
+    def fit(self, *, derived: Iterable[str] | None = None, profile: Iterable[str] | None = None) -> FitResult:
+        """Best fit, intervals, goodness of fit, pulls and other minima; see `fitcore.minimise.best_fit.fit`."""
+        from fitcore.minimise.best_fit import fit
+
+        return fit(self, derived=derived, profile=profile)
+
+
+def _range_name(entry_id: str) -> str:
+    return f"range:{entry_id}"
+
+
+def _terms(inputs: Inputs, entries: Sequence[Entry]) -> Terms:
+    """Compile the entries that a scheme of theory errors left, with the correlations between them.
+
+    Where the scheme widened an error by an independent part, its correlations shrink accordingly.
+    """
+    if tuple(entries) == inputs.entries:
+        return inputs.terms
+    place = {entry.id: i for i, entry in enumerate(inputs.entries)}
+    kept = [place[entry.id] for entry in entries]
+    before = [inputs.entries[i] for i in kept]
+    shrink = np.array(
+        [math.sqrt(old.plus * old.minus / (new.plus * new.minus)) for old, new in zip(before, entries, strict=True)]
+    )
+    matrix = inputs.correlation_matrix()[np.ix_(kept, kept)] * np.outer(shrink, shrink)
+    np.fill_diagonal(matrix, 1.0)
+    return Terms.from_entries(entries, matrix)

@@ -1,0 +1,1 @@
+"""Posterior chains: sampling, storage, diagnostics, summaries, evidence and export."""

@@ -1,0 +1,1 @@
+"""Questions asked of a finished fit: calibration, indirect values, error budget, outlook."""

@@ -1,0 +1,99 @@
+"""Golden texts of the tables, and what they must never hide."""
+
+from __future__ import annotations
+
+import io
+from dataclasses import replace
+from typing import Any
+
+from rich.console import Console
+
+from fitcore.commands import tables
+from fitcore.result import FitResult
+
+
+def text(*parts: Any) -> str:
+    console = Console(file=io.StringIO(), width=110, color_system=None, legacy_windows=False)
+    for part in parts:
+        console.print(part)
+    lines = console.file.getvalue().splitlines()  # type: ignore[attr-defined]
+    return "\n".join(line.rstrip() for line in lines if line.strip())
+
+
+PARAMETERS = """\
+Parameters
+ name                 value                    68.27 %              95.0 %               unit   intervals
+ ────────────────────────────────────────────────────────────────────────────────────────────────────────
+ wolfenstein_lambda   0.22519 +- 0.00068       [0.22451, 0.22587]   [0.22386, 0.22652]          profile
+ wolfenstein_A        0.833 +- 0.011           [0.823, 0.844]       [0.813, 0.854]              profile
+ wolfenstein_rhobar   0.2 (open on one side)   [0.1, inf]           [-inf, inf]                 profile
+ wolfenstein_etabar   0.3 (unconstrained)      -                    -                           -"""
+
+DERIVED = """\
+Derived
+ name       value                  68.27 %              95.0 %               unit   intervals
+ ────────────────────────────────────────────────────────────────────────────────────────────
+ jarlskog   (3.203 +- 0.070)e-05   [3.133, 3.273]e-05   [3.066, 3.340]e-05          linear"""
+
+MEASUREMENTS = """\
+Measured against fitted
+ id           quantity         measured             fitted        unit    pull
+ ─────────────────────────────────────────────────────────────────────────────
+ element-ud   magnitude_V_ud   0.97367 +- 0.00032   0.97432              -2.03
+ gamma        angle_gamma      66.4 +2.7 -2.8       65.6 +- 1.6   deg    +0.28
+ bag-K        bag_K            0.7533 +- 0.0091     0.7545               -0.13
+pull = (measured - fitted) / measured error"""
+
+OTHER_MINIMA = """\
+Other minima
+ chi-square   above the best   wolfenstein_lambda   wolfenstein_A   wolfenstein_rhobar   wolfenstein_etabar
+ ──────────────────────────────────────────────────────────────────────────────────────────────────────────
+       5.50            +2.29               0.2252            0.83                  0.2                 -0.3"""
+
+
+def test_golden_parameters(result: FitResult) -> None:
+    assert text(tables.estimates("Parameters", result.parameters)) == PARAMETERS
+
+
+def test_golden_derived(result: FitResult) -> None:
+    assert text(tables.estimates("Derived", result.derived)) == DERIVED
+
+
+def test_golden_measurements_sorted_by_pull(result: FitResult) -> None:
+    assert text(tables.measurements(result.measurements)) == MEASUREMENTS
+
+
+def test_golden_other_minima(result: FitResult) -> None:
+    found = tables.other_minima(result)
+    assert text(found) == OTHER_MINIMA
+    assert tables.other_minima(replace(result, other_minima=())) is None
+
+
+def test_verdict_comes_with_reasons(result: FitResult) -> None:
+    good = text(*tables.verdict(result))
+    assert good == "Converged. chi-square 3.21 for 2 degrees of freedom, p-value 0.2"
+    bad = replace(result, valid=False, message="minimisers disagree", flags=("minimisers-disagree",), p_value=None)
+    shown = text(*tables.verdict(bad))
+    assert shown.startswith("NOT CONVERGED: minimisers disagree. chi-square 3.21")
+    assert "no p-value" in shown
+    assert "flag: minimisers-disagree" in shown
+    assert text(*tables.verdict(FitResult())).startswith("NOT CONVERGED: no reason recorded")
+
+
+def test_notices_name_everything_special_about_the_inputs() -> None:
+    notices = [
+        ("recalled", "charm-mass", "value quoted from memory"),
+        ("recalled", "kappa", "value quoted from memory"),
+        ("inflated", "element-us", "error scaled by 2.5: disagreement"),
+        ("replaced", "frequency-Bd", "of averages-2026"),
+        ("changed", "gamma", "error = 2 (was 2.75)"),
+    ]
+    shown = text(tables.notices(notices, {"penguin_shift_2beta": 0.0}, {"penguin_shift_2beta": "deg"}))
+    assert shown.splitlines() == [
+        "  replaced   frequency-Bd: of averages-2026",
+        "  changed    gamma: error = 2 (was 2.75)",
+        "  inflated   element-us: error scaled by 2.5: disagreement",
+        "  recalled   charm-mass, kappa (quoted from memory: compare with the source before relying on them)",
+        "  held fixed penguin_shift_2beta = 0 deg",
+    ]
+    assert tables.notices([], {}).row_count == 0
