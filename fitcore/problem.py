@@ -13,7 +13,7 @@ from __future__ import annotations
 import hashlib
 import math
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -23,7 +23,7 @@ from fitcore.evaluation import ChiSquare
 from fitcore.minimise.derivatives import call_with_derivatives, seed, tangents_of
 from fitcore.minimise.normal_matrix import Linearisation
 from fitcore.priors import log_prior
-from likelihoods import Entry, Inputs, Terms, load_inputs
+from likelihoods import Declared, Entry, Inputs, Terms, load_inputs, units
 from likelihoods.ranges import apply_scheme
 from observables import Catalogue, Hypothesis
 from observables import catalogue as public_catalogue
@@ -469,6 +469,18 @@ class Problem:
         """The same hypothesis and treatment of theory errors with other inputs."""
         return Problem(inputs, self._hypothesis, theory_errors=self.theory_errors, catalogue=self._catalogue)
 
+    def with_entries(self, entries: Sequence[Entry]) -> Problem:
+        """The same problem with changed numbers (values, errors) in its entries; correlations stay."""
+        changed = {entry.id: _restated(entry) for entry in entries}
+        return self.with_inputs(
+            replace(self.inputs, entries=tuple(changed.get(e.id, e) for e in self.inputs.entries))
+        )
+
+    @staticmethod
+    def unit_factor(unit: str, target: str) -> float:
+        """Factor from one unit to another; ValueError with the reason when there is none."""
+        return units.factor(unit, target)
+
     def only(self, *names: str) -> Problem:
         """The problem with just these ids or groups."""
         return self.with_inputs(self.inputs.select(only=names))
@@ -488,6 +500,13 @@ class Problem:
 
 def _range_name(entry_id: str) -> str:
     return f"range:{entry_id}"
+
+
+def _restated(entry: Entry) -> Entry:
+    """The entry with its present numbers as the declared ones, so that the resolved file says what is fitted."""
+    error = None if entry.errors else (entry.plus, entry.minus)
+    declared = Declared(entry.value, error, dict(entry.errors), entry.flat_halfwidth, entry.unit)
+    return replace(entry, declared=declared, inflate=1.0, inflate_group=None)
 
 
 def _terms(inputs: Inputs, entries: Sequence[Entry]) -> Terms:

@@ -1,9 +1,9 @@
 r"""CP asymmetries and the phases they measure.
 
 All of them start from the mixing phases of `observables.neutral_mixing`, so that a hypothesis on mixing moves
-everything it must. Sign conventions: ``S = 2 Im(lambda_f) / (1 + |lambda_f|^2)`` with ``lambda_f =
-(q/p)(Abar_f/A_f)``, and the time-dependent asymmetry is ``(Gamma(Bbar) - Gamma(B)) / sum = S sin(dm t) - C
-cos(dm t)``.
+everything it must. Sign conventions: ``S = 2 Im(lambda_f) / (1 + |lambda_f|^2)`` with
+``lambda_f = (q/p)(Abar_f/A_f)``, and the time-dependent asymmetry is
+``(Gamma(Bbar) - Gamma(B)) / sum = S sin(dm t) - C cos(dm t)``.
 
 Sources
 -------
@@ -103,9 +103,9 @@ def phase_phi_s(mixing_phase_Bs: Any, penguin_shift_phi_s: Any) -> Real:
     cp="odd",
 )
 def sine_2beta_plus_gamma(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
-    """``sin(phi_d + gamma)`` as measured in B_d -> D(*) pi, dimensionless; CP-odd, positive in the standard
-    model.
+    """``sin(phi_d + gamma)`` as measured in B_d -> D(*) pi, dimensionless; CP-odd.
 
+    Sign: positive in the standard model, ``sin(2 beta + gamma)`` with an argument near 110 deg.
     Tree decays: the mixing phase enters without any penguin shift.
     """
     return np.sin((mixing_phase_Bd + angle_gamma) * RADIAN_PER_DEGREE)
@@ -120,12 +120,12 @@ def sine_2beta_plus_gamma(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
     period=180.0,
 )
 def isospin_alpha(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
-    """``180 deg - gamma - phi_d/2``, modulo 180 deg, given in [0, 180); CP-odd, that is, alpha and 180 -
-    alpha are exchanged.
+    """``180 deg - gamma - phi_d/2`` modulo 180 deg, given in [0, 180); CP-odd.
 
-    The decays fix twice the sum of gamma (tree) and half the mixing phase: equal to the angle alpha of the
-    unitarity triangle in the standard model, shifted by minus half the new phase if mixing has one.
-    Electroweak penguins (about 1.5 deg) are neglected.
+    The CP operation exchanges alpha and 180 deg - alpha, which is -alpha. The decays fix the sum of gamma
+    (from the tree amplitudes) and half the mixing phase, modulo 180 deg: the angle alpha of the unitarity
+    triangle in the standard model, shifted by minus half the new phase if mixing has one. Electroweak
+    penguins (about 1.5 deg) are neglected.
     """
     alpha = 180.0 - angle_gamma - 0.5 * mixing_phase_Bd
     for _ in range(2):  # gamma and phi_d lie in (-180, 180], so alpha starts in [-90, 450)

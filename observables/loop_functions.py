@@ -2,12 +2,13 @@ r"""One-loop functions of the W, box and penguin diagrams (Inami-Lim functions).
 
 All arguments are squared mass ratios ``x = m^2 / M_W^2`` of a quark of running mass ``m = m(m)``; all results
 are dimensionless. The functions are elementwise over any shape and use plain ufuncs only, so that
-forward-derivative arrays pass through. They are defined for ``x >= 0`` (``x > 0`` for the two with a
-logarithm at the origin) and give nan outside.
+forward-derivative arrays pass through. They are defined for ``x >= 0`` and give nan below; two of them, and
+the combination Z0, grow like ln x at the origin.
 
-Every function here has the form ``[p(x) + q(x) ln x] / (x - 1)^n``, whose numerator vanishes like ``(x -
-1)^n`` at the W mass. Near there the quotient loses all its digits, so the Taylor series about ``x = 1``, with
-coefficients worked out in exact fractions, takes over; both agree to a few rounding errors where they meet.
+Every function here has the form ``[p(x) + q(x) ln x] / (x - 1)^n`` with a numerator that vanishes as fast as
+the denominator at the W mass. Near there the quotient loses all its digits, so the Taylor series about
+``x = 1`` takes over, with coefficients worked out in exact fractions; both agree to a few rounding errors
+where they meet.
 
 The box function of two different quarks is a divided difference: with
 ``g(a) = [(a^2 - 8 a + 4) ln a + 3 (a - 1)] / [4 (a - 1)^2]``, regular at one,
@@ -152,7 +153,7 @@ def box_function(x: Any) -> Any:
 
     Parameters
     ----------
-    x : array_like
+    x : float or array
         Squared mass ratio, any shape, dimensionless.
 
     Returns
@@ -168,12 +169,11 @@ def box_function(x: Any) -> Any:
 
 
 def box_function_mixed(x: Any, y: Any) -> Any:
-    r"""Box function :math:`S_0(x, y)` of two different quarks in the loop; symmetric, and ``S0(x, x) =
-    S0(x)``.
+    r"""Box function :math:`S_0(x, y)` of two different quarks in the loop; symmetric.
 
     Parameters
     ----------
-    x, y : array_like
+    x, y : float or array
         Squared mass ratios, dimensionless, of shapes that broadcast.
 
     Returns
@@ -183,8 +183,8 @@ def box_function_mixed(x: Any, y: Any) -> Any:
 
     Notes
     -----
-    Written as a divided difference (module text), accurate also where the arguments agree or lie at the W
-    mass. Source: G. Buchalla, A. J. Buras, M. E. Lautenbacher, Rev. Mod. Phys. 68, 1125 (1996).
+    A divided difference (module text), accurate also where the arguments agree, ``S0(x, x) = S0(x)``, or lie
+    at the W mass. Source: G. Buchalla, A. J. Buras, M. E. Lautenbacher, Rev. Mod. Phys. 68, 1125 (1996).
     """
     with np.errstate(divide="ignore", invalid="ignore"):
         if np.all((x > 0.0) & (x < APART * y)):  # charm and top: nothing special about any point

@@ -466,10 +466,10 @@ def M12_K_charm_top(
     kaon_product_top: Any,
     kaon_product_charm: Any,
 ) -> Complex:
-    """Short-distance M12 of the kaon with ``lambda_u`` eliminated, in the frame where ``lambda_u`` is real;
-    GeV, complex.
+    """Short-distance M12 of the kaon with ``lambda_u`` eliminated, GeV, complex.
 
-    Standard amplitude only: a hypothesis on kaon mixing acts on `M12_K_top` and does not move this one.
+    Frame where ``lambda_u`` is real. Standard amplitude only: a hypothesis on kaon mixing acts on `M12_K_top`
+    and does not move this one.
     """
     charm, top = np.conjugate(kaon_product_charm), np.conjugate(kaon_product_top)
     return mixing_strength_K * (
@@ -504,10 +504,9 @@ def kaon_product_charm(V_cd: Any, V_cs: Any, V_ud: Any, V_us: Any) -> Complex:
 def epsilon_K_charm_top(
     long_distance_factor_epsilon_K: Any, M12_K_charm_top: Any, mass_difference_K: Any
 ) -> Real:
-    """As `epsilon_K`, from the charm-top form with its own short-distance factors: positive for eta-bar > 0;
-    CP-odd.
+    """As `epsilon_K`, from the charm-top form with its own short-distance factors; CP-odd.
 
-    An alternative for comparisons; never use both in one fit, and do not mix the short-distance factors of
-    the forms.
+    Sign: positive for eta-bar > 0. An alternative for comparisons; never use both in one fit, and do not mix
+    the short-distance factors of the two forms.
     """
     return long_distance_factor_epsilon_K * np.imag(M12_K_charm_top) / (math.sqrt(2) * mass_difference_K)

@@ -81,9 +81,9 @@ def strong_coupling(
 
     Parameters
     ----------
-    scale, reference_scale : array_like
+    scale, reference_scale : float or array
         Where it is wanted and where it is known; GeV, any shapes that broadcast.
-    reference_coupling : array_like
+    reference_coupling : float or array
         Its value at `reference_scale`, dimensionless.
     n_flavours : int
         Number of active flavours over the whole way; thresholds are the caller's business.
@@ -141,7 +141,7 @@ def coupling_below_threshold(coupling: Any, n_light: int) -> Any:
 
     Parameters
     ----------
-    coupling : array_like
+    coupling : float or array
         :math:`\alpha_s` with ``n_light + 1`` flavours at the scale :math:`m(m)` (MSbar), dimensionless.
     n_light : int
         Number of flavours lighter than the one that is removed.
@@ -163,7 +163,7 @@ def coupling_above_threshold(coupling: Any, n_light: int) -> Any:
 
     Parameters
     ----------
-    coupling : array_like
+    coupling : float or array
         :math:`\\alpha_s` with `n_light` flavours at the heavy quark's mass, dimensionless.
     n_light : int
         Number of flavours lighter than the one that is added.
@@ -187,7 +187,7 @@ def pole_mass_ratio(coupling: Any, *, n_light: int = 5, n_loops: int = 3) -> Any
 
     Parameters
     ----------
-    coupling : array_like
+    coupling : float or array
         :math:`\alpha_s` with ``n_light + 1`` flavours at :math:`m(m)`, dimensionless.
     n_light : int
         Number of lighter flavours.
@@ -231,11 +231,11 @@ def top_mass_pole_from_msbar(
 
     Parameters
     ----------
-    mass : array_like
+    mass : float or array
         MSbar mass m_t(m_t), GeV.
-    coupling_mZ : array_like
+    coupling_mZ : float or array
         Strong coupling with five flavours at the Z mass, dimensionless.
-    mass_Z : array_like
+    mass_Z : float or array
         Z mass, GeV.
     n_loops : int
         Loops of the mass relation, 0 to 3.
@@ -258,7 +258,7 @@ def top_mass_msbar_from_pole(
 
     Parameters
     ----------
-    pole_mass : array_like
+    pole_mass : float or array
         GeV.
     coupling_mZ, mass_Z, n_loops, running_loops
         As in `top_mass_pole_from_msbar`.

@@ -24,6 +24,7 @@ if TYPE_CHECKING:
 ASSIGNMENT = re.compile(
     r"\s*(?P<name>[A-Za-z_]\w*)\s*=\s*(?P<number>[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(?P<unit>\S.*?)?\s*"
 )
+WHAT_FROM_TAKES = "--from takes a run folder of `weakmix fit`, or inputs"
 #: Step of the numerical propagation, in standard deviations: small against curvature, large against rounding.
 PROPAGATION_STEP = 1e-3
 
@@ -42,10 +43,21 @@ class Point:
 
 @click.command("compute")
 @click.argument("quantities", nargs=-1, required=True, metavar="QUANTITY...")
-@click.option("--from", "source", metavar="RUN-OR-INPUTS", help="Take the best fit of a run folder, or fit these inputs.")
-@click.option("--start-values", is_flag=True, help="Take catalogue start values for parameters not given otherwise.")
 @click.option(
-    "--at", "assignments", multiple=True, metavar="NAME=VALUE[UNIT]", help="Set a parameter or constant; repeatable."
+    "--from",
+    "source",
+    metavar="RUN-OR-INPUTS",
+    help="Take the best fit of a run folder, or fit these inputs.",
+)
+@click.option(
+    "--start-values", is_flag=True, help="Take catalogue start values for parameters not given otherwise."
+)
+@click.option(
+    "--at",
+    "assignments",
+    multiple=True,
+    metavar="NAME=VALUE[UNIT]",
+    help="Set a parameter or constant; repeatable.",
 )
 @hypothesis_option
 @output_options
@@ -63,8 +75,8 @@ def command(
 
     Parameters come from --at, else from --from, else (with --start-values) from the catalogue; one without a
     value from anywhere is an error. --from RUN takes the best fit and propagates its covariance linearly to
-    68.27 % intervals; --from INPUTS fits the inputs first, with the given hypothesis. A fitted parameter that --at
-    moves leaves no intervals: they would belong to another point.
+    68.27 % intervals; --from INPUTS fits the inputs first, with the given hypothesis. A fitted parameter that
+    --at moves leaves no intervals: they would belong to another point.
 
     A run folder is written only with --out.
 
@@ -100,7 +112,10 @@ def command(
     rows = tables.table("Values", ("quantity", "whole"), ("value", "whole"), "unit", "title")
     for name in names:
         rows.add_row(
-            name, shown_value(computed[name], errors.get(name)), tables.shown_unit(nodes[name].unit), nodes[name].title
+            name,
+            shown_value(computed[name], errors.get(name)),
+            tables.shown_unit(nodes[name].unit),
+            nodes[name].title,
         )
     output.show(rows)
     if errors:
@@ -138,7 +153,11 @@ def command(
 
 
 def write_run(
-    output: Output, content: dict[str, Any], source: str | None, assignments: tuple[str, ...], start_values: bool
+    output: Output,
+    content: dict[str, Any],
+    source: str | None,
+    assignments: tuple[str, ...],
+    start_values: bool,
 ) -> None:
     """Write a run folder with the values."""
     from fitcore.commands import run_folder
@@ -155,8 +174,12 @@ def known_nodes(names: tuple[str, ...], overlay: Hypothesis) -> dict[str, Any]:
 
     unknown = [name for name in names if name not in catalogue and name not in overlay.parameters]
     if unknown:
-        raise input_error("\n".join(_unknown(name, "quantity", catalogue.close_matches(name)) for name in unknown))
-    return {name: overlay.parameters[name] if name in overlay.parameters else catalogue[name] for name in names}
+        raise input_error(
+            "\n".join(_unknown(name, "quantity", catalogue.close_matches(name)) for name in unknown)
+        )
+    return {
+        name: overlay.parameters[name] if name in overlay.parameters else catalogue[name] for name in names
+    }
 
 
 def _unknown(name: str, what: str, close: tuple[str, ...]) -> str:
@@ -170,7 +193,7 @@ def read_assignments(assignments: tuple[str, ...], overlay: Hypothesis) -> dict[
     Raises
     ------
     InputError
-        All mistakes together: form, unknown name, a quantity, a missing or unfitting unit, a name given twice.
+        All mistakes together: form, unknown name, a quantity, a missing or unfitting unit, a repeated name.
     """
     from likelihoods import units
     from observables import catalogue
@@ -180,13 +203,19 @@ def read_assignments(assignments: tuple[str, ...], overlay: Hypothesis) -> dict[
     for text in assignments:
         match = ASSIGNMENT.fullmatch(text)
         if match is None:
-            mistakes.append(f"--at {text}: is not of the form name=value or name=value[unit], such as V=1.5GeV")
+            mistakes.append(
+                f"--at {text}: is not of the form name=value or name=value[unit], such as V=1.5GeV"
+            )
             continue
         name, value, unit = match["name"], float(match["number"]), match["unit"]
-        node: Any = overlay.parameters.get(name) or (catalogue[name] if name in catalogue else None)
+        node: Any = overlay.parameters.get(name)
+        if node is None and name in catalogue:
+            node = catalogue[name]
         if node is None:
             pool = [*catalogue.names("parameter"), *overlay.parameters, *catalogue.names("constant")]
-            mistakes.append(f"--at {text}: {_unknown(name, 'parameter', catalogue.close_matches(name, pool))}")
+            mistakes.append(
+                f"--at {text}: {_unknown(name, 'parameter', catalogue.close_matches(name, pool))}"
+            )
         elif node.kind == "quantity":
             mistakes.append(
                 f"--at {text}: {name} is a quantity, computed from others; set its parameters "
@@ -197,7 +226,9 @@ def read_assignments(assignments: tuple[str, ...], overlay: Hypothesis) -> dict[
         elif not math.isfinite(value):
             mistakes.append(f"--at {text}: the value is not finite")
         elif unit is None and node.unit != "1":
-            mistakes.append(f"--at {text}: the unit is missing; write --at {name}={match['number']}{node.unit}")
+            mistakes.append(
+                f"--at {text}: the unit is missing; write --at {name}={match['number']}{node.unit}"
+            )
         else:
             try:
                 values[name] = value * units.factor((unit or "1").strip("[] "), node.unit)
@@ -242,7 +273,9 @@ def gather(
         elif start_values:
             values[name], origins[name] = leaf.start, "start value"
         else:
-            missing.append(f"  {name}  (start value {leaf.start:g}{'' if leaf.unit == '1' else ' ' + leaf.unit})")
+            missing.append(
+                f"  {name}  (start value {leaf.start:g}{'' if leaf.unit == '1' else ' ' + leaf.unit})"
+            )
     if missing:
         remedy = "give --at NAME=VALUE for each, --from RUN-OR-INPUTS, or --start-values for the start values"
         raise input_error("\n".join(["parameters without a value:", *missing, remedy]))
@@ -267,7 +300,9 @@ def point_from(source: str, hypothesis: tuple[str, ...]) -> Point:
 
     result = Problem.load(source, hypothesis="+".join(hypothesis) or "standard").fit()
     if not result.valid:
-        message = f"the fit of {source}: {result.message or 'no reason recorded'}; look at it with `weakmix fit`"
+        message = (
+            f"the fit of {source}: {result.message or 'no reason recorded'}; look at it with `weakmix fit`"
+        )
         raise ConvergenceError(message, result)
     return point_of_fit(result, f"best fit of {result.inputs_name}")
 
@@ -286,14 +321,14 @@ def read_fit(folder: Path) -> FitResult:
     try:
         text = path.read_text(encoding="utf-8")
     except OSError as error:
-        message = f"{path}: cannot be read ({error.strerror}); --from takes a run folder of `weakmix fit`, or inputs"
+        message = f"{path}: cannot be read ({error.strerror}); {WHAT_FROM_TAKES}"
         raise input_error(message) from error
     from observables.errors import StoreError
 
     try:
         return FitResult.from_json(text)
     except StoreError as error:
-        message = f"{path}: {error}; --from takes a run folder of `weakmix fit`, or inputs"
+        message = f"{path}: {error}; {WHAT_FROM_TAKES}"
         raise input_error(message) from error
 
 

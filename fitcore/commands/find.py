@@ -50,7 +50,9 @@ SYNONYMS = {
 @click.command("find")
 @click.argument("words", nargs=-1, required=True)
 @click.option("--kind", type=click.Choice(KINDS), help="Show only this kind.")
-@click.option("--limit", type=click.IntRange(min=1), default=30, show_default=True, help="Show at most this many.")
+@click.option(
+    "--limit", type=click.IntRange(min=1), default=30, show_default=True, help="Show at most this many."
+)
 @reading_options
 @click.pass_context
 def command(ctx: click.Context, words: tuple[str, ...], kind: str | None, limit: int, output: Output) -> None:
@@ -70,7 +72,12 @@ def command(ctx: click.Context, words: tuple[str, ...], kind: str | None, limit:
     found = search(pool, words)
     output.headline("catalogue", f"{len(found)} of {len(pool)} match {' '.join(words)!r}")
     output.write_json(
-        {"found": [{"name": n.name, "kind": n.kind, "unit": n.unit, "title": n.title, "latex": n.latex} for n in found]}
+        {
+            "found": [
+                {"name": n.name, "kind": n.kind, "unit": n.unit, "title": n.title, "latex": n.latex}
+                for n in found
+            ]
+        }
     )
     if not found:
         close = catalogue.close_matches("_".join(words))

@@ -33,7 +33,10 @@ DEFAULT_DERIVED = (
 @click.command("fit")
 @problem_options
 @click.option(
-    "--derived", multiple=True, metavar="NAME", help="Derive this quantity too, with its interval; repeatable."
+    "--derived",
+    multiple=True,
+    metavar="NAME",
+    help="Derive this quantity too, with its interval; repeatable.",
 )
 @click.option("--no-figures", is_flag=True, help="Draw nothing (saves about a second).")
 @output_options
@@ -99,7 +102,9 @@ def fit_and_store(
     if output.json_on_stdout and output.out is None:
         return problem.fit(derived=names), None
     options = {**request.describe(), "derived": list(derived), "figures": figures}
-    with run_folder.writing(command, problem.inputs.name, out=output.out, options=options, seed=work.seed) as run:
+    with run_folder.writing(
+        command, problem.inputs.name, out=output.out, options=options, seed=work.seed
+    ) as run:
         result = problem.fit(derived=names)
         write_run(run, problem, result, figures=figures)
     return result, run.place

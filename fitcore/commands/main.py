@@ -79,9 +79,16 @@ def _print_version(ctx: click.Context, _parameter: click.Parameter, asked: bool)
         ctx.exit()
 
 
-@click.group(cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(
+    cls=LazyGroup, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100}
+)
 @click.option(
-    "--version", is_flag=True, is_eager=True, expose_value=False, callback=_print_version, help="Print the version."
+    "--version",
+    is_flag=True,
+    is_eager=True,
+    expose_value=False,
+    callback=_print_version,
+    help="Print the version.",
 )
 def cli() -> None:
     """Global fits of quark-mixing parameters.

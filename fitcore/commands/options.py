@@ -2,7 +2,8 @@
 
 Three decorators, to be put under `@click.command(...)`; each adds its options and passes *one* object:
 
-- `@problem_options`: INPUTS, --only, --without, --set, --hypothesis, --theory-errors -> `request: ProblemRequest`
+- `@problem_options`: INPUTS, --only, --without, --set, --hypothesis, --theory-errors
+  -> `request: ProblemRequest`
 - `@output_options`: --json, --out, --quiet -> `output: Output`
 - `@work_options`: --seed, --jobs -> `work: Work`
 """
@@ -98,7 +99,9 @@ def _chain(function: Command, decorators: list[Callable[[Any], Any]]) -> Command
     return function
 
 
-def _split_hypotheses(_ctx: click.Context, _parameter: click.Parameter, value: tuple[str, ...]) -> tuple[str, ...]:
+def _split_hypotheses(
+    _ctx: click.Context, _parameter: click.Parameter, value: tuple[str, ...]
+) -> tuple[str, ...]:
     names = tuple(part.strip() for item in value for part in item.split("+") if part.strip())
     return names or ("standard",)
 
@@ -158,7 +161,10 @@ out_option = click.option(
 
 def output_options(function: Command) -> Command:
     """Add --json, --out and --quiet; passes `output`."""
-    return _chain(_gathered("output", Output, ("json", "out", "quiet"))(function), [json_option, out_option, quiet_option])
+    return _chain(
+        _gathered("output", Output, ("json", "out", "quiet"))(function),
+        [json_option, out_option, quiet_option],
+    )
 
 
 def reading_options(function: Command) -> Command:
@@ -172,10 +178,18 @@ def work_options(function: Command) -> Command:
         _gathered("work", Work, ("seed", "jobs"))(function),
         [
             click.option(
-                "--seed", type=click.IntRange(min=0), default=0, show_default=True, help="Seed of all random numbers."
+                "--seed",
+                type=click.IntRange(min=0),
+                default=0,
+                show_default=True,
+                help="Seed of all random numbers.",
             ),
             click.option(
-                "--jobs", type=click.IntRange(min=1), default=1, show_default=True, help="Number of processes."
+                "--jobs",
+                type=click.IntRange(min=1),
+                default=1,
+                show_default=True,
+                help="Number of processes.",
             ),
         ],
     )

@@ -36,8 +36,8 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
     overlay = catalogue.get_hypothesis("+".join(hypothesis))
     node: Any = overlay.parameters[name] if name in overlay.parameters else catalogue[name]
     leaves = find_parameters(catalogue, (name,), overlay)
-    parameters = [leaf for leaf in leaves.values() if leaf.kind == "parameter"]
-    constants = [leaf for leaf in leaves.values() if leaf.kind == "constant"]
+    parameters: list[Any] = [leaf for leaf in leaves.values() if leaf.kind == "parameter"]
+    constants: list[Any] = [leaf for leaf in leaves.values() if leaf.kind == "constant"]
     sources = dict.fromkeys(_sources(node, overlay))
 
     output.headline("recipe", name, f"hypothesis {overlay.name}")
@@ -49,7 +49,10 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
         ("unit", "dimensionless" if node.unit == "1" else node.unit),
         ("symbol", node.latex),
         ("period", f"{number(node.period)} {node.unit}" if node.period else ""),
-        ("recalled", "formula quoted from memory: compare with the source" if getattr(node, "recalled", False) else ""),
+        (
+            "recalled",
+            "formula quoted from memory: compare with the source" if getattr(node, "recalled", False) else "",
+        ),
     ):
         if text:
             facts.add_row(label, text)
@@ -59,7 +62,15 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
     if node.kind == "quantity":
         output.show("[bold]Ingredients[/bold]", tree(name, overlay), "")
     if parameters:
-        made = tables.table("Parameters", ("name", "whole"), ("start", "right"), ("lower", "right"), ("upper", "right"), "unit", "")
+        made = tables.table(
+            "Parameters",
+            ("name", "whole"),
+            ("start", "right"),
+            ("lower", "right"),
+            ("upper", "right"),
+            "unit",
+            "",
+        )
         for leaf in parameters:
             remark = "held fixed unless the inputs measure or free it" if leaf.fixed else ""
             made.add_row(
@@ -93,7 +104,13 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
             "formulas": [{"of": title, "text": text} for title, text in formulas(node, overlay)],
             "ingredients": list(ingredients(name, overlay)),
             "parameters": {
-                p.name: {"start": p.start, "lower": p.lower, "upper": p.upper, "fixed": p.fixed, "unit": p.unit}
+                p.name: {
+                    "start": p.start,
+                    "lower": p.lower,
+                    "upper": p.upper,
+                    "fixed": p.fixed,
+                    "unit": p.unit,
+                }
                 for p in parameters
             },
             "constants": {c.name: {"value": c.value, "error": c.error, "unit": c.unit} for c in constants},
@@ -112,7 +129,11 @@ def _kind(node: Any) -> str:
     if node.kind != "quantity":
         return str(node.kind)
     parts = ["quantity", "complex" if node.is_complex else "real"]
-    parts.append({"even": "CP even", "odd": "CP odd", "conjugate": "CP conjugates it"}.get(node.cp, f"CP partner {node.cp}"))
+    parts.append(
+        {"even": "CP even", "odd": "CP odd", "conjugate": "CP conjugates it"}.get(
+            node.cp, f"CP partner {node.cp}"
+        )
+    )
     if not node.physical:
         parts.append("depends on the phase convention")
     return ", ".join(parts)
@@ -125,10 +146,11 @@ def formulas(node: Any, overlay: Any) -> list[tuple[str, str]]:
     """
     if node.kind != "quantity":
         return []
-    found = [("Formula" + _renamed(node.ingredients), _code(node.function))]
-    for layer in overlay.layers.get(node.name, ()):
-        found.append((f"Replaced by {layer.owner}{_renamed(layer.ingredients)}", _code(layer.function)))
-    return found
+    layers = [
+        (f"Replaced by {layer.owner}{_renamed(layer.ingredients)}", _code(layer.function))
+        for layer in overlay.layers.get(node.name, ())
+    ]
+    return [("Formula" + _renamed(node.ingredients), _code(node.function)), *layers]
 
 
 def _renamed(sources: Mapping[str, str]) -> str:

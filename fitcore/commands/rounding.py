@@ -45,11 +45,13 @@ def last_decimal(error: float, rule: Rule = "two-digits") -> int:
 
 
 def fixed(value: float, decimals: int) -> str:
-    """Write a number with a number of decimals, halves away from zero; negative ones round before the point."""
+    """Write a number with some decimals, halves away from zero; negative ones round before the point."""
     if not math.isfinite(value):
         return str(value)
     # through the shortest decimal text: 0.95 is meant, not the binary fraction just below it
-    rounded = Decimal(repr(float(value))).quantize(Decimal(1).scaleb(-decimals), ROUND_HALF_UP, _ENOUGH_DIGITS)
+    rounded = Decimal(repr(float(value))).quantize(
+        Decimal(1).scaleb(-decimals), ROUND_HALF_UP, _ENOUGH_DIGITS
+    )
     return f"{rounded or abs(rounded):.{max(decimals, 0)}f}"  # no "-0.0"
 
 
@@ -111,7 +113,8 @@ def interval(low: float | None, high: float | None, error: float | None = None) 
     power = math.floor(math.log10(max(abs(low), abs(high))))
     if power < -3 or (power > 5 and decimals < 0):
         factor = 10.0**-power
-        return f"[{fixed(low * factor, decimals + power)}, {fixed(high * factor, decimals + power)}]e{power:+03d}"
+        low, high = low * factor, high * factor
+        return f"[{fixed(low, decimals + power)}, {fixed(high, decimals + power)}]e{power:+03d}"
     return f"[{fixed(low, decimals)}, {fixed(high, decimals)}]"
 
 

@@ -94,7 +94,7 @@ def check_place(place: Path) -> None:
         return
     record = read_record(place)
     if record is None:
-        message = f"{place}: is not empty and not a weakmix run folder; nothing was touched; give --out another name"
+        message = f"{place}: is not a weakmix run folder, and not empty; nothing was touched; give --out another name"
         raise StoreError(message)
     foreign = [name for name in present if name != RECORD and name not in record.get("files", {})]
     if foreign:
@@ -229,6 +229,7 @@ def writing(
     created = datetime.now(UTC)
     place = Path(out) if out is not None else default_place(command, inputs_name, created)
     check_place(place)
+    new_parent = not place.parent.exists()
     try:
         place.parent.mkdir(parents=True, exist_ok=True)
         building = Path(tempfile.mkdtemp(prefix=f".{place.name}.", suffix=".partial", dir=place.parent))
@@ -253,6 +254,8 @@ def writing(
     finally:
         logger.removeHandler(handler)
         shutil.rmtree(building, ignore_errors=True)  # gone already if all went well
+        if new_parent and not any(place.parent.iterdir()):
+            place.parent.rmdir()
 
 
 def _umask() -> int:

@@ -34,19 +34,24 @@ def command(request: ProblemRequest, sources: bool, output: Output) -> None:
     made = tables.table(
         "",
         ("id", "whole"),
-        ("quantity", "whole"),
+        "quantity",
         ("value", "whole"),
-        "unit",
+        ("unit", "whole"),
         "groups",
-        "marks",
-        caption="T theory, R recalled, I inflated, F flat range, C in a correlated block, O overlaps with others",
+        ("marks", "whole"),
+        caption="T theory, R recalled, I inflated, F flat range, C in a correlated block, O overlaps others",
     )
     for entry in problem.entries:
         value = with_error(entry.value, entry.plus, entry.minus)
         if entry.flat_halfwidth:
             value += f" (flat {number(entry.flat_halfwidth, 2)})"
         made.add_row(
-            entry.id, entry.quantity, value, tables.shown_unit(entry.unit), " ".join(entry.groups), marks(entry)
+            entry.id,
+            entry.quantity,
+            value,
+            tables.shown_unit(entry.unit),
+            " ".join(entry.groups),
+            marks(entry),
         )
     output.show(made)
     if sources:
@@ -89,6 +94,17 @@ def as_data(entry: Any) -> dict[str, Any]:
     """Return an entry as plain data."""
     keys = (
         *("id", "quantity", "value", "plus", "minus", "unit", "kind", "groups", "overlaps", "errors"),
-        *("flat_halfwidth", "inflate", "recalled", "source", "pdg", "note", "part_of", "block", "file", "line"),
+        *(
+            "flat_halfwidth",
+            "inflate",
+            "recalled",
+            "source",
+            "pdg",
+            "note",
+            "part_of",
+            "block",
+            "file",
+            "line",
+        ),
     )
     return {key: getattr(entry, key) for key in keys}

@@ -19,10 +19,10 @@ if TYPE_CHECKING:
 NOTICE_ORDER = ("replaced", "dropped", "changed", "inflated", "shared", "recalled")
 
 CAUTION = (
-    "Intervals are those of chi-square differences of 1.000 (68.27 %) and 3.841 (95.0 %) for one quantity at a "
-    "time: they hold as far as such differences follow their large-sample distribution (Wilks' theorem), every error "
-    "is Gaussian as written, and correlations that the inputs do not state are absent. 'linear' intervals are "
-    "propagated from the covariance matrix, 'profile' ones are not."
+    "Intervals are those of chi-square differences of 1.000 (68.27 %) and 3.841 (95.0 %) for one quantity at "
+    "a time: they hold as far as such differences follow their large-sample distribution (Wilks' theorem), "
+    "every error is Gaussian as written, and correlations that the inputs do not state are absent. 'linear' "
+    "intervals are propagated from the covariance matrix, 'profile' ones are not."
 )
 
 
@@ -34,7 +34,8 @@ def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Tab
     title : str
         Heading.
     columns : str or (str, str)
-        Heads, each alone or with `"right"`, `"left"` or `"whole"` (left, and not broken where there is room).
+        Heads, each alone or with `"left"`, `"right"` or `"whole"` (left); the last two are not broken where
+        there is room.
     caption : str
         A line under the table.
     """
@@ -51,7 +52,7 @@ def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Tab
     for column in columns:
         head, side = (column, "left") if isinstance(column, str) else column
         justify: Literal["left", "right"] = "right" if side == "right" else "left"
-        made.add_column(head, justify=justify, overflow="fold", no_wrap=side == "whole")
+        made.add_column(head, justify=justify, overflow="fold", no_wrap=side != "left")
     return made
 
 
@@ -60,7 +61,9 @@ def shown_unit(unit: str) -> str:
     return "" if unit == "1" else unit
 
 
-def notices(found: Iterable[Any], fixed: Mapping[str, float], units: Mapping[str, str] | None = None) -> Table:
+def notices(
+    found: Iterable[Any], fixed: Mapping[str, float], units: Mapping[str, str] | None = None
+) -> Table:
     """List what a reader must know about the inputs: replaced, dropped, inflated, recalled, held fixed.
 
     Parameters
@@ -93,7 +96,8 @@ def notices(found: Iterable[Any], fixed: Mapping[str, float], units: Mapping[str
     if fixed:
         units = units or {}
         held = ", ".join(
-            f"{name} = {number(value)} {shown_unit(units.get(name, '1'))}".rstrip() for name, value in fixed.items()
+            f"{name} = {number(value)} {shown_unit(units.get(name, '1'))}".rstrip()
+            for name, value in fixed.items()
         )
         made.add_row("  held fixed", held)
     return made
@@ -107,10 +111,8 @@ def verdict(result: FitResult) -> list[Text]:
     else:
         reason = result.message or "no reason recorded"
         lines.append(Text(f"NOT CONVERGED: {reason}. ", style="bold red"))
-    lines[0].append(
-        f"chi-square {result.chi2:.2f} for {result.degrees_of_freedom} degrees of freedom, {p_value(result.p_value)}",
-        style="default",
-    )
+    freedom = f"{result.degrees_of_freedom} degrees of freedom"
+    lines[0].append(f"chi-square {result.chi2:.2f} for {freedom}, {p_value(result.p_value)}", style="default")
     if result.valid and result.message:
         lines.append(Text(result.message))
     lines.extend(Text(f"  flag: {flag}", style="yellow") for flag in result.flags)
@@ -133,7 +135,9 @@ def estimate(one: Estimate) -> str:
             return with_error(one.value, plus, minus)
     if one.error is not None:
         return with_error(one.value, one.error)
-    bounded = one.interval_68 is not None and any(end is not None and math.isfinite(end) for end in one.interval_68)
+    bounded = one.interval_68 is not None and any(
+        end is not None and math.isfinite(end) for end in one.interval_68
+    )
     return f"{number(one.value)} ({'open on one side' if bounded else 'unconstrained'})"
 
 
@@ -168,17 +172,15 @@ def measurements(rows: Sequence[MeasurementRow]) -> Table:
     made = table(
         "Measured against fitted",
         ("id", "whole"),
-        ("quantity", "whole"),
         ("measured", "whole"),
         ("fitted", "whole"),
-        "unit",
+        ("unit", "whole"),
         ("pull", "right"),
         caption="pull = (measured - fitted) / measured error",
     )
     for row in by_pull(rows):
         made.add_row(
             row.id,
-            row.quantity,
             with_error(row.measured, row.error_plus, row.error_minus),
             fitted_value(row),
             shown_unit(row.unit),
@@ -189,7 +191,9 @@ def measurements(rows: Sequence[MeasurementRow]) -> Table:
 
 def by_pull(rows: Sequence[MeasurementRow]) -> list[MeasurementRow]:
     """Sort measurements by the size of their pull, unknown pulls last."""
-    return sorted(rows, key=lambda row: -abs(row.pull) if row.pull is not None and math.isfinite(row.pull) else 1.0)
+    return sorted(
+        rows, key=lambda row: -abs(row.pull) if row.pull is not None and math.isfinite(row.pull) else 1.0
+    )
 
 
 def fitted_value(row: MeasurementRow) -> str:
@@ -214,7 +218,9 @@ def other_minima(result: FitResult) -> Table | None:
     if not result.other_minima:
         return None
     names = list(result.parameters)[:4]
-    made = table("Other minima", ("chi-square", "right"), ("above the best", "right"), *((n, "right") for n in names))
+    made = table(
+        "Other minima", ("chi-square", "right"), ("above the best", "right"), *((n, "right") for n in names)
+    )
     for minimum in result.other_minima:
         made.add_row(
             f"{minimum.chi2:.2f}",

@@ -1,8 +1,8 @@
 """Correlations between fitted parameters, as a triangle of signed bars.
 
-A bar grows from the left edge of its cell, filled, for a positive coefficient, and from the right edge, open, for a
-negative one; a full cell is 100 %. Length, side and filling say all; colour only helps. The other triangle has the
-numbers.
+A bar grows from the left edge of its cell, filled, for a positive coefficient, and from the right edge,
+open, for a negative one; a full cell is 100 %. Length, side and filling say all; colour only helps. The
+other triangle has the numbers.
 """
 
 from __future__ import annotations
@@ -28,7 +28,9 @@ def chosen(matrix: tuple[tuple[float, ...], ...], most: int = MOST) -> list[int]
     size = len(matrix)
     if size <= most:
         return list(range(size))
-    largest = [max((abs(matrix[i][j] or 0.0) for j in range(size) if j != i), default=0.0) for i in range(size)]
+    largest = [
+        max((abs(matrix[i][j] or 0.0) for j in range(size) if j != i), default=0.0) for i in range(size)
+    ]
     return sorted(sorted(range(size), key=lambda i: -largest[i])[:most])
 
 
@@ -67,13 +69,19 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
             y = row * CELL
             symbol = style.symbol(latex.get(names[i], ""), "")
             if row % 2 == 0:
-                axes.add_patch(Rectangle((-left + 0.16, y), left - 0.16 + side, CELL, color="#f3f5f8", lw=0, zorder=0))
+                axes.add_patch(
+                    Rectangle((-left + 0.16, y), left - 0.16 + side, CELL, color="#f3f5f8", lw=0, zorder=0)
+                )
             middle = y + CELL / 2
-            axes.text(-left + 0.24, middle, names[i], fontsize=7.5, ha="left", va="center", color=style.FAINT_INK)
+            axes.text(
+                -left + 0.24, middle, names[i], fontsize=7.5, ha="left", va="center", color=style.FAINT_INK
+            )
             if symbol:
                 axes.text(-0.1, middle, symbol, fontsize=9.5, ha="right", va="center")
             diagonal = row * CELL + CELL / 2
-            axes.text(diagonal, middle, symbol, fontsize=_diagonal_size(symbol), ha="center", va="center", zorder=4)
+            axes.text(
+                diagonal, middle, symbol, fontsize=_diagonal_size(symbol), ha="center", va="center", zorder=4
+            )
             for column, j in enumerate(shown):
                 value = matrix[i][j]
                 if column == row or value is None or value != value:
@@ -100,20 +108,27 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
                         zorder=3,
                     )
                 )
-        axes.text(-left + 0.16, -top + 0.3, "Correlations of the fit", fontsize=13, fontweight="bold", va="center")
+        axes.text(
+            -left + 0.16, -top + 0.3, "Correlations of the fit", fontsize=13, fontweight="bold", va="center"
+        )
         key = -top + 0.66
         x = -left + 0.16
         axes.add_patch(Rectangle((x, key - 0.06), 0.26, 0.12, facecolor=style.NAVY, lw=0))
         axes.text(x + 0.34, key, "positive, from the left", fontsize=7.5, va="center")
         axes.add_patch(
-            Rectangle((x + 1.75, key - 0.06), 0.26, 0.12, facecolor=style.PAPER, edgecolor=style.VERMILLION, lw=0.9)
+            Rectangle(
+                (x + 1.75, key - 0.06), 0.26, 0.12, facecolor=style.PAPER, edgecolor=style.VERMILLION, lw=0.9
+            )
         )
         axes.text(x + 2.09, key, "negative, from the right", fontsize=7.5, va="center")
         axes.text(x + 3.5, key, "full cell 100 %; numbers in %", fontsize=7.5, va="center")
         note = "" if n == len(names) else f"  -  the {n} most correlated of {len(names)} parameters"
         style.footer(figure, footer + note, left=0.16 / width, baseline=0.14 / height)
     rows = tuple(
-        (names[i], names[j], matrix[i][j]) for i in range(len(names)) for j in range(i) if matrix[i][j] is not None
+        (names[i], names[j], matrix[i][j])
+        for i in range(len(names))
+        for j in range(i)
+        if matrix[i][j] is not None
     )
     return style.Drawing(figure, ("parameter", "with", "correlation"), rows)
 

@@ -1,8 +1,8 @@
 """Measured against fitted: one row per measurement, each on its own scale.
 
 A dot with a line is the measured value with its error, a bar the fitted value with its own, and a thin link
-between them the distance. Rows are scaled so that one measured error is equally long in all of them: the link's length
-is the pull.
+between them the distance. Rows are scaled so that one measured error is equally long in all of them: the
+link's length is the pull.
 """
 
 from __future__ import annotations
@@ -124,7 +124,9 @@ class Rail:
 def _lane(axes: Axes, family: style.Family, y: float, height: float) -> None:
     from matplotlib.patches import Rectangle
 
-    axes.add_patch(Rectangle((0.16, y), WIDTH - 0.32, height, color=style.tint(family.colour, 0.09), lw=0, zorder=0))
+    axes.add_patch(
+        Rectangle((0.16, y), WIDTH - 0.32, height, color=style.tint(family.colour, 0.09), lw=0, zorder=0)
+    )
     axes.add_patch(Rectangle((0.16, y), 0.055, height, color=family.colour, lw=0, zorder=1))
     axes.text(
         WIDTH - 0.24,
@@ -160,7 +162,9 @@ def _row(axes: Axes, rail: Rail, family: style.Family, row: MeasurementRow, y: f
     for tick in ticks(centre - rail.half / per_unit, centre + rail.half / per_unit):
         x = place(tick)
         axes.plot([x, x], [y + 0.07, y + 0.1], color=style.FAINT_INK, lw=0.6, zorder=1)
-        axes.text(x, y + 0.108, f"{tick:.6g}", fontsize=4.8, color=style.FAINT_INK, ha="center", va="top", zorder=1)
+        axes.text(
+            x, y + 0.108, f"{tick:.6g}", fontsize=4.8, color=style.FAINT_INK, ha="center", va="top", zorder=1
+        )
     measured, fitted = place(row.measured), place(row.fitted)
     axes.plot([measured, fitted], [y, y], color=family.colour, lw=1.0, zorder=2)
     half = (row.fitted_error or 0.0) * per_unit
@@ -210,7 +214,9 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
     from matplotlib.lines import Line2D
     from matplotlib.patches import Rectangle
 
-    figure.text(0.16 / WIDTH, 1 - 0.3 / height, "Measured against fitted", fontsize=13, fontweight="bold", va="center")
+    figure.text(
+        0.16 / WIDTH, 1 - 0.3 / height, "Measured against fitted", fontsize=13, fontweight="bold", va="center"
+    )
     p = "" if result.p_value is None else f", p = {result.p_value:.2g}"
     broken = "" if result.valid else "  -  NOT CONVERGED"
     figure.text(
@@ -229,7 +235,9 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
 
     figure.add_artist(Line2D([sample(3.2), sample(3.5)], [y, y], color=style.FAINT_INK, lw=1.8))
     figure.add_artist(
-        Line2D([sample(3.35)], [y], marker="o", ms=5.4, mfc=style.FAINT_INK, mec=style.PAPER, mew=0.9, ls="none")
+        Line2D(
+            [sample(3.35)], [y], marker="o", ms=5.4, mfc=style.FAINT_INK, mec=style.PAPER, mew=0.9, ls="none"
+        )
     )
     figure.text(sample(3.58), y, "measured, with its error", fontsize=7.5, va="center")
     figure.add_artist(

@@ -1,7 +1,7 @@
 """The look of all figures, and how a figure is written.
 
-Colours are the Okabe-Ito set (M. Okabe, K. Ito, "Color Universal Design", 2008), which colour-blind readers tell
-apart; nothing is said by colour alone.
+Colours are the Okabe-Ito set (M. Okabe, K. Ito, "Color Universal Design", 2008), which colour-blind readers
+tell apart; nothing is said by colour alone.
 """
 
 from __future__ import annotations
@@ -34,7 +34,7 @@ PAPER = "#ffffff"
 
 DOTS_PER_INCH = 200
 
-SETTINGS: dict[str, Any] = {
+SETTINGS: Any = {
     "font.family": "DejaVu Sans",
     "font.size": 9.0,
     "mathtext.fontset": "dejavusans",

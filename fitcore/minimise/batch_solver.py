@@ -423,7 +423,7 @@ class _Run:
         with np.errstate(invalid="ignore", over="ignore"):
             gain = rows.chi2 - chi2 + (rows.price * (np.abs(rows.violation) - np.abs(violation))).sum(axis=0)
             ratio = gain / rows.predicted
-        good = possible & (fresh | (ratio > 1e-4))
+        good = possible & (fresh | ((ratio > 1e-4) & (rows.predicted > 0.0)))
         self._control(rows, good & ~fresh, good, ratio)
 
         alive = good | ~fresh

@@ -3,7 +3,9 @@
 Every member of the batch minimises  h.s + s.(A + damping).s / 2  over  low <= s <= high  and, where asked,
 a_k.s = c_k. Bounds are found by a primal-dual active set (Bergounioux, Ito, Kunisch, SIAM J. Control Optim. 37,
 1176 (1999)): solve with the active components pinned to their bounds, pin what sticks out, release what pulls
-inwards, repeat. Clipping a free step instead is wrong as soon as the parameters are correlated.
+inwards, repeat; rows that go round in circles exchange one component at a time, which must end (Kostreva, Math.
+Program. 13, 1 (1977); Judice and Pires, Comput. Oper. Res. 21, 587 (1994)). Clipping a free step instead is wrong as
+soon as the parameters are correlated.
 """
 
 from __future__ import annotations
@@ -14,8 +16,9 @@ import numpy as np
 
 from fitcore.minimise.sparse_cholesky import FROZEN, Pattern, analyse
 
-ACTIVE_SET_ROUNDS = 12
-"""Rounds in which components may be released again; later ones only pin, which must end."""
+ACTIVE_SET_ROUNDS = 80
+PATIENCE = 3
+"""Rounds without fewer wrong components before they are exchanged one at a time (last index first)."""
 
 
 @dataclass
@@ -78,7 +81,7 @@ class QuadraticStep:
     active : ndarray of int8, shape (n, B)
         +1 at the upper bound, -1 at the lower one, 0 free.
     singular, settled : ndarray of bool, shape (B,)
-        A pivot was lost; the active set came to rest.
+        A pivot was lost; the active set came to rest (else the step is only clipped into the box).
     """
 
     step: np.ndarray
@@ -109,21 +112,43 @@ def solve_step(problem: QuadraticBatch, active: np.ndarray | None = None) -> Qua
     active = np.zeros(held.shape, dtype=np.int8) if active is None else active.copy()
     active[held] = 0
     result = _solve_pinned(problem, held, active)
-    wanted = _next_active(problem, result, held, release=True)
-    todo = np.flatnonzero((wanted != active).any(axis=0))
+    wanted = _next_active(problem, result, held)
+    wrong = (wanted != active).sum(axis=0)
+    todo = np.flatnonzero(wrong)
     result.settled[todo] = False
-    for round_number in range(1, ACTIVE_SET_ROUNDS + held.shape[0] + 1):
+    fewest, patience = wrong[todo], np.full(todo.size, PATIENCE)
+    for _ in range(ACTIVE_SET_ROUNDS):
         if not todo.size:
             break
         part, part_held = problem.rows(todo), held[:, todo]
         solved = _solve_pinned(part, part_held, wanted[:, todo])
         result.put(todo, solved)
-        new = _next_active(part, solved, part_held, release=round_number < ACTIVE_SET_ROUNDS)
-        changed = (new != solved.active).any(axis=0)
-        result.settled[todo] = ~changed
+        new = _next_active(part, solved, part_held)
+        wrong = (new != solved.active).sum(axis=0)
+        patience = np.where(wrong < fewest, PATIENCE, patience - 1)
+        fewest = np.minimum(wrong, fewest)
+        _one_at_a_time(new, solved.active, np.flatnonzero((patience < 0) & (wrong > 1)))
         wanted[:, todo] = new
-        todo = todo[changed]
+        on = wrong > 0
+        result.settled[todo] = ~on
+        todo, fewest, patience = todo[on], fewest[on], patience[on]
+    if todo.size:
+        # a feasible step at least; if it is a bad one, the caller damps and tries again
+        part = problem.rows(todo)
+        step = np.clip(result.step[:, todo], part.low, part.high)
+        product = part.pattern.product(part.values, step)
+        result.step[:, todo], result.curvature_times_step[:, todo] = step, product
+        result.decrease[todo] = -(step * (2.0 * part.half_gradient + product)).sum(axis=0)
     return result
+
+
+def _one_at_a_time(new: np.ndarray, old: np.ndarray, rows: np.ndarray) -> None:
+    """Exchange only the last wrong component of rows that went round in circles."""
+    changed = new[:, rows] != old[:, rows]
+    last = len(new) - 1 - np.argmax(changed[::-1], axis=0)
+    single = old[:, rows]
+    single[last, np.arange(rows.size)] = new[last, rows]
+    new[:, rows] = single
 
 
 def _solve_pinned(problem: QuadraticBatch, held: np.ndarray, active: np.ndarray) -> QuadraticStep:
@@ -172,16 +197,17 @@ def _constrain(
     return multipliers, np.sqrt(np.maximum(schur[rows == cols], 0.0))
 
 
-def _next_active(problem: QuadraticBatch, solved: QuadraticStep, held: np.ndarray, *, release: bool) -> np.ndarray:
+def _next_active(problem: QuadraticBatch, solved: QuadraticStep, held: np.ndarray) -> np.ndarray:
     """Pin what left the box; release what the model pulls back inside."""
     active = solved.active.copy()
     free = (active == 0) & ~held
     active[free & (solved.step > problem.high)] = 1
     active[free & (solved.step < problem.low)] = -1
-    if release and solved.active.any():
+    if solved.active.any():
         pull = problem.half_gradient + solved.curvature_times_step + problem.damping * solved.step
         if problem.constraint_gradient is not None:
             pull = pull + (problem.constraint_gradient * solved.multipliers[:, None, :]).sum(axis=0)
-        active[(solved.active > 0) & (pull > 0.0)] = 0
-        active[(solved.active < 0) & (pull < 0.0)] = 0
+        noise = 1e-12 * (np.abs(problem.half_gradient) + np.abs(solved.curvature_times_step))
+        active[(solved.active > 0) & (pull > noise)] = 0
+        active[(solved.active < 0) & (pull < -noise)] = 0
     return active

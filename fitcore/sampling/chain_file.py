@@ -38,6 +38,7 @@ __all__ = ["Block", "ChainFile"]
 _COMMIT_SECONDS = 30.0
 _RESERVE_MARGIN = 1 << 20
 _READ_ATTEMPTS = 4
+_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 @dataclass(frozen=True)
@@ -671,6 +672,10 @@ def _open_checked(path: Path, mode: Literal["r", "r+"]) -> tuple[Any, ChainHeade
     if not path.exists():
         raise StoreError(f"{path}: does not exist")
     with store_errors(path, "open the file (damaged, truncated, or not HDF5)"):
+        # The library itself takes an empty file for an HDF5 file without content.
+        with path.open("rb") as stream:
+            if stream.read(len(_SIGNATURE)) != _SIGNATURE:
+                raise OSError("the HDF5 signature is missing")
         file = h5py.File(path, mode, locking=False)
     try:
         with store_errors(path, "read the header (the file is damaged)"):

@@ -21,11 +21,14 @@ class Density1D:
         Points and density (integrates to one).
     bandwidth : float
         Standard deviation of the smoothing kernel.
+    effective : float
+        Effective number of draws behind it.
     """
 
     grid: np.ndarray
     density: np.ndarray
     bandwidth: float
+    effective: float = np.inf
 
 
 @dataclass(frozen=True)
@@ -92,12 +95,13 @@ def density_1d(
     mass = np.histogram(draws, edges)[0] / len(draws)
     # The cosine transform reflects at both ends.
     transform = dct(mass)
-    time = _diffusion_time(transform, len(draws) if effective is None else effective)
+    count = float(len(draws) if effective is None else effective)
+    time = _diffusion_time(transform, count)
     k = np.arange(grid)
     smooth = idct(transform * np.exp(-0.5 * k**2 * np.pi**2 * time))
     density = np.maximum(smooth, 0.0) * grid / (high - low)
     density /= density.sum() * (high - low) / grid
-    return Density1D(0.5 * (edges[1:] + edges[:-1]), density, float(np.sqrt(time) * (high - low)))
+    return Density1D(0.5 * (edges[1:] + edges[:-1]), density, float(np.sqrt(time) * (high - low)), count)
 
 
 def _diffusion_time(transform: np.ndarray, count: float) -> float:
@@ -142,6 +146,11 @@ def highest_density(density: Density1D, cl: float) -> tuple[tuple[float, float],
     -------
     tuple of (low, high)
         In ascending order; more than one when the region is disconnected.
+
+    Notes
+    -----
+    A dip that is no deeper than three times the density's own sampling error does not divide a region: on
+    a plateau the answer would otherwise be a list of noise.
     """
     grid, height = density.grid, density.density
     step = grid[1] - grid[0]
@@ -151,6 +160,17 @@ def highest_density(density: Density1D, cl: float) -> tuple[tuple[float, float],
     inside = height >= level
     change = np.diff(inside.astype(np.int8), prepend=0, append=0)
     starts, ends = np.flatnonzero(change == 1), np.flatnonzero(change == -1) - 1
+    # Variance of a Gaussian kernel estimate: f / (2 sqrt(pi) n h).
+    noise = np.sqrt(level / (2.0 * np.sqrt(np.pi) * density.effective * density.bandwidth))
+    real = [
+        i
+        for i in range(len(starts) - 1)
+        if height[ends[i] + 1 : starts[i + 1]].min() < level - 3.0 * noise
+    ]
+    if len(starts) > 1 and not real:
+        return (_shortest(density, cl),)
+    starts = starts[[0, *(i + 1 for i in real)]]
+    ends = ends[[*real, len(ends) - 1]]
     regions = []
     for start, end in zip(starts, ends, strict=True):
         low = grid[start] - 0.5 * step
@@ -167,6 +187,17 @@ def _crossing(grid: np.ndarray, height: np.ndarray, a: int, b: int, level: float
     if height[a] == height[b]:
         return float(0.5 * (grid[a] + grid[b]))
     return float(grid[a] + (grid[b] - grid[a]) * (level - height[a]) / (height[b] - height[a]))
+
+
+def _shortest(density: Density1D, cl: float) -> tuple[float, float]:
+    """Shortest single interval of a density that holds the share ``cl``."""
+    step = density.grid[1] - density.grid[0]
+    edges = np.append(density.grid - 0.5 * step, density.grid[-1] + 0.5 * step)
+    share = np.concatenate([[0.0], np.cumsum(density.density)])
+    share /= share[-1]
+    ends = np.interp(share + cl, share, edges, right=np.nan)
+    best = int(np.nanargmin(ends - edges))
+    return float(edges[best]), float(ends[best])
 
 
 def shortest_interval(draws: np.ndarray, cl: float) -> tuple[float, float]:

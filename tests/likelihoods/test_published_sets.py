@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import re
 import tomllib
 from pathlib import Path
@@ -116,14 +117,31 @@ def test_no_identifier_is_used_twice(inputs):
     assert len(identifiers) == len(set(identifiers))
 
 
-def test_each_set_has_title_revision_and_changelog_line():
+def numbers_of(inputs):
+    """Fingerprint of everything that a fit of the set depends on."""
+    rows = [
+        " ".join([e.id, e.quantity, *(f"{x:.10g}" for x in (e.value, e.plus, e.minus, e.flat_halfwidth))])
+        for e in inputs.entries
+    ]
+    rows += [f"{block.id} {block.ids} {block.correlation}" for block in inputs.blocks]
+    rows += [f"{link.between} {link.coefficient}" for link in inputs.correlations]
+    return hashlib.sha256("\n".join(rows).encode()).hexdigest()[:12]
+
+
+@pytest.mark.parametrize("name", SETS)
+def test_no_number_changes_without_revision_and_changelog_line(name):
+    content = tomllib.loads((FOLDER / f"{name}.toml").read_text(encoding="utf-8"))
+    assert content["title"]
     changes = (FOLDER / "CHANGELOG.md").read_text(encoding="utf-8")
-    readme = (FOLDER / "README.md").read_text(encoding="utf-8")
-    for name in SETS:
-        content = tomllib.loads((FOLDER / f"{name}.toml").read_text(encoding="utf-8"))
-        assert content["title"]
-        assert f"`{name}` revision {content['revision']}:" in changes
-        assert f"`{name}`" in readme
+    newest = re.search(rf"^- `{re.escape(name)}` revision (\d+): .*\(numbers ([0-9a-f]+)\)", changes, re.M)
+    assert newest is not None, "no line in CHANGELOG.md"
+    now = (str(content["revision"]), numbers_of(load_inputs(name)))
+    assert newest.groups() == now, f"new numbers {now[1]}: raise `revision` and add a line to CHANGELOG.md"
+
+
+@pytest.mark.parametrize("name", SETS)
+def test_readme_lists_the_set(name):
+    assert f"`{name}`" in (FOLDER / "README.md").read_text(encoding="utf-8")
 
 
 def test_review_level_set_holds_exactly_the_published_inputs():

@@ -225,8 +225,8 @@ def test_beta_function_coefficients():
 
 
 def test_coupling_from_the_tau_mass_to_the_z_mass():
-    # Source: M. Davier et al., Eur. Phys. J. C 74, 2803 (arXiv:1312.1501), from memory: alpha_s(m_tau) = 0.332
-    # becomes 0.1199 at the Z mass with four-loop running, three-loop matching and 0.0005 from the evolution
+    # Source: M. Davier et al., Eur. Phys. J. C 74, 2803 (arXiv:1312.1501), from memory: 0.332 at the tau mass
+    # becomes 0.1199 at the Z mass (four-loop running, three-loop matching), 0.0005 from the evolution
     three = strong_coupling(1.2729, 0.332, 1.77682, n_flavours=3)
     four = strong_coupling(4.186, coupling_above_threshold(three, 3), 1.2729, n_flavours=4)
     five = strong_coupling(91.1876, coupling_above_threshold(four, 4), 4.186, n_flavours=5)
@@ -343,8 +343,8 @@ def test_expanded_formula_of_epsilon(fit):
 
 
 def test_constant_of_epsilon():
-    # Source: A. Buras, D. Guadagnoli, Phys. Rev. D 78, 033005 (arXiv:0805.3887), from memory: C = 3.655e4 with
-    # F_K = 156.1 MeV, M_W = 80.403(29) GeV, mass difference 3.483e-15 GeV of their year. C goes as (F_K M_W)^2.
+    # Source: A. Buras, D. Guadagnoli, Phys. Rev. D 78, 033005 (arXiv:0805.3887), from memory: 3.655e4
+    # with F_K = 156.1 MeV, M_W = 80.403(29) GeV, mass difference 3.483e-15 GeV. C goes as (F_K M_W)^2.
     leaf = {n: catalogue[n].value for n in catalogue.names("constant")}
     constant = (leaf["fermi_constant"] * 0.1561 * 80.403) ** 2 * leaf["mass_K0"]
     constant /= 6 * math.sqrt(2) * math.pi**2 * 3.483e-15

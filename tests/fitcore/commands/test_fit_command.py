@@ -37,7 +37,11 @@ def test_template_fits_and_writes_a_run_folder(weakmix: Run, template: Path, tmp
     assert record["seed"] == 5
     assert record["options"]["derived"] == ["sine_theta13"]
     names = {path.name for path in place.iterdir()}
-    figures = {f"{name}.{end}" for name in ("measured-against-fitted", "correlation") for end in ("pdf", "png", "csv")}
+    figures = {
+        f"{name}.{end}"
+        for name in ("measured-against-fitted", "correlation")
+        for end in ("pdf", "png", "csv")
+    }
     assert names == {"result.json", "inputs.toml", "run.json", "log.jsonl", *figures}
     for name, digest in record["files"].items():
         assert hashlib.sha256((place / name).read_bytes()).hexdigest() == digest
@@ -53,7 +57,16 @@ def test_json_on_stdout_is_alone_and_writes_no_folder(weakmix: Run, template: Pa
     done = weakmix("fit", template, "--json", "-")
     content = json.loads(done.stdout)
     assert set(content) >= {
-        *("chi2", "degrees_of_freedom", "p_value", "converged", "hypothesis", "inputs", "parameters", "derived"),
+        *(
+            "chi2",
+            "degrees_of_freedom",
+            "p_value",
+            "converged",
+            "hypothesis",
+            "inputs",
+            "parameters",
+            "derived",
+        ),
         *("measurements", "correlation", "other_minima"),
     }
     assert content["converged"] is True
@@ -68,7 +81,9 @@ def test_json_on_stdout_is_alone_and_writes_no_folder(weakmix: Run, template: Pa
 def test_out_names_the_folder_and_json_the_file(weakmix: Run, template: Path, tmp_path: Path) -> None:
     done = weakmix("fit", template, "--out", "mine", "--json", "mine.json", "--no-figures", "--quiet")
     assert (done.exit_code, done.stdout, done.stderr) == (0, "", "")
-    assert json.loads((tmp_path / "mine.json").read_text()) == json.loads((tmp_path / "mine" / "result.json").read_text())
+    assert json.loads((tmp_path / "mine.json").read_text()) == json.loads(
+        (tmp_path / "mine" / "result.json").read_text()
+    )
     assert not list((tmp_path / "mine").glob("*.png"))
     assert weakmix("fit", template, "--out", "mine", "--no-figures", "--json", "-").exit_code == 0  # replaced
     (tmp_path / "other").mkdir()
@@ -92,7 +107,9 @@ def test_selections_change_the_fit(weakmix: Run, template: Path) -> None:
 def test_a_fit_that_is_not_valid_exits_1_and_says_why(
     weakmix: Run, template: Path, tmp_path: Path, result: FitResult, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    broken = replace(result, valid=False, message="the two minimisers disagree", flags=("minimisers-disagree",))
+    broken = replace(
+        result, valid=False, message="the two minimisers disagree", flags=("minimisers-disagree",)
+    )
     monkeypatch.setattr(Problem, "fit", lambda *_arguments, **_options: broken)
     done = weakmix("fit", template, "--json", "-")
     assert done.exit_code == 1
@@ -105,9 +122,12 @@ def test_a_fit_that_is_not_valid_exits_1_and_says_why(
 
 
 @pytest.mark.parametrize(
-    ("name", "words"), [("jarlskgo", "jarlskog"), ("V_ub", "complex"), ("mixing_frequency_Bd", "mixing_matrix_element_Bs")]
+    ("name", "words"),
+    [("jarlskgo", "jarlskog"), ("V_ub", "complex"), ("mixing_frequency_Bd", "mixing_matrix_element_Bs")],
 )
-def test_derived_quantities_that_cannot_be(weakmix: Run, template: Path, tmp_path: Path, name: str, words: str) -> None:
+def test_derived_quantities_that_cannot_be(
+    weakmix: Run, template: Path, tmp_path: Path, name: str, words: str
+) -> None:
     done = weakmix("fit", template, "--derived", name)
     assert done.exit_code == 2
     assert words in done.stderr
@@ -134,7 +154,9 @@ def test_compute_from_run_and_from_inputs(weakmix: Run, template: Path) -> None:
     _, gradient = problem.linearise_quantities(point, ("angle_alpha", "jarlskog", "wolfenstein_A"))
     covariance = np.array(stored.covariance_matrix)
     exact = np.sqrt(np.einsum("qi,ij,qj->q", gradient, covariance, gradient))
-    assert [from_run["errors"][n] for n in ("angle_alpha", "jarlskog", "wolfenstein_A")] == pytest.approx(exact, rel=1e-5)
+    assert [from_run["errors"][n] for n in ("angle_alpha", "jarlskog", "wolfenstein_A")] == pytest.approx(
+        exact, rel=1e-5
+    )
 
 
 def test_compute_from_run_moved_by_hand_has_no_intervals(weakmix: Run, template: Path) -> None:

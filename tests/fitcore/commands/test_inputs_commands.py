@@ -17,7 +17,14 @@ def test_show_lists_entries_groups_and_notices(weakmix: Run, template: Path) -> 
     assert done.exit_code == 0, done.stderr
     assert done.stdout.startswith("weakmix ")
     assert "quark mixing" in done.stdout.splitlines()[0]
-    for words in ("element-us", "57.0 +3.1 -2.8", "inflated", "shared", "Groups: cp-asymmetry, loop", "Free parameters (4)"):
+    for words in (
+        "element-us",
+        "57.0 +3.1 -2.8",
+        "inflated",
+        "shared",
+        "Groups: cp-asymmetry, loop",
+        "Free parameters (4)",
+    ):
         assert words in done.stdout
 
 
@@ -33,7 +40,10 @@ def test_show_json_carries_the_converted_values(weakmix: Run, template: Path) ->
 
 def test_show_selects_and_sets(weakmix: Run, template: Path) -> None:
     def ids(*options: str) -> list[str]:
-        return [entry["id"] for entry in json.loads(weakmix("show", template, *options, "--json", "-").stdout)["entries"]]
+        return [
+            entry["id"]
+            for entry in json.loads(weakmix("show", template, *options, "--json", "-").stdout)["entries"]
+        ]
 
     assert ids("--only", "loop", "--only", "gamma") == ["gamma", "beta"]
     assert ids("--without", "tree") == ["beta"]
@@ -62,14 +72,17 @@ def test_wrong_selections_exit_2(weakmix: Run, template: Path, options: tuple[st
         assert "Traceback" not in done.stderr
 
 
+ENTRY = 'title = "x"\n[[measurement]]\nid = "a"\nvalue = 1\nsource = "s"\n'
+
+
 @pytest.mark.parametrize(
     ("text", "words"),
     [
         ("", "empty"),
         ("title = ", "1"),
-        ('title = "x"\n[[measurement]]\nid = "a"\nquantity = "jarlskgo"\nvalue = 1\nerror = 1\nunit = "1"\nsource = "s"\n', "jarlskog"),
-        ('title = "x"\n[[measurement]]\nid = "a"\nquantity = "jarlskog"\nvalue = 1\nerror = 1\nsource = "s"\n', "unit"),
-        ('title = "x"\n[[measurement]]\nid = "a"\nquantity = "jarlskog"\nvalue = 1\nerror = -1\nunit = "1"\nsource = "s"\n', "error"),
+        (ENTRY + 'quantity = "jarlskgo"\nerror = 1\nunit = "1"\n', "jarlskog"),
+        (ENTRY + 'quantity = "jarlskog"\nerror = 1\n', "unit"),
+        (ENTRY + 'quantity = "jarlskog"\nerror = -1\nunit = "1"\n', "error"),
     ],
 )
 def test_mistakes_in_a_file_name_file_and_entry(weakmix: Run, tmp_path: Path, text: str, words: str) -> None:

@@ -48,7 +48,10 @@ def test_find_every_name_finds_itself_first() -> None:
 
 
 def test_find_kind_and_limit(weakmix: Run) -> None:
-    kinds = {found["kind"] for found in json.loads(weakmix("find", "mass", "--kind", "constant", "--json", "-").stdout)["found"]}
+    kinds = {
+        found["kind"]
+        for found in json.loads(weakmix("find", "mass", "--kind", "constant", "--json", "-").stdout)["found"]
+    }
     assert kinds == {"constant"}
     assert "more: add a word" in weakmix("find", "V", "--limit", "1").stdout
 
@@ -97,7 +100,10 @@ def test_recipe_under_a_hypothesis(weakmix: Run, monkeypatch: pytest.MonkeyPatch
     def replaced(standard: float, added: float) -> Real:
         return standard * (1 + added)
 
-    assert recipe.ingredients("mixing_frequency_Bd", invented) == (*catalogue.ingredients("mixing_frequency_Bd"), "added")
+    assert recipe.ingredients("mixing_frequency_Bd", invented) == (
+        *catalogue.ingredients("mixing_frequency_Bd"),
+        "added",
+    )
     titles = [title for title, _ in recipe.formulas(catalogue["mixing_frequency_Bd"], invented)]
     assert titles == ["Formula", "Replaced by invented"]
 
@@ -114,9 +120,20 @@ def test_unknown_names_get_proposals(weakmix: Run) -> None:
 
 @pytest.mark.parametrize(("rhobar", "etabar"), [(0.2, 0.3), (-0.3, 0.2), (0.1, -0.4), (-0.25, -0.15)])
 def test_compute_at_any_point(weakmix: Run, rhobar: float, etabar: float) -> None:
-    """The exact definition of the apex: rhobar + i etabar = -V_ud V_ub* / (V_cd V_cb*) (Buras, Lautenbacher, Ostermaier)."""
+    """The apex is -V_ud V_ub* / (V_cd V_cb*) (A. Buras, M. Lautenbacher, G. Ostermaier, PRD 50, 3433)."""
     done = weakmix(
-        *("compute", "angle_gamma", "side_Rb", "V_ud", "V_ub", "V_cd", "V_cb", "--start-values", "--json", "-"),
+        *(
+            "compute",
+            "angle_gamma",
+            "side_Rb",
+            "V_ud",
+            "V_ub",
+            "V_cd",
+            "V_cb",
+            "--start-values",
+            "--json",
+            "-",
+        ),
         *("--at", f"wolfenstein_rhobar={rhobar}", "--at", f"wolfenstein_etabar={etabar}"),
     )
     assert done.exit_code == 0, done.stderr
@@ -135,11 +152,16 @@ def test_compute_at_any_point(weakmix: Run, rhobar: float, etabar: float) -> Non
 
 
 def test_compute_says_what_it_used(weakmix: Run) -> None:
-    shown = weakmix("compute", "jarlskog", "--start-values", "--at", "wolfenstein_A=0.8", "--at", "bag_K=0.7").stdout
+    shown = weakmix(
+        "compute", "jarlskog", "--start-values", "--at", "wolfenstein_A=0.8", "--at", "bag_K=0.7"
+    ).stdout
     assert "start value" in shown
     assert "--at" in shown
     assert "Not used: nothing asked for rests on bag_K." in shown
-    assert "outside its physical bounds" in weakmix("compute", "jarlskog", "--start-values", "--at", "wolfenstein_lambda=-0.2").stdout
+    assert (
+        "outside its physical bounds"
+        in weakmix("compute", "jarlskog", "--start-values", "--at", "wolfenstein_lambda=-0.2").stdout
+    )
 
 
 def test_compute_lists_what_is_missing(weakmix: Run) -> None:
@@ -153,7 +175,15 @@ def test_compute_lists_what_is_missing(weakmix: Run) -> None:
 def test_compute_converts_units(weakmix: Run) -> None:
     values = [
         json.loads(
-            weakmix("compute", "mixing_frequency_Bs", "--start-values", "--at", f"mixing_matrix_element_Bs={text}", "--json", "-").stdout
+            weakmix(
+                "compute",
+                "mixing_frequency_Bs",
+                "--start-values",
+                "--at",
+                f"mixing_matrix_element_Bs={text}",
+                "--json",
+                "-",
+            ).stdout
         )["values"]["mixing_frequency_Bs"]
         for text in ("0.25GeV", "250 MeV", "2.5e8eV", "250[MeV]")
     ]
@@ -182,7 +212,19 @@ def test_compute_refuses_bad_assignments(weakmix: Run, assignment: str, words: s
 
 
 def test_compute_reports_all_mistakes_together(weakmix: Run) -> None:
-    done = weakmix("compute", "jarlskog", "--start-values", "--at", "foo", "--at", "bar=1", "--at", "bag_K=1", "--at", "bag_K=2")
+    done = weakmix(
+        "compute",
+        "jarlskog",
+        "--start-values",
+        "--at",
+        "foo",
+        "--at",
+        "bar=1",
+        "--at",
+        "bag_K=1",
+        "--at",
+        "bag_K=2",
+    )
     assert done.stderr.count("--at ") == 3
 
 

@@ -43,12 +43,13 @@ def test_folder_is_whole_with_its_record(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("error", [RuntimeError, KeyboardInterrupt, OSError])
 def test_nothing_is_left_when_the_work_fails(tmp_path: Path, error: type[BaseException]) -> None:
-    with (
-        pytest.raises(StoreError if error is OSError else error),
-        run_folder.writing("fit", "x", out=tmp_path / "run", options={}) as run,
-    ):
-        run.write_text("half.txt", "half")
-        raise error
+    def work() -> None:
+        with run_folder.writing("fit", "x", out=tmp_path / "new" / "run", options={}) as run:
+            run.write_text("half.txt", "half")
+            raise error
+
+    with pytest.raises(StoreError if error is OSError else error):
+        work()
     assert list(tmp_path.iterdir()) == []
 
 

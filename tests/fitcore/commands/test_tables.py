@@ -37,11 +37,11 @@ Derived
 
 MEASUREMENTS = """\
 Measured against fitted
- id           quantity         measured             fitted        unit    pull
- ─────────────────────────────────────────────────────────────────────────────
- element-ud   magnitude_V_ud   0.97367 +- 0.00032   0.97432              -2.03
- gamma        angle_gamma      66.4 +2.7 -2.8       65.6 +- 1.6   deg    +0.28
- bag-K        bag_K            0.7533 +- 0.0091     0.7545               -0.13
+ id           measured             fitted        unit    pull
+ ────────────────────────────────────────────────────────────
+ element-ud   0.97367 +- 0.00032   0.97432              -2.03
+ gamma        66.4 +2.7 -2.8       65.6 +- 1.6   deg    +0.28
+ bag-K        0.7533 +- 0.0091     0.7545               -0.13
 pull = (measured - fitted) / measured error"""
 
 OTHER_MINIMA = """\
@@ -72,7 +72,9 @@ def test_golden_other_minima(result: FitResult) -> None:
 def test_verdict_comes_with_reasons(result: FitResult) -> None:
     good = text(*tables.verdict(result))
     assert good == "Converged. chi-square 3.21 for 2 degrees of freedom, p-value 0.2"
-    bad = replace(result, valid=False, message="minimisers disagree", flags=("minimisers-disagree",), p_value=None)
+    bad = replace(
+        result, valid=False, message="minimisers disagree", flags=("minimisers-disagree",), p_value=None
+    )
     shown = text(*tables.verdict(bad))
     assert shown.startswith("NOT CONVERGED: minimisers disagree. chi-square 3.21")
     assert "no p-value" in shown

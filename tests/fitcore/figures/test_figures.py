@@ -23,7 +23,17 @@ from fitcore.result import FitResult, MeasurementRow
 
 def row(name: str, measured: float, error: float, fitted: float, *groups: str, **more: Any) -> MeasurementRow:
     settings: dict[str, Any] = {"unit": "1", "kind": "experiment", "fitted_error": 0.4 * error} | more
-    return MeasurementRow(name, f"quantity_{name}", measured, error, error, fitted, (measured - fitted) / error, groups=groups, **settings)
+    return MeasurementRow(
+        name,
+        f"quantity_{name}",
+        measured,
+        error,
+        error,
+        fitted,
+        (measured - fitted) / error,
+        groups=groups,
+        **settings,
+    )
 
 
 ROWS = (
@@ -123,7 +133,11 @@ def test_correlation_bars_have_sign_and_length(result: FitResult) -> None:
     from matplotlib.patches import Rectangle
 
     drawing = correlation.draw(result, latex={"first": r"\bar\rho"})
-    bars = [p for p in drawing.figure.axes[0].patches if isinstance(p, Rectangle) and p.get_height() == pytest.approx(0.15)]
+    bars = [
+        p
+        for p in drawing.figure.axes[0].patches
+        if isinstance(p, Rectangle) and p.get_height() == pytest.approx(0.15)
+    ]
     edge = correlation.CELL - correlation.GAP
     assert sorted(bar.get_width() for bar in bars) == pytest.approx([0.5 * edge, 0.75 * edge])
     filled = {to_hex(bar.get_facecolor()): bar.get_x() for bar in bars}
@@ -166,7 +180,9 @@ def test_latex_that_cannot_be_set_falls_back_to_the_name() -> None:
 def test_every_symbol_of_the_catalogue_can_be_set() -> None:
     from observables import catalogue
 
-    unset = [n for n in catalogue.names() if catalogue[n].latex and style.symbol(catalogue[n].latex, "no") == "no"]
+    unset = [
+        n for n in catalogue.names() if catalogue[n].latex and style.symbol(catalogue[n].latex, "no") == "no"
+    ]
     assert unset == []
 
 
@@ -185,8 +201,15 @@ def test_drawing_needs_neither_pyplot_nor_a_display() -> None:
         "from fitcore.figures import correlation, dumbbell, style\n"
         "assert 'matplotlib' not in sys.modules\n"
         "from fitcore.result import FitResult, MeasurementRow\n"
-        "dumbbell.draw(FitResult(measurements=(MeasurementRow('a', 'b', 1., .1, .1, 1.1, -1., '1', 'theory'),)))\n"
+        "row = MeasurementRow('a', 'b', 1., .1, .1, 1.1, -1., '1', 'theory')\n"
+        "dumbbell.draw(FitResult(measurements=(row,)))\n"
         "assert 'matplotlib' in sys.modules and 'matplotlib.pyplot' not in sys.modules\n"
     )
-    done = subprocess.run([sys.executable, "-c", code], cwd=Path(__file__).parents[3], capture_output=True, text=True, check=False)
+    done = subprocess.run(
+        [sys.executable, "-c", code],
+        cwd=Path(__file__).parents[3],
+        capture_output=True,
+        text=True,
+        check=False,
+    )
     assert done.returncode == 0, done.stderr

@@ -9,13 +9,12 @@ degrees of freedom.
 from __future__ import annotations
 
 import hashlib
-import itertools
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from fitcore.minimise.batch_solver import minimise_batch
+from fitcore.minimise.batch_solver import minimise_batch, solve_with_retries
 
 FOLDER = Path(__file__).parents[2] / "data" / "nist_strd"
 
@@ -105,3 +104,74 @@ def digits(found, certified):
     """Decimal digits of agreement of the worst parameter (at most 11, what is certified)."""
     with np.errstate(divide="ignore"):
         return float(np.clip(-np.log10(np.max(np.abs(found - certified) / np.abs(certified))), 0.0, 11.0))
+
+
+def best_digits(name, reference, found):
+    """`digits` of the better labelling; MGH17 is symmetric under exchange of its two exponentials."""
+    labels = [[0, 1, 2, 3, 4], [0, 2, 1, 4, 3]] if name == "MGH17" else [list(range(found.size))]
+    return max(digits(found[order], reference.certified) for order in labels)
+
+
+# What is expected of a plain call, per set: start 2 always reaches six digits. From the far start 1 these end
+# elsewhere, or not within 1000 linearisations, and say so or sit in another true minimum; the ladder's strongly damped
+# rung mends all but BoxBOD (a plateau where b1 alone is fitted: a true local minimum at infinity) and MGH10.
+PLAIN_START_1_FAILS = {"BoxBOD", "Lanczos1", "Lanczos2", "Lanczos3", "MGH10"}
+LADDER_START_1_FAILS = {"BoxBOD", "MGH10"}
+
+
+@pytest.mark.parametrize("name", sorted(MODELS))
+def test_reaches_the_certified_values_from_start_2(name, least_squares_problem, free_parameter):
+    reference = ReferenceSet(name)
+    problem = make_problem(name, reference, least_squares_problem, free_parameter)
+    result = minimise_batch(problem, reference.starts[1:], tolerance=1e-16, max_iterations=1000)
+    assert result.converged[0]
+    assert best_digits(name, reference, result.theta[0]) >= 6.0
+
+
+@pytest.mark.parametrize("name", sorted(set(MODELS) - PLAIN_START_1_FAILS))
+def test_reaches_the_certified_values_from_start_1(name, least_squares_problem, free_parameter):
+    reference = ReferenceSet(name)
+    problem = make_problem(name, reference, least_squares_problem, free_parameter)
+    result = minimise_batch(problem, reference.starts[:1], tolerance=1e-16, max_iterations=1000)
+    assert result.converged[0]
+    assert best_digits(name, reference, result.theta[0]) >= 6.0
+
+
+@pytest.mark.parametrize("name", sorted(PLAIN_START_1_FAILS))
+def test_the_ladder_helps_from_start_1_or_says_so(name, least_squares_problem, free_parameter):
+    reference = ReferenceSet(name)
+    problem = make_problem(name, reference, least_squares_problem, free_parameter)
+    result = solve_with_retries(
+        problem, reference.starts[:1], extra_starts=reference.starts[1:], tolerance=1e-16, max_iterations=1000
+    )
+    if name not in LADDER_START_1_FAILS:
+        assert result.converged[0]
+        assert best_digits(name, reference, result.theta[0]) >= 6.0
+    else:
+        right = best_digits(name, reference, result.theta[0]) >= 6.0
+        higher = result.chi2[0] > reference.degrees_of_freedom + 1.0
+        assert right or higher or not result.converged[0]
+
+
+@pytest.mark.parametrize("name", sorted(set(MODELS) - {"Lanczos1"}))
+def test_certified_sum_of_squares_and_deviations(name, least_squares_problem, free_parameter):
+    # the models and the data are read as NIST meant them: chi2 at the certified point is the degrees of freedom and
+    # the certified standard deviations follow from J^T J (Lanczos1's residuals of 1e-14 drown in the certified digits)
+    reference = ReferenceSet(name)
+    problem = make_problem(name, reference, least_squares_problem, free_parameter)
+    assert problem.chi2(reference.certified[None])[0] == pytest.approx(
+        reference.sum_of_squares / reference.spread**2, rel=1e-5
+    )
+    jacobian = problem.jacobian(reference.certified[None])[0]
+    triangle = np.linalg.qr(jacobian, mode="r")
+    deviations = np.sqrt((np.linalg.inv(triangle) ** 2).sum(axis=1))
+    np.testing.assert_allclose(deviations, reference.deviations, rtol=1e-5)
+
+
+def test_files_are_the_ones_vendored():
+    sums = dict(
+        line.split()[::-1] for line in (FOLDER / "SHA256SUMS").read_text().splitlines() if line.strip()
+    )
+    assert set(sums) == {f"{name}.dat" for name in MODELS}
+    for file, expected in sums.items():
+        assert hashlib.sha256((FOLDER / file).read_bytes()).hexdigest() == expected
