@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+import sys
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -19,6 +20,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+import observables
 from fitcore.evaluation import ChiSquare
 from fitcore.minimise.derivatives import call_with_derivatives, seed, tangents_of
 from fitcore.minimise.normal_matrix import Linearisation
@@ -32,6 +34,7 @@ from observables.graph import Graph, compile_graph, find_parameters
 
 if TYPE_CHECKING:
     from fitcore.result import FitResult
+    from fitcore.scaleout import ProblemSpec
 
 __all__ = ["FreeParameter", "Problem"]
 
@@ -463,6 +466,28 @@ class Problem:
         ]
         return hashlib.sha256("\0".join(parts).encode()).hexdigest()
 
+    @property
+    def spec(self) -> ProblemSpec:
+        """What another process needs to build this problem again.
+
+        Raises
+        ------
+        InputError
+            It rests on a private catalogue, or on quantities declared in a notebook cell or at a prompt.
+        """
+        from fitcore.scaleout import ProblemSpec
+
+        if self._catalogue is not public_catalogue:
+            raise InputError("a problem with a catalogue of its own cannot be sent to other processes")
+        return ProblemSpec(
+            name=self.inputs.name,
+            inputs_toml=self.inputs.resolved_toml(),
+            hypothesis=self.hypothesis,
+            theory_errors=self.theory_errors,
+            fingerprint=self.fingerprint,
+            modules=_user_modules(self._catalogue, self._hypothesis),
+        )
+
     # -- other problems -----------------------------------------------------------------------------------------
 
     def with_inputs(self, inputs: Inputs) -> Problem:
@@ -496,6 +521,24 @@ class Problem:
         from fitcore.minimise.best_fit import fit
 
         return fit(self, derived=derived, profile=profile)
+
+
+def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:
+    """Names and paths of modules outside the package that declare quantities or replacements."""
+    own = Path(observables.__file__).parent
+    files = [Path(catalogue[name].origin.rpartition(":")[0]) for name in catalogue.names()]
+    files += [Path(node.origin.rpartition(":")[0]) for node in hypothesis.parameters.values()]
+    files += [
+        Path(layer.function.__code__.co_filename) for layers in hypothesis.layers.values() for layer in layers
+    ]
+    outside = [file for file in dict.fromkeys(files) if own not in file.parents]
+    if hidden := [str(file) for file in outside if not file.is_file()]:
+        raise InputError(
+            f"quantities declared in {', '.join(hidden)}, a notebook cell or prompt, do not exist in other processes; "
+            "put them into a module and import it, or use one process"
+        )
+    names = {Path(module.__file__): name for name, module in list(sys.modules.items()) if getattr(module, "__file__", None) and name != "__main__"}
+    return tuple((names.get(file, file.stem), str(file.resolve())) for file in outside)
 
 
 def _range_name(entry_id: str) -> str:

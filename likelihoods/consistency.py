@@ -15,6 +15,9 @@ from likelihoods.covariance import (
 )
 from likelihoods.entries import Block, Correlation, Entry, convert_numbers
 
+_SMALLEST, _LARGEST = 1e-100, 1e100
+_MOST_ASYMMETRIC = 1e6
+
 
 def consistency_problems(
     entries: Sequence[Entry], blocks: Sequence[Block], correlations: Sequence[Correlation]
@@ -26,6 +29,9 @@ def consistency_problems(
     list of str
         One message per problem.
     """
+    numbers = _numbers(entries)
+    if numbers:
+        return numbers
     return [
         *_overlaps(entries),
         *_same_pdg_identifier(entries),
@@ -53,6 +59,21 @@ def with_group_scale_factors(entries: Sequence[Entry]) -> tuple[Entry, ...]:
         entry if entry.inflate_group is None else entry.restated(entry.declared, factors[entry.inflate_group])
         for entry in entries
     )
+
+
+def _numbers(entries: Iterable[Entry]) -> list[str]:
+    """Find numbers whose squares or ratios would leave the range of floating point."""
+    problems = []
+    for entry in entries:
+        small, large = sorted((entry.plus, entry.minus))
+        if not (small > _SMALLEST and max(large, abs(entry.value), entry.flat_halfwidth) < _LARGEST):
+            what = f"a value or error outside {_SMALLEST:g} to {_LARGEST:g} {entry.unit}"
+        elif large / small > _MOST_ASYMMETRIC:
+            what = f"errors that differ by more than a factor {_MOST_ASYMMETRIC:g}"
+        else:
+            continue
+        problems.append(f"{entry.where} has {what}; check the numbers and the unit")
+    return problems
 
 
 def _overlaps(entries: Iterable[Entry]) -> list[str]:

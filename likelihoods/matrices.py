@@ -15,6 +15,8 @@ from likelihoods.fields import Fields, describe, real
 
 #: Elements that should be equal or 1 may differ by this much, the rounding of a matrix computed elsewhere.
 _ROUNDING = 1e-9
+#: Correlations beyond this are no matter of definiteness, and would overflow.
+_ABSURD = 1e6
 
 
 @dataclass(frozen=True)
@@ -69,8 +71,12 @@ def read_matrix(fields: Fields, key: str, size: int, folder: Path) -> Matrix | N
             (key, row), f"the correlation has {numbers[row, row]:g} on its diagonal (row {row + 1}); {mend}"
         )
         return None
-    correlation = numbers / np.outer(scale, scale)
-    asymmetry = np.abs(correlation - correlation.T)
+    with np.errstate(over="ignore", invalid="ignore"):
+        correlation = numbers / scale[:, None] / scale
+        asymmetry = np.abs(correlation - correlation.T)
+    if not (np.abs(correlation) < _ABSURD).all():
+        fields.problem(key, f"the {key} has elements far beyond its diagonal; check the numbers")
+        return None
     if (asymmetry > _ROUNDING).any():
         i, j = (int(k) for k in np.unravel_index(np.argmax(asymmetry), asymmetry.shape))
         fields.problem(
@@ -82,7 +88,7 @@ def read_matrix(fields: Fields, key: str, size: int, folder: Path) -> Matrix | N
     correlation = 0.5 * (correlation + correlation.T)
     np.fill_diagonal(correlation, 1.0)
     lowest = lowest_eigenvalue(correlation)
-    if lowest <= LOWEST_EIGENVALUE:
+    if not lowest > LOWEST_EIGENVALUE:
         fields.problem(
             key,
             f"the {key} of this block is not positive definite: lowest eigenvalue "

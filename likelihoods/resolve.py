@@ -102,7 +102,7 @@ class _Merger:
 
     def drop(self, name: str, where: str, document: Document) -> None:
         if self.remove(name):
-            self.result.notices.append(Notice("dropped", name, f"dropped by {document.file}"))
+            self.result.notices.append(Notice("dropped", name, f"dropped by {_short(document.file)}"))
         elif name in document.ids and name not in self.seen_ids:
             self.problems.append(f'{where}drop "{name}": it is an entry of this very file; remove it there')
         elif name not in self.seen_ids:
@@ -130,9 +130,9 @@ class _Merger:
         for name in document.ids:
             where = self.result.entries.get(name) or self.result.blocks.get(name)
             if where is not None:
-                old = f"{where.file}:{where.line}"
+                old = f"{_short(where.file)}:{where.line}"
                 self.remove(name)
-                text = f"{document.file}:{document.ids[name]} replaces the entry of {old}"
+                text = f"{_short(document.file)}:{document.ids[name]} replaces the entry of {old}"
                 self.result.notices.append(Notice("replaced", name, text))
         self.seen_ids.update(document.ids)
         self.result.entries |= {entry.id: entry for entry in document.entries}
@@ -142,7 +142,7 @@ class _Merger:
             self.add_correlation(correlation, pairs)
         for name in document.parameters:
             if name in self.result.parameters:
-                text = f"{document.file} replaces the settings of this parameter"
+                text = f"{_short(document.file)} replaces the settings of this parameter"
                 self.result.notices.append(Notice("replaced", name, text))
         self.result.parameters |= document.parameters
 
@@ -167,3 +167,8 @@ class _Merger:
         pairs[pair] = correlation
         kept = [other for other in self.result.correlations if frozenset(other.between) != pair]
         self.result.correlations = [*kept, correlation]
+
+
+def _short(file: str) -> str:
+    """Name of a file without its folder: notices go into results, which are compared between machines."""
+    return Path(file).name

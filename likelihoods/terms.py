@@ -101,10 +101,11 @@ class Terms:
         p, q = self.plus[self._asymmetric], self.minus[self._asymmetric]
         self._variance = p * q
         self._slope = p - q
-        # u at the start of the tangent, the difference there, and the tangent's slope.
+        # u at the start of the tangent; there the difference, the variance and the tangent's slope.
         self._edge_u = -TANGENT_FROM * np.sign(self._slope)
         self._edge_d = _difference_at(self._edge_u, self._variance, self._slope)
-        self._edge_du = _derivative(self._edge_d, self._variance, self._slope)
+        self._edge_total = (self._edge_d / self._edge_u) ** 2
+        self._edge_du = _derivative(self._edge_total, self._variance)
 
         self.periods: tuple[float | None, ...] = (None,) * m if periods is None else tuple(periods)
         self._periodic = np.array([i for i, period in enumerate(self.periods) if period], dtype=np.intp)
@@ -143,12 +144,12 @@ class Terms:
         d = self._difference(predictions, measured)
         u = d * _rows(self._inverse_sigma, d.ndim)
         if self._asymmetric.size:
-            v, slope, edge_u, edge_d, edge_du = self._asymmetric_columns(d.ndim)
+            v, slope, edge_u, edge_d, edge_total, edge_du = self._asymmetric_columns(d.ndim)
             d = d[self._asymmetric]
             beyond = (d - edge_d) * np.sign(edge_u) > 0.0
-            inside = np.where(beyond, edge_d, d)
-            root = inside / np.sqrt(v + slope * inside)
-            u[self._asymmetric] = np.where(beyond, edge_u + edge_du * (d - edge_d), root)
+            # On this side of the edge the variance is at least the edge's; the maximum only mends rounding.
+            total = np.maximum(v + slope * d, edge_total)
+            u[self._asymmetric] = np.where(beyond, edge_u + edge_du * (d - edge_d), d / np.sqrt(total))
         return u
 
     def standardised_derivative(self, predictions: ArrayLike, measured: ArrayLike | None = None) -> Array:
@@ -156,10 +157,10 @@ class Terms:
         d = self._difference(predictions, measured)
         derivative = np.where(np.isnan(d), np.nan, _rows(self._inverse_sigma, d.ndim))
         if self._asymmetric.size:
-            v, slope, edge_u, edge_d, _ = self._asymmetric_columns(d.ndim)
-            d = d[self._asymmetric]
-            inside = np.where((d - edge_d) * np.sign(edge_u) > 0.0, edge_d, d)
-            derivative[self._asymmetric] = _derivative(inside, v, slope)
+            v, slope, _, _, edge_total, _ = self._asymmetric_columns(d.ndim)
+            # Beyond the edge the variance would be smaller: the maximum gives the slope of the tangent there.
+            total = np.maximum(v + slope * d[self._asymmetric], edge_total)
+            derivative[self._asymmetric] = _derivative(total, v)
         return derivative
 
     def standardised_row(self, row: int, prediction: Any, measured: Any = None) -> Any:
@@ -184,8 +185,8 @@ class Terms:
         v, slope = self._variance[position], self._slope[position]
         edge_u, edge_d, edge_du = self._edge_u[position], self._edge_d[position], self._edge_du[position]
         beyond = (d - edge_d) * np.sign(edge_u) > 0.0
-        inside = np.where(beyond, edge_d, d)
-        return np.where(beyond, edge_u + edge_du * (d - edge_d), inside / np.sqrt(v + slope * inside))
+        total = np.maximum(v + slope * d, self._edge_total[position])
+        return np.where(beyond, edge_u + edge_du * (d - edge_d), d / np.sqrt(total))
 
     def derivative_row(self, row: int, prediction: Any, measured: Any = None) -> Any:
         """Derivative du/dprediction of one entry, in the shape of the prediction."""
@@ -283,12 +284,13 @@ class Terms:
             d[self._periodic] = part - period * np.ceil(part / period - 0.5)
         return d
 
-    def _asymmetric_columns(self, ndim: int) -> tuple[Array, Array, Array, Array, Array]:
+    def _asymmetric_columns(self, ndim: int) -> tuple[Array, Array, Array, Array, Array, Array]:
         return (
             _rows(self._variance, ndim),
             _rows(self._slope, ndim),
             _rows(self._edge_u, ndim),
             _rows(self._edge_d, ndim),
+            _rows(self._edge_total, ndim),
             _rows(self._edge_du, ndim),
         )
 
@@ -306,9 +308,9 @@ def _difference_at(u: Array, variance: Array, slope: Array) -> Array:
     return u * half
 
 
-def _derivative(d: Array, variance: Array, slope: Array) -> Array:
-    total = variance + slope * d
-    result: Array = (variance + 0.5 * slope * d) / (total * np.sqrt(total))
+def _derivative(total: Array, variance: Array) -> Array:
+    """Derivative of u = d / sqrt(total) with total = variance + slope d."""
+    result: Array = 0.5 * (variance + total) / (total * np.sqrt(total))
     return result
 
 

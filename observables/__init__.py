@@ -14,6 +14,7 @@ from observables import (  # isort: skip
     beta_decays,
     leptonic_decays,
     semileptonic_decays,
+    scale_evolution,
     neutral_mixing,
     cp_asymmetries,
 )

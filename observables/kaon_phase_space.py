@@ -294,9 +294,13 @@ def _quadratic_integral(
     )
 
 
-_KAONS = {"K0": ("mass_K0", "mass_pi", "K^0"), "K": ("mass_K", "mass_pi0", "K^+")}
+_MODES = (
+    # final part of the name, masses, mode in titles, latex of the kaon
+    ("K0_pi", "mass_K0", "mass_pi", "K0 -> pi-", "K^0"),
+    ("K_pi0", "mass_K", "mass_pi0", "K+ -> pi0", "K^+"),
+)
 
-for _kaon, (_mass_kaon, _mass_pion, _kaon_latex) in _KAONS.items():
+for _mode, _mass_kaon, _mass_pion, _written, _kaon_latex in _MODES:
     for _lepton, _lepton_latex in LEPTONS.items():
         _masses = {"mass_kaon": _mass_kaon, "mass_pion": _mass_pion, "mass_lepton": f"mass_{_lepton}"}
         for _suffix, _function, _form in (
@@ -305,9 +309,9 @@ for _kaon, (_mass_kaon, _mass_pion, _kaon_latex) in _KAONS.items():
         ):
             quantity(
                 unit="1",
-                name=f"phase_space_{_kaon}_pi_{_lepton}_nu{_suffix}",
+                name=f"phase_space_{_mode}_{_lepton}_nu{_suffix}",
                 ingredients=_masses,
-                title=f"Phase-space integral of {_kaon} -> pi {_lepton} nu, {_form} form factors",
+                title=f"Phase-space integral of {_written} {_lepton} nu (K_l3), {_form} form factors",
                 latex=rf"I_{{{_kaon_latex}{_lepton_latex}}}",
                 source=KAON_REVIEW + "; " + DISPERSIVE,
                 recalled=_form == "dispersive",

@@ -115,7 +115,7 @@ _CORRECTIONS = (
     ),
     (
         "radiative_e_mu_pi",
-        1.2352e-4 / 1.283350e-4 - 1.0,
+        1.2352e-4 / 1.283346e-4 - 1.0,
         8.0e-5,
         "Radiative correction of the quotient of pi -> e nu and pi -> mu nu",
         r"\delta_{e/\mu}^\pi",
@@ -176,12 +176,15 @@ parameter(
     lower=0.9,
     upper=1.1,
     scale=0.0003,
-    title="Short-distance electroweak factor of semileptonic rates at the rho mass",
+    title="Short-distance electroweak factor of the rates of K -> pi l nu and tau -> P nu",
     latex=r"S_{EW}",
     source="W. Marciano, A. Sirlin, Phys. Rev. Lett. 56, 22; value from memory",
     fixed=True,
 )
 
+
+#: Mesons as they are written in titles.
+_WRITTEN = {"pi": "pi", "K": "K", "D": "D+", "Ds": "D_s+", "Bu": "B+", "Bc": "B_c+"}
 
 # --- pieces made of constants -----------------------------------------------------------------------------
 
@@ -226,7 +229,7 @@ for _meson, _lepton in (
         unit="1/s",
         name=f"rate_unit_{_meson}_{_lepton}_nu",
         ingredients={"mass_meson": f"mass_{_meson}", "mass_lepton": f"mass_{_lepton}"},
-        title=f"Rate of {_meson} -> {_lepton} nu for f |V| = 1 GeV",
+        title=f"Rate of {_WRITTEN[_meson]} -> {_lepton} nu for f |V| = 1 GeV",
         latex=r"G_F^2 M m^2 (1-m^2/M^2)^2/8\pi\hbar",
         source=REVIEW,
     )(_rate_unit)
@@ -267,7 +270,9 @@ def long_distance_factor_D_leptonic(long_distance_em_D: Real) -> Real:
 # --- pions and kaons --------------------------------------------------------------------------------------
 
 
-@quantity(unit="1/s", title="Rate of pi -> mu nu", latex=r"\Gamma(\pi\to\mu\nu)", source=MARCIANO_SIRLIN)
+@quantity(
+    unit="1/s", title="Rate of pi -> mu nu (pi_mu2)", latex=r"\Gamma(\pi\to\mu\nu)", source=MARCIANO_SIRLIN
+)
 def width_pi_mu_nu(
     rate_unit_pi_mu_nu: Real, decay_constant_pi: Real, magnitude_V_ud: Real, radiative_pi_mu_nu: Real
 ) -> Real:
@@ -276,7 +281,7 @@ def width_pi_mu_nu(
     return rate_unit_pi_mu_nu * (coupling * coupling) * (1.0 + radiative_pi_mu_nu)
 
 
-@quantity(unit="1/s", title="Rate of K -> mu nu", latex=r"\Gamma(K\to\mu\nu)", source=MARCIANO_SIRLIN)
+@quantity(unit="1/s", title="Rate of K -> mu nu (K_mu2)", latex=r"\Gamma(K\to\mu\nu)", source=MARCIANO_SIRLIN)
 def width_K_mu_nu(
     rate_unit_K_mu_nu: Real, decay_constant_K: Real, magnitude_V_us: Real, radiative_K_mu_nu: Real
 ) -> Real:
@@ -287,7 +292,7 @@ def width_K_mu_nu(
 
 @quantity(
     unit="1",
-    title="Quotient of the rates of K -> mu nu and pi -> mu nu",
+    title="Quotient of the rates of K -> mu nu and pi -> mu nu (K_mu2 over pi_mu2)",
     latex=r"\Gamma(K\to\mu\nu)/\Gamma(\pi\to\mu\nu)",
     source="W. Marciano, Phys. Rev. Lett. 93, 231803; " + CIRIGLIANO_NEUFELD,
 )
@@ -386,7 +391,7 @@ for _meson, _element, _latex in (("D", "V_cd", "D^+"), ("Ds", "V_cs", "D_s^+")):
                 "decay_constant": f"decay_constant_{_meson}",
                 "magnitude": f"magnitude_{_element}",
             },
-            title=f"Branching fraction of {_meson} -> {_lepton} nu",
+            title=f"Branching fraction of {_WRITTEN[_meson]} -> {_lepton} nu",
             latex=rf"B({_latex}\to\{_lepton}\nu)",
             source=REVIEW + "; " + LATTICE,
         )(_charm_branching)
@@ -415,7 +420,7 @@ for _meson, _decay_constant, _element, _latex, _leptons in (
                 "decay_constant": _decay_constant,
                 "magnitude": f"magnitude_{_element}",
             },
-            title=f"Branching fraction of {_meson} -> {_lepton} nu",
+            title=f"Branching fraction of {_WRITTEN[_meson]} -> {_lepton} nu",
             latex=rf"B({_latex}\to\{_lepton}\nu)",
             source=REVIEW + "; " + LATTICE,
         )(_beauty_branching)

@@ -89,7 +89,7 @@ parameter(
     scale=0.013,
     title="Charm-quark MSbar mass at its own scale",
     latex=r"m_c(m_c)",
-    source="FLAG Review 2021 (arXiv:2111.09849), 2+1+1 flavours",
+    source="FLAG Review 2021 (arXiv:2111.09849), 2+1+1 flavours; value from memory",
 )
 parameter(
     "short_distance_factor_B",
@@ -100,7 +100,7 @@ parameter(
     scale=0.0022,
     title="Short-distance factor of B mixing (for the renormalisation-group invariant bag parameter)",
     latex=r"\hat\eta_B",
-    source="A. Buras, M. Jamin, P. Weisz, Nucl. Phys. B 347, 491 (1990)",
+    source="A. Buras, M. Jamin, P. Weisz, Nucl. Phys. B 347, 491 (1990); value from memory",
 )
 parameter(
     "short_distance_factor_top_top",
@@ -111,7 +111,7 @@ parameter(
     scale=0.023,
     title="Short-distance factor of the top part of kaon mixing, up-top form",
     latex=r"\eta_{tt}",
-    source=_UP_TOP,
+    source=_UP_TOP + "; value from memory",
 )
 parameter(
     "short_distance_factor_up_top",
@@ -122,7 +122,7 @@ parameter(
     scale=0.005,
     title="Short-distance factor of the up-top part of kaon mixing",
     latex=r"\eta_{ut}",
-    source=_UP_TOP,
+    source=_UP_TOP + "; value from memory",
 )
 parameter(
     "long_distance_factor_epsilon_K",
@@ -131,7 +131,7 @@ parameter(
     lower=0.5,
     upper=1.5,
     scale=0.02,
-    title="Long-distance factor of epsilon_K",
+    title="Factor of epsilon_K for its phase and for long-distance effects",
     latex=r"\kappa_\epsilon",
     source="A. Buras, D. Guadagnoli, G. Isidori, Phys. Lett. B 688, 309 (arXiv:1002.3612)",
 )
@@ -166,7 +166,7 @@ parameter(
     scale=0.0065,
     title="Short-distance factor of the top part of kaon mixing, charm-top form",
     latex=r"\eta_{tt}^{(ct)}",
-    source="A. Buras, M. Jamin, P. Weisz, Nucl. Phys. B 347, 491 (1990)",
+    source="A. Buras, M. Jamin, P. Weisz, Nucl. Phys. B 347, 491 (1990); value from memory",
 )
 
 
@@ -217,7 +217,8 @@ def _box_amplitude_B(strength: Any, V_tb: Any, V_tq: Any, V_cb: Any, V_cq: Any) 
     """``strength * (V_tb V_tq^*)^2`` in the frame where ``V_cb V_cq^*`` is real."""
     reference = V_cb * np.conjugate(V_cq)
     product = V_tb * np.conjugate(V_tq * reference)
-    return strength / (reference.real**2 + reference.imag**2) * product**2
+    # The strength comes last: until then the derivatives are those of the matrix elements alone.
+    return (product * product) / (reference.real**2 + reference.imag**2) * strength
 
 
 @quantity(
@@ -443,8 +444,9 @@ def epsilon_K(long_distance_factor_epsilon_K: Any, M12_K: Any, mass_difference_K
     r"""Size of CP violation in kaon mixing with a sign, dimensionless: positive for eta-bar > 0; CP-odd.
 
     :math:`\epsilon_K = \kappa_\epsilon\, \mathrm{Im} M_{12} / (\sqrt2\, \Delta m_K)` with the measured mass
-    difference and the up-top unitarity form of M12. What is measured is the modulus, and the sign is that of
-    the real part.
+    difference and the up-top unitarity form of M12. The factor :math:`\kappa_\epsilon` contains
+    :math:`\sqrt2 \sin\phi_\epsilon` (0.974) and the long-distance parts. What is measured is the modulus,
+    and the sign is that of the real part.
     """
     return long_distance_factor_epsilon_K * np.imag(M12_K) / (math.sqrt(2) * mass_difference_K)
 

@@ -164,7 +164,7 @@ def _charged_branching(
 
 for _suffix, _form in (("", "dispersive"), ("_quadratic", "quadratic")):
     for _lepton, _lepton_latex in LEPTONS.items():
-        for _kaon, _kaon_latex in (("KL", "K_L"), ("KS", "K_S")):
+        for _kaon, _written in (("KL", "K_L"), ("KS", "K_S")):
             quantity(
                 unit="1",
                 name=f"branching_{_kaon}_pi_{_lepton}_nu{_suffix}",
@@ -173,8 +173,8 @@ for _suffix, _form in (("", "dispersive"), ("_quadratic", "quadratic")):
                     "integral": f"phase_space_K0_pi_{_lepton}_nu{_suffix}",
                     "radiative": f"radiative_K0_pi_{_lepton}_nu",
                 },
-                title=f"Branching fraction of {_kaon} -> pi {_lepton} nu, {_form} form factors",
-                latex=rf"B({_kaon_latex}\to\pi {_lepton_latex}\nu)",
+                title=f"Branching fraction of {_written} -> pi {_lepton} nu (K_l3), {_form} form factors",
+                latex=rf"B({_written}\to\pi {_lepton_latex}\nu)",
                 source=KAON_REVIEW,
             )(_neutral_branching)
         quantity(
@@ -182,10 +182,10 @@ for _suffix, _form in (("", "dispersive"), ("_quadratic", "quadratic")):
             name=f"branching_K_pi0_{_lepton}_nu{_suffix}",
             ingredients={
                 "lifetime": "lifetime_K",
-                "integral": f"phase_space_K_pi_{_lepton}_nu{_suffix}",
+                "integral": f"phase_space_K_pi0_{_lepton}_nu{_suffix}",
                 "radiative": f"radiative_K_pi0_{_lepton}_nu",
             },
-            title=f"Branching fraction of K+ -> pi0 {_lepton} nu, {_form} form factors",
+            title=f"Branching fraction of K+ -> pi0 {_lepton} nu (K_l3), {_form} form factors",
             latex=rf"B(K^+\to\pi^0 {_lepton_latex}\nu)",
             source=KAON_REVIEW,
         )(_charged_branching)

@@ -51,8 +51,8 @@ def command(ctx: click.Context, no_figures: bool, output: Output, work: Work) ->
     held_95 = sum(row["in_95"] for row in rows.values())
     output.show(
         f"{held} of {len(rows)} intervals at 68.27 % hold the truth, {held_95} of those at 95.0 %. They share "
-        f"measurements, so they rise and fall together: {0.6827 * len(rows):.0f} of {len(rows)} is the average "
-        "over many such scenarios, not a promise for this one."
+        f"measurements and so rise and fall together: {0.6827 * len(rows):.0f} of {len(rows)} is the average over "
+        "many such scenarios, not a promise for this one."
     )
     output.write_json({**result.to_dict(), "truth": rows})
     leave_if_not_valid(ctx, result)

@@ -17,18 +17,6 @@ if TYPE_CHECKING:
     from fitcore.problem import Problem
     from fitcore.result import FitResult
 
-#: What is derived from every fit whose parameters allow it.
-DEFAULT_DERIVED = (
-    "jarlskog",
-    *(f"magnitude_V_{up}{down}" for up in "uct" for down in "dsb"),
-    "angle_alpha",
-    "angle_beta",
-    "angle_gamma",
-    "angle_beta_s",
-    "side_Rb",
-    "side_Rt",
-)
-
 
 @click.command("fit")
 @problem_options
@@ -155,6 +143,7 @@ def derived_names(problem: Problem, asked: tuple[str, ...]) -> tuple[str, ...]:
         If an asked quantity is complex, or rests on parameters that the problem does not have.
     """
     from fitcore.commands.errors import input_error
+    from fitcore.minimise.best_fit import DEFAULT_DERIVED
 
     for name in asked:
         problem.unit_of(name)  # an unknown name is an error here

@@ -36,7 +36,7 @@ class ProblemRequest:
     only: tuple[str, ...] = ()
     without: tuple[str, ...] = ()
     settings: tuple[str, ...] = ()
-    hypothesis: tuple[str, ...] = ("standard",)
+    hypothesis: tuple[str, ...] = ()
     theory_errors: str = "as-given"
 
     def load(self) -> Problem:
@@ -49,10 +49,9 @@ class ProblemRequest:
         """
         from fitcore.problem import Problem
 
-        hypothesis = self.hypothesis[0] if len(self.hypothesis) == 1 else list(self.hypothesis)
         return Problem.load(
             self.inputs,
-            hypothesis=hypothesis,
+            hypothesis="+".join(self.hypothesis) or "standard",
             only=self.only,
             without=self.without,
             settings=self.settings,
@@ -102,8 +101,7 @@ def _chain(function: Command, decorators: list[Callable[[Any], Any]]) -> Command
 def _split_hypotheses(
     _ctx: click.Context, _parameter: click.Parameter, value: tuple[str, ...]
 ) -> tuple[str, ...]:
-    names = tuple(part.strip() for item in value for part in item.split("+") if part.strip())
-    return names or ("standard",)
+    return tuple(part.strip() for item in value for part in item.split("+") if part.strip())
 
 
 hypothesis_option = click.option(

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from rich.console import Console, RenderableType
 
-PIPE_WIDTH = 120
+PIPE_WIDTH = 140
 NARROW = 100
 
 

@@ -33,7 +33,7 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
     from observables import catalogue
     from observables.graph import find_parameters
 
-    overlay = catalogue.get_hypothesis("+".join(hypothesis))
+    overlay = catalogue.get_hypothesis("+".join(hypothesis) or "standard")
     node: Any = overlay.parameters[name] if name in overlay.parameters else catalogue[name]
     leaves = find_parameters(catalogue, (name,), overlay)
     parameters: list[Any] = [leaf for leaf in leaves.values() if leaf.kind == "parameter"]

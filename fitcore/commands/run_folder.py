@@ -94,7 +94,9 @@ def check_place(place: Path) -> None:
         return
     record = read_record(place)
     if record is None:
-        message = f"{place}: is not a weakmix run folder, and not empty; nothing was touched; give --out another name"
+        message = (
+            f"{place}: is not a weakmix run folder and not empty; nothing was touched; give another name"
+        )
         raise StoreError(message)
     foreign = [name for name in present if name != RECORD and name not in record.get("files", {})]
     if foreign:

@@ -210,7 +210,9 @@ def pull(value: float | None) -> Text:
     """Write a pull with its sign; beyond two it is set off."""
     if value is None or not math.isfinite(value):
         return Text("-")
-    return Text(f"{value:+.2f}", style="bold red" if abs(value) >= 3 else "yellow" if abs(value) >= 2 else "")
+    shown = f"{value:+.2f}"
+    shown = "0.00" if shown in ("-0.00", "+0.00") else shown
+    return Text(shown, style="bold red" if abs(value) >= 3 else "yellow" if abs(value) >= 2 else "")
 
 
 def other_minima(result: FitResult) -> Table | None:

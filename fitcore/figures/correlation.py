@@ -21,6 +21,8 @@ GAP = 0.06
 MOST = 32
 #: Smaller coefficients get no number.
 WORTH_A_NUMBER = 0.05
+#: A shorter bar would be nothing but its edge, and look longer than it is.
+WORTH_A_BAR = 0.02
 
 
 def chosen(matrix: tuple[tuple[float, ...], ...], most: int = MOST) -> list[int]:
@@ -67,7 +69,7 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
         axes.set_ylim(side + bottom, -top)
         for row, i in enumerate(shown):
             y = row * CELL
-            symbol = style.symbol(latex.get(names[i], ""), "")
+            symbol = latex.get(names[i], "")
             if row % 2 == 0:
                 axes.add_patch(
                     Rectangle((-left + 0.16, y), left - 0.16 + side, CELL, color="#f3f5f8", lw=0, zorder=0)
@@ -76,12 +78,9 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
             axes.text(
                 -left + 0.24, middle, names[i], fontsize=7.5, ha="left", va="center", color=style.FAINT_INK
             )
-            if symbol:
-                axes.text(-0.1, middle, symbol, fontsize=9.5, ha="right", va="center")
+            style.draw_symbol(axes, -0.1, middle, symbol, "", size=9.5, room=0.9, align=1.0)
             diagonal = row * CELL + CELL / 2
-            axes.text(
-                diagonal, middle, symbol, fontsize=_diagonal_size(symbol), ha="center", va="center", zorder=4
-            )
+            style.draw_symbol(axes, diagonal, middle, symbol, "", size=7.5, room=CELL - 0.04, align=0.5)
             for column, j in enumerate(shown):
                 value = matrix[i][j]
                 if column == row or value is None or value != value:
@@ -94,8 +93,10 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
                         axes.text(x, middle, text, fontsize=6.5, ha="center", va="center", color=shade)
                     continue
                 edge = CELL / 2 - GAP / 2
-                length = min(abs(value), 1.0) * 2 * edge
                 axes.plot([x - edge, x + edge], [middle + 0.075] * 2, color=style.RULE, lw=0.6, zorder=1)
+                if abs(value) < WORTH_A_BAR:
+                    continue
+                length = min(abs(value), 1.0) * 2 * edge
                 positive = value > 0
                 axes.add_patch(
                     Rectangle(
@@ -131,7 +132,3 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
         if matrix[i][j] is not None
     )
     return style.Drawing(figure, ("parameter", "with", "correlation"), rows)
-
-
-def _diagonal_size(symbol: str) -> float:
-    return 7.5 if len(symbol) < 16 else 5.5

@@ -24,6 +24,8 @@ COLUMNS = (
     *("fitted", "fitted_error", "pull"),
 )
 
+#: More rows than this do not fit on a page: those with the largest pulls are drawn.
+MOST = 40
 ROW_HEIGHT = 0.36
 WIDTH = 8.6
 
@@ -58,7 +60,8 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
     Drawing
     """
     latex = latex or {}
-    lanes = arrange(result.measurements)
+    ranked = sorted(result.measurements, key=_size, reverse=True)
+    lanes = arrange(tuple(ranked[:MOST]))
     n_rows = sum(len(members) for _, members in lanes)
     top, bottom = 0.92, 0.42
     height = n_rows * ROW_HEIGHT + 0.16 * max(len(lanes) - 1, 0) + top + bottom
@@ -69,7 +72,7 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
         axes.set_xlim(0, WIDTH)
         axes.set_ylim(height - top - bottom, 0)  # inches downwards: rows are laid out like lines of text
         reach = max([1.8, *(_size(row) / 2 + 1.35 for _, members in lanes for row in members)])
-        rail = Rail(middle=4.72, half=1.62, reach=reach)
+        rail = Rail(middle=5.0, half=1.5, reach=reach)
         y = 0.0
         for family, members in lanes:
             _lane(axes, family, y, len(members) * ROW_HEIGHT)
@@ -78,6 +81,8 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
                 y += ROW_HEIGHT
             y += 0.16
         _head(figure, height, result)
+        if len(ranked) > MOST:
+            footer += f"  -  the {MOST} largest pulls of {len(ranked)}"
         style.footer(figure, footer, left=0.16 / WIDTH, baseline=0.14 / height)
         figure.text(
             1 - 0.16 / WIDTH,
@@ -93,7 +98,7 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
             *(row.id, row.quantity, row.unit, family.label, row.measured, row.error_plus, row.error_minus),
             *(row.fitted, row.fitted_error, row.pull),
         )
-        for family, members in lanes
+        for family, members in arrange(tuple(ranked))
         for row in members
     )
     return style.Drawing(figure, COLUMNS, data)
@@ -155,8 +160,9 @@ def _row(axes: Axes, rail: Rail, family: style.Family, row: MeasurementRow, y: f
     def place(value: float) -> float:
         return rail.middle + (value - centre) * per_unit
 
-    axes.text(0.32, y, style.symbol(latex, row.quantity), fontsize=9.5, va="center", ha="left")
-    axes.text(1.62, y, row.id, fontsize=6.5, va="center", ha="left", color=style.FAINT_INK)
+    style.draw_symbol(axes, 0.32, y, latex, row.quantity, size=9.5, room=1.27)
+    fitting = 6.5 * min(1.0, 33 / len(row.id))
+    axes.text(1.66, y, row.id, fontsize=fitting, va="center", ha="left", color=style.FAINT_INK)
     left, right = rail.middle - rail.half, rail.middle + rail.half
     axes.plot([left, right], [y, y], color=style.tint(family.colour, 0.28), lw=0.7, zorder=1)
     for tick in ticks(centre - rail.half / per_unit, centre + rail.half / per_unit):
@@ -187,9 +193,9 @@ def _row(axes: Axes, rail: Rail, family: style.Family, row: MeasurementRow, y: f
     axes.plot([measured], [y], "o", ms=5.4, mfc=family.colour, mec=style.PAPER, mew=0.9, zorder=5)
     strong = row.pull is not None and abs(row.pull) >= 2
     axes.text(
-        6.98,
+        7.1,
         y,
-        "" if row.pull is None else f"{row.pull:+.2f}".replace("-", "\N{MINUS SIGN}"),
+        "" if row.pull is None else style.sign(row.pull),
         fontsize=8.5,
         va="center",
         ha="right",
@@ -198,16 +204,17 @@ def _row(axes: Axes, rail: Rail, family: style.Family, row: MeasurementRow, y: f
 
 
 def ticks(low: float, high: float) -> list[float]:
-    """Return two or three round values well inside a range."""
-    step_limit = (high - low) / 3.2
-    power = 10.0 ** math.floor(math.log10(step_limit))
-    step = next(power * factor for factor in (1, 2, 5, 10) if power * factor >= step_limit)
-    if step > 1.35 * step_limit and 2.5 * power >= step_limit > 2 * power:
-        step = 2.5 * power
+    """Return at least two round values inside a range, as few as the steps 5, 2 and 1 allow."""
     margin = 0.04 * (high - low)
-    first = math.ceil((low + margin) / step)
-    last = math.floor((high - margin) / step)
-    return [index * step for index in range(first, last + 1)]
+    power = 10.0 ** math.floor(math.log10(high - low))
+    found: list[float] = []
+    for factor in (5.0, 2.0, 1.0, 0.5, 0.2):
+        step = factor * power
+        first, last = math.ceil((low + margin) / step), math.floor((high - margin) / step)
+        found = [index * step for index in range(first, last + 1)]
+        if len(found) >= 2:
+            break
+    return found
 
 
 def _head(figure: Any, height: float, result: FitResult) -> None:
@@ -222,7 +229,7 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
     figure.text(
         1 - 0.16 / WIDTH,
         1 - 0.3 / height,
-        rf"$\chi^2$ = {result.chi2:.2f} for {result.degrees_of_freedom} degrees of freedom{p}{broken}",
+        f"chi-square {result.chi2:.2f} for {result.degrees_of_freedom} degrees of freedom{p}{broken}",
         fontsize=8.5,
         ha="right",
         va="center",
@@ -233,15 +240,15 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
     def sample(x: float) -> float:
         return x / WIDTH
 
-    figure.add_artist(Line2D([sample(3.2), sample(3.5)], [y, y], color=style.FAINT_INK, lw=1.8))
+    figure.add_artist(Line2D([sample(3.5), sample(3.8)], [y, y], color=style.FAINT_INK, lw=1.8))
     figure.add_artist(
         Line2D(
-            [sample(3.35)], [y], marker="o", ms=5.4, mfc=style.FAINT_INK, mec=style.PAPER, mew=0.9, ls="none"
+            [sample(3.65)], [y], marker="o", ms=5.4, mfc=style.FAINT_INK, mec=style.PAPER, mew=0.9, ls="none"
         )
     )
-    figure.text(sample(3.58), y, "measured, with its error", fontsize=7.5, va="center")
+    figure.text(sample(3.88), y, "measured, with its error", fontsize=7.5, va="center")
     figure.add_artist(
-        Rectangle((sample(5.12), y - 0.06 / height), 0.3 / WIDTH, 0.12 / height, color=style.NAVY, lw=0)
+        Rectangle((sample(5.3), y - 0.06 / height), 0.3 / WIDTH, 0.12 / height, color=style.NAVY, lw=0)
     )
-    figure.text(sample(5.5), y, "fitted, 68.27 %", fontsize=7.5, va="center")
-    figure.text(sample(6.98), y, "pull", fontsize=7.5, va="center", ha="right")
+    figure.text(sample(5.68), y, "fitted, 68.27 %", fontsize=7.5, va="center")
+    figure.text(sample(7.1), y, "pull", fontsize=7.5, va="center", ha="right")

@@ -16,7 +16,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from matplotlib.axes import Axes
     from matplotlib.figure import Figure
+    from matplotlib.path import Path as Path2D
 
 NAVY = "#12284c"
 VERMILLION = "#d55e00"
@@ -33,6 +35,8 @@ RULE = "#d9dce1"
 PAPER = "#ffffff"
 
 DOTS_PER_INCH = 200
+#: Height of the middle of small letters above the baseline, in units of the font size.
+X_HEIGHT_MIDDLE = 0.3
 
 SETTINGS: Any = {
     "font.family": "DejaVu Sans",
@@ -168,24 +172,85 @@ def save(drawing: Drawing, folder: Path, name: str) -> tuple[Path, ...]:
     with in_style():
         # no date inside: the same result gives the same bytes
         drawing.figure.savefig(paths[0], format="pdf", metadata={"CreationDate": None})
-        drawing.figure.savefig(paths[1], format="png", metadata={"Software": None})
+        drawing.figure.savefig(
+            paths[1], format="png", metadata={"Software": None}, pil_kwargs={"compress_level": 4}
+        )
     paths[2].write_text(drawing.csv_text(), encoding="utf-8")
     return paths
 
 
 @lru_cache(maxsize=512)
-def symbol(latex: str, name: str) -> str:
-    """Return latex as matplotlib text, or the plain name where there is none or it cannot be set."""
-    if not latex:
-        return name
-    from matplotlib.mathtext import MathTextParser
+def symbol_path(latex: str) -> tuple[Path2D, float, float] | None:
+    """Set a symbol as an outline; None if there is nothing to set or it cannot be set.
 
-    text = f"${latex}$"
+    An outline is set once and drawn often: setting is the slow part, and text would be set anew for each file.
+
+    Returns
+    -------
+    outline : matplotlib Path
+        In points at font size 1, baseline at zero.
+    left, width : float
+        Where it starts and how wide it is.
+    """
+    if not latex:
+        return None
+    from matplotlib.textpath import TextPath
+    from matplotlib.transforms import Affine2D
+
     try:
-        MathTextParser("path").parse(text)
+        path = TextPath((0, 0), f"${latex}$", size=10)
     except ValueError:
-        return name
-    return text
+        return None
+    if not len(path.vertices):
+        return None
+    outline: Path2D = Affine2D().scale(0.1).transform_path(path)
+    box = outline.get_extents()
+    return outline, float(box.x0), float(box.width)
+
+
+def draw_symbol(
+    axes: Axes, x: float, y: float, latex: str, name: str, *, size: float, room: float, align: float = 0.0
+) -> None:
+    """Draw a symbol, or the plain name where there is none, on axes whose unit is the inch, downwards.
+
+    Parameters
+    ----------
+    axes : Axes
+        Where to draw.
+    x, y : float
+        Anchor in inches, at the middle of small letters.
+    latex, name : str
+        The symbol, and what stands in for it; nothing is drawn if both are empty.
+    size : float
+        Font size in points.
+    room : float
+        Width in inches that it may fill; longer symbols are drawn smaller.
+    align : float
+        0 starts at the anchor, 0.5 is centred on it, 1 ends there.
+    """
+    from matplotlib.patches import PathPatch
+    from matplotlib.transforms import Affine2D
+
+    found = symbol_path(latex)
+    if found is None:
+        if name:
+            side = {0.0: "left", 0.5: "center", 1.0: "right"}[align]
+            fitting = min(0.85 * size, 72 * room / (0.62 * len(name)))
+            axes.text(x, y, name, fontsize=fitting, va="center", ha=side)
+        return
+    outline, left, width = found
+    scale = min(size / 72, room / width)
+    placed = (
+        Affine2D().translate(-left - align * width, -X_HEIGHT_MIDDLE).scale(scale, -scale).translate(x, y)
+    )
+    # not add_patch: it would work out the extent of every curve for axis limits that are set anyway
+    axes.add_artist(PathPatch(placed.transform_path(outline), color=INK, lw=0, zorder=4))
+
+
+def sign(pull: float) -> str:
+    """Write a pull with its sign and a true minus; what rounds to zero has none."""
+    text = f"{pull:+.2f}"
+    return "0.00" if text in ("-0.00", "+0.00") else text.replace("-", "\N{MINUS SIGN}")
 
 
 def footer(figure: Figure, text: str, *, left: float, baseline: float) -> None:

@@ -56,7 +56,7 @@ class HeldPoints:
         with np.errstate(invalid="ignore"):
             visible = better & ((other.good & ~self.good[pick]) | (self.chi2[pick] - other.chi2 > 1e-6))
         self.put(pick[better], other.rows(np.flatnonzero(better)))
-        return pick[visible]
+        return np.asarray(pick[visible])
 
 
 class HeldQuantities:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from typing import Any
 
 import numpy as np
@@ -31,7 +31,7 @@ class Crossings:
     good : ndarray of bool, shape (R,)
         Found to 1e-3 in chi-square, or open.
     theta : ndarray, shape (R, n)
-        Profiled point at (or nearest inside) the end.
+        Profiled point next to the end.
     lowest : ndarray, shape (n,), and lowest_chi2 : float
         Lowest point met on the way.
     """
@@ -76,56 +76,113 @@ def find_crossings(
     outside : ndarray, shape (R,), optional
         A point known to be higher (or out of reach); nan where none is known.
     """
-    rows_total = inside.size
-    near, near_delta, near_theta = inside.copy(), inside_delta.copy(), inside_theta.copy()
-    origin, origin_theta = inside.copy(), inside_theta.copy()
-    far = np.full(rows_total, np.nan) if outside is None else outside.copy()
-    far_delta = np.full(rows_total, np.inf)
-    x, start = guess.copy(), guess_theta.copy()
-    result = Crossings(
-        stop.copy(),
-        np.ones(rows_total, dtype=bool),
-        np.zeros(rows_total, dtype=bool),
-        inside_theta.copy(),
-        inside_theta[0],
-        np.inf,
+    walk = _Walk(
+        levels=levels,
+        stop=stop,
+        side=np.where(stop > inside, 1.0, -1.0),
+        origin=inside.copy(),
+        origin_theta=inside_theta.copy(),
+        near=inside.copy(),
+        near_theta=inside_theta.copy(),
+        near_delta=inside_delta.copy(),
+        far=np.full(inside.size, np.nan) if outside is None else outside.copy(),
+        far_delta=np.full(inside.size, np.inf),
+        far_lost=np.zeros(inside.size, dtype=bool),
     )
-    todo = np.arange(rows_total)
+    result = Crossings(
+        x=inside.copy(),
+        open=np.zeros(inside.size, dtype=bool),
+        good=np.zeros(inside.size, dtype=bool),
+        theta=inside_theta.copy(),
+        lowest=inside_theta[0],
+        lowest_chi2=np.inf,
+    )
+    x, start, todo = guess.copy(), guess_theta.copy(), np.arange(inside.size)
     for _ in range(ROUNDS):
         if not todo.size:
             break
-        found = _solve(held, which[todo], x[todo], start[todo], near_theta[todo])
+        found = _solve(held, which, x, start, walk.near_theta)
         delta = np.where(found.good, found.chi2 - minimum, np.inf)
         best = int(np.argmin(delta))
         if delta[best] + minimum < result.lowest_chi2:
             result.lowest, result.lowest_chi2 = found.theta[best], float(delta[best] + minimum)
-        hit = np.abs(delta - levels[todo]) < LEVEL_TOLERANCE * np.maximum(1.0, levels[todo])
-        below = delta < levels[todo]
-        at_stop = below & ~hit & (np.abs(x[todo] - stop[todo]) <= 1e-12 * np.maximum(np.abs(stop[todo]), 1e-300))
-        _bracket(todo, below, x, delta, found.theta, near, near_delta, near_theta, far, far_delta)
-        # out of reach and the edge is known well enough
-        width = np.abs(far[todo] - near[todo])
-        span = np.abs(near[todo] - origin[todo])
-        edge = ~hit & (width <= REACH_RESOLUTION * np.where(np.isinf(far_delta[todo]), 1.0, 1e-6) * span)
-
+        hit = np.abs(delta - walk.levels) < LEVEL_TOLERANCE * np.maximum(1.0, walk.levels)
+        newton = _newton(x, delta, found.slopes[:, 0], walk.levels)
+        walk.record(x, delta, found)
+        at_stop, edge = ~hit & walk.arrived(), ~hit & walk.at_an_edge()
         ended = hit | at_stop | edge
         rows = todo[ended]
-        result.x[rows] = np.where(hit, x[todo], near[todo])[ended]
-        result.open[rows] = (at_stop | (edge & np.isinf(far_delta[todo])))[ended]
-        result.good[rows] = True
-        result.theta[rows] = np.where(hit[:, None], found.theta, near_theta[todo])[ended]
-        on = ~ended
-        todo = todo[on]
-        if todo.size:
-            slope = found.slopes[on, 0]
-            x[todo] = _next(x[todo], delta[on], slope, levels[todo], near, near_delta, far, far_delta, origin, stop, todo)
-            start[todo] = _extrapolate(x[todo], near[todo], near_theta[todo], origin[todo], origin_theta[todo])
-    # never reached the level: open if it simply never rises, not good if it was lost
-    left = todo
-    result.x[left] = np.where(np.isnan(far[left]), stop[left], near[left])
-    result.good[left] = np.isnan(far[left])
-    result.theta[left] = near_theta[left]
+        result.x[rows] = np.where(hit, newton, walk.near)[ended]
+        result.open[rows] = (at_stop | (edge & np.isinf(walk.far_delta)))[ended]
+        result.good[rows] = (hit | at_stop | ~walk.far_lost)[ended]
+        result.theta[rows] = np.where(hit[:, None], found.theta, walk.near_theta)[ended]
+        go_on = np.flatnonzero(~ended)
+        todo, which, walk = todo[go_on], which[go_on], walk.rows(go_on)
+        x = walk.next(x[go_on], newton[go_on], delta[go_on], found.slopes[go_on, 0])
+        start = walk.start(x)
+    # never higher than the level: open without end; else lost inside a bracket
+    endless = np.isnan(walk.far)
+    result.x[todo] = np.where(endless, walk.stop, walk.near)
+    result.open[todo], result.good[todo], result.theta[todo] = endless, endless, walk.near_theta
     return result
+
+
+@dataclass
+class _Walk:
+    """Brackets of the rows on their way out; arrays of shape (R,) or (R, n)."""
+
+    levels: np.ndarray
+    stop: np.ndarray
+    side: np.ndarray
+    origin: np.ndarray
+    origin_theta: np.ndarray
+    near: np.ndarray  # outermost point known to be inside
+    near_theta: np.ndarray
+    near_delta: np.ndarray
+    far: np.ndarray  # innermost point known to be outside, nan if none
+    far_delta: np.ndarray
+    far_lost: np.ndarray  # outside only because the minimisation failed
+
+    def rows(self, pick: np.ndarray) -> _Walk:
+        return _Walk(*(getattr(self, field.name)[pick] for field in fields(self)))
+
+    def record(self, x: np.ndarray, delta: np.ndarray, found: HeldPoints) -> None:
+        below = delta < self.levels
+        self.near[below], self.near_delta[below] = x[below], delta[below]
+        self.near_theta[below] = found.theta[below]
+        self.far[~below], self.far_delta[~below] = x[~below], delta[~below]
+        self.far_lost[~below] = (~found.good & np.isfinite(found.chi2))[~below]
+
+    def arrived(self) -> np.ndarray:
+        """Inside at the very last point allowed."""
+        return np.asarray(np.abs(self.near - self.stop) <= 1e-12 * np.abs(self.stop))
+
+    def at_an_edge(self) -> np.ndarray:
+        """The bracket closed on a jump: the reach of the quantity, or a step in the profile."""
+        resolution = np.where(np.isinf(self.far_delta), REACH_RESOLUTION, 1e-9)
+        span = np.maximum(np.abs(self.near - self.origin), 1e-9 * np.abs(self.origin))
+        return np.asarray(np.abs(self.far - self.near) <= resolution * span)
+
+    def next(self, x: np.ndarray, newton: np.ndarray, delta: np.ndarray, slope: np.ndarray) -> np.ndarray:
+        """Next points: Newton on sqrt(Delta), else a chord or bisection, or a longer stride."""
+        side, near, far = self.side, self.near, self.far
+        with np.errstate(invalid="ignore", divide="ignore"):
+            usable = np.isfinite(newton) & (slope * side > 0.0) & (delta > 1e-3 * self.levels)
+            usable &= (newton - near) * side > 0.0
+            low, high = np.sqrt(np.maximum(self.near_delta, 0.0)), np.sqrt(self.far_delta)
+            share = np.where(np.isfinite(high), (np.sqrt(self.levels) - low) / (high - low), 0.5)
+            chord = near + np.clip(share, 0.1, 0.9) * (far - near)
+            between = np.where(usable & ((far - newton) * side > 0.0), newton, chord)
+        stride = near + 3.0 * np.where(near == self.origin, x - self.origin, near - self.origin)
+        ahead = np.where(usable & ((stride - newton) * side > 0.0), newton, stride)
+        ahead = np.where((ahead - self.stop) * side > 0.0, self.stop, ahead)
+        return np.where(np.isfinite(far), between, ahead)
+
+    def start(self, x: np.ndarray) -> np.ndarray:
+        """Parameters for new points: the straight line from the origin through the outermost point inside."""
+        run = self.near - self.origin
+        share = np.divide(x - self.near, run, out=np.zeros_like(x), where=run != 0.0)
+        return self.near_theta + np.clip(share, -2.0, 2.0)[:, None] * (self.near_theta - self.origin_theta)
 
 
 def _solve(
@@ -134,46 +191,18 @@ def _solve(
     found = held.solve(x[:, None], start, which=which[:, None], tolerance=INNER_TOLERANCE)
     failed = np.flatnonzero(~found.good)
     if failed.size:
-        again = held.solve(x[failed, None], fallback[failed], which=which[failed, None], tolerance=INNER_TOLERANCE)
+        again = held.solve(
+            x[failed, None], fallback[failed], which=which[failed, None], tolerance=INNER_TOLERANCE
+        )
         found.improve(failed, again)
     return found
 
 
-def _bracket(todo, below, x, delta, theta, near, near_delta, near_theta, far, far_delta) -> None:
-    rows = todo[below]
-    near[rows], near_delta[rows], near_theta[rows] = x[rows], delta[below], theta[below]
-    rows = todo[~below]
-    far[rows], far_delta[rows] = x[rows], delta[~below]
-
-
-def _next(x, delta, slope, levels, near, near_delta, far, far_delta, origin, stop, todo) -> np.ndarray:
-    """Next points: Newton on sqrt(Delta), else bisection or a longer stride."""
-    near, far, stop, origin = near[todo], far[todo], stop[todo], origin[todo]
-    side = np.where(stop > origin, 1.0, -1.0)
+def _newton(x: np.ndarray, delta: np.ndarray, slope: np.ndarray, levels: np.ndarray) -> np.ndarray:
+    """Where sqrt(Delta), which is straight for a parabola, would reach the level."""
     with np.errstate(invalid="ignore", divide="ignore"):
         root = np.sqrt(np.maximum(delta, 0.0))
-        newton = x + (np.sqrt(levels) - root) * 2.0 * root / slope
-        usable = np.isfinite(newton) & (slope * side > 0.0) & (delta > 1e-3 * levels)
-        bracketed = np.isfinite(far)
-        # a bracket whose outer Delta is finite: chord on sqrt(Delta); else halve
-        low, high = np.sqrt(np.maximum(near_delta[todo], 0.0)), np.sqrt(far_delta[todo])
-        share = np.where(np.isfinite(high), (np.sqrt(levels) - low) / (high - low), 0.5)
-        chord = near + np.clip(share, 0.1, 0.9) * (far - near)
-        inside = (newton - near) * side > 0.0
-        inside &= (far - newton) * side > 0.0
-        between = np.where(usable & inside, newton, chord)
-        stride = near + 3.0 * np.where(near == origin, x - origin, near - origin)
-        ahead = np.where(usable & ((newton - near) * side > 0.0), newton, stride)
-        ahead = np.where((ahead - stride) * side > 0.0, stride, ahead)
-    ahead = np.where((ahead - stop) * side > 0.0, stop, ahead)
-    return np.where(bracketed, between, ahead)
-
-
-def _extrapolate(x, near, near_theta, origin, origin_theta) -> np.ndarray:
-    """Straight line through the point inside and the one the row started from."""
-    run = near - origin
-    share = np.divide(x - near, run, out=np.zeros_like(x), where=run != 0.0)
-    return near_theta + np.clip(share, -2.0, 2.0)[:, None] * (near_theta - origin_theta)
+        return np.asarray(x + (np.sqrt(levels) - root) * 2.0 * root / slope)
 
 
 class IntervalTable(dict):
@@ -244,7 +273,9 @@ def profile_intervals(
 
     levels = np.asarray(delta_chi2, dtype=float)
     count, q = levels.size, len(names)
-    which, side, level = (a.ravel() for a in np.meshgrid(np.arange(q), [-1.0, 1.0], np.arange(count), indexing="ij"))
+    which, side, level = (
+        a.ravel() for a in np.meshgrid(np.arange(q), [-1.0, 1.0], np.arange(count), indexing="ij")
+    )
     ends = np.full((q, 2, count), np.nan)
     opens = np.ones((q, 2, count), dtype=bool)
     good = np.zeros((q, 2, count), dtype=bool)

@@ -326,7 +326,11 @@ def _coarse(
     starts += held.scatter(minima[0], len(points), SCATTERED[len(nodes)])
     stacked, sets = np.tile(points, (len(starts), 1)), np.arange(len(starts)) * len(points)
     tried = held.solve(
-        stacked, np.concatenate(starts), tolerance=tolerance, distance=distance, max_iterations=COARSE_ITERATIONS
+        stacked,
+        np.concatenate(starts),
+        tolerance=tolerance,
+        distance=distance,
+        max_iterations=COARSE_ITERATIONS,
     )
     best = tried.rows(every)
     best.linearisations = tried.linearisations
@@ -385,7 +389,7 @@ def _suspicious(found: HeldPoints, points: np.ndarray, source: np.ndarray, targe
     bend = np.abs(((found.slopes[target] - found.slopes[source]) * step).sum(axis=1))
     with np.errstate(invalid="ignore"):
         excess = found.chi2[target] - found.chi2[source] - expected
-        return ~found.good[target] | (excess > SUSPICIOUS + 0.01 * bend)
+        return np.asarray(~found.good[target] | (excess > SUSPICIOUS + 0.01 * bend))
 
 
 def _try(

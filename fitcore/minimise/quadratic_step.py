@@ -159,7 +159,7 @@ def _solve_pinned(problem: QuadraticBatch, held: np.ndarray, active: np.ndarray)
     added, right = problem.damping, -problem.half_gradient
     if any_pinned:
         # relative to the diagonal, so that no choice of units can overwhelm it
-        weight = FROZEN * np.maximum(pattern.diagonal(problem.values) + added, np.finfo(float).tiny**0.5)
+        weight = FROZEN * np.maximum(pattern.diagonal(problem.values) + added, np.finfo(float).tiny ** 0.5)
         bound = np.where(active > 0, problem.high, problem.low)
         added = np.where(pinned, weight, added)
         right = np.where(pinned, weight * np.where(pinned, bound, 0.0), right)
@@ -180,7 +180,14 @@ def _solve_pinned(problem: QuadraticBatch, held: np.ndarray, active: np.ndarray)
     product = pattern.product(problem.values, step)
     decrease = -(step * (2.0 * problem.half_gradient + product)).sum(axis=0)
     return QuadraticStep(
-        step, product, decrease, multipliers, reach, active.copy(), factor.singular, np.ones(batch, dtype=bool)
+        step,
+        product,
+        decrease,
+        multipliers,
+        reach,
+        active.copy(),
+        factor.singular,
+        np.ones(batch, dtype=bool),
     )
 
 

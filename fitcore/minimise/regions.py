@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 POLISH_ROUNDS = 8
 VERTEX_TOLERANCE = 3e-3
-SUBGRID = 17
+SUBGRID = 37
 DEEPEST = 3
 
 
@@ -42,7 +42,9 @@ class Region:
 def grid_intervals(profile: Profile, level: float) -> list[tuple[float, float, bool, bool]]:
     """All intervals of a one-dimensional profile below `level` (`Profile.interval`)."""
     if len(profile.names) != 1:
-        raise InputError(f"interval() is for one quantity; this profile has {' and '.join(profile.names)}: use regions()")
+        raise InputError(
+            f"interval() is for one quantity; this profile has {' and '.join(profile.names)}: use regions()"
+        )
     held = HeldQuantities(profile.problem, profile.names)
     x, delta, theta = profile.grids[0], profile.delta_chi2, profile.parameters
     own = held.values(profile.minima)[:, 0]
@@ -96,7 +98,9 @@ def grid_intervals(profile: Profile, level: float) -> list[tuple[float, float, b
 def find_regions(profile: Profile, level: float, *, depth: int = 0) -> list[Region]:
     """All regions of a two-dimensional profile below `level` (`Profile.regions`)."""
     if len(profile.names) != 2:
-        raise InputError(f"regions() needs two quantities; this profile has {profile.names[0]}: use interval()")
+        raise InputError(
+            f"regions() needs two quantities; this profile has {profile.names[0]}: use interval()"
+        )
     from contourpy import contour_generator
 
     x, y = profile.grids
@@ -110,7 +114,9 @@ def find_regions(profile: Profile, level: float, *, depth: int = 0) -> list[Regi
         if outlines:
             vertices, polished = _polish(profile, np.concatenate(outlines), level)
             cuts = np.cumsum([len(line) for line in outlines])[:-1]
-            for line, part, good in zip(outlines, np.split(vertices, cuts), np.split(polished, cuts), strict=True):
+            for line, part, good in zip(
+                outlines, np.split(vertices, cuts), np.split(polished, cuts), strict=True
+            ):
                 found.append(_region(line, part, good))
     return found + _small_regions(profile, level, depth)
 
@@ -157,15 +163,15 @@ def _polish(profile: Profile, vertices: np.ndarray, level: float) -> tuple[np.nd
 
 def _from_both_ends(held: HeldQuantities, profile: Profile, points: np.ndarray) -> HeldPoints:
     """Profile at vertices, which lie on grid lines, from the solutions at both ends of their grid line segment."""
-    ends: list[list[np.ndarray]] = [[], []]
+    low_end, high_end = [], []
     for k, grid in enumerate(profile.grids):
-        left = np.clip(np.searchsorted(grid, points[:, k], side="right") - 1, 0, grid.size - 1)
-        right = np.clip(np.searchsorted(grid, points[:, k], side="left"), 0, grid.size - 1)
-        ends[0].append(left)
-        ends[1].append(right)
-    left, right = (held.solve(points, profile.parameters[tuple(end)], tolerance=1e-5) for end in ends)
-    left.improve(np.arange(len(points)), right)
-    return left
+        low_end.append(np.clip(np.searchsorted(grid, points[:, k], side="right") - 1, 0, grid.size - 1))
+        high_end.append(np.clip(np.searchsorted(grid, points[:, k], side="left"), 0, grid.size - 1))
+    found = held.solve(points, profile.parameters[tuple(low_end)], tolerance=1e-5)
+    found.improve(
+        np.arange(len(points)), held.solve(points, profile.parameters[tuple(high_end)], tolerance=1e-5)
+    )
+    return found
 
 
 def _small_regions(profile: Profile, level: float, depth: int) -> list[Region]:
@@ -177,23 +183,41 @@ def _small_regions(profile: Profile, level: float, depth: int) -> list[Region]:
     held = HeldQuantities(profile.problem, profile.names)
     own = held.values(profile.minima)
     delta = profile.problem.chi2(profile.minima) - profile.minimum
+    inside = profile.delta_chi2 < level
     found: list[Region] = []
-    seen: set[tuple[int, int]] = set()
     for point, height in zip(own, delta, strict=True):
         cell = []
         for value, grid in zip(point, profile.grids, strict=True):
-            if not grid[0] <= value <= grid[-1]:
-                break
-            cell.append(int(np.clip(np.searchsorted(grid, value) - 1, 0, grid.size - 2)))
-        if len(cell) < 2 or not height < level or tuple(cell) in seen:
+            if grid[0] <= value <= grid[-1]:
+                cell.append(int(np.clip(np.searchsorted(grid, value) - 1, 0, grid.size - 2)))
+        if len(cell) < 2 or not height < level or any(_contains(region, point) for region in found):
             continue
-        i, j = cell
-        if (profile.delta_chi2[i : i + 2, j : j + 2] < level).any():
+        if inside[cell[0] : cell[0] + 2, cell[1] : cell[1] + 2].any():
             continue
-        seen.add((i, j))
-        fine = [np.linspace(g[k], g[k + 1], SUBGRID) for g, k in zip(profile.grids, cell, strict=True)]
+        fine = [
+            np.linspace(grid[max(k - 1, 0)], grid[min(k + 2, grid.size - 1)], SUBGRID)
+            for grid, k in zip(profile.grids, cell, strict=True)
+        ]
         local = make_profile(
-            profile.problem, profile.names, fine, start=profile.minimum_parameters, minima=list(profile.minima)
+            profile.problem,
+            profile.names,
+            fine,
+            start=profile.minimum_parameters,
+            minima=list(profile.minima),
         )
-        found += find_regions(local, level, depth=depth + 1)
+        # other minima in the window have windows of their own
+        found += [
+            region for region in find_regions(local, level, depth=depth + 1) if _contains(region, point)
+        ]
     return found
+
+
+def _contains(region: Region, point: np.ndarray) -> bool:
+    """Is the point inside the outline (crossing number), or inside the frame of an open one?"""
+    x, y = region.vertices.T
+    if not region.closed:
+        return bool(x.min() <= point[0] <= x.max() and y.min() <= point[1] <= y.max())
+    above = y > point[1]
+    crossing = np.flatnonzero(above[1:] != above[:-1])
+    share = (point[1] - y[crossing]) / (y[crossing + 1] - y[crossing])
+    return bool(np.sum(x[crossing] + share * (x[crossing + 1] - x[crossing]) > point[0]) % 2)

@@ -50,7 +50,8 @@ class Pattern:
 
     def diagonal(self, values: np.ndarray) -> np.ndarray:
         """Diagonal elements, (n, B), of matrices stored as (nnz, B)."""
-        return values[self.diagonal_of]
+        diagonal: np.ndarray = values[self.diagonal_of]
+        return diagonal
 
     def product(self, values: np.ndarray, vectors: np.ndarray) -> np.ndarray:
         """Matrix times vector for every member of the batch: (nnz, B), (n, B) -> (n, B)."""
@@ -123,7 +124,7 @@ class Factor:
     def solve(self, right: np.ndarray) -> np.ndarray:
         """Solve for one right-hand side, (n, B), or k of them, (n, k, B), per matrix; same shape comes back."""
         pattern = self.pattern
-        x = right[pattern.order]
+        x: np.ndarray = right[pattern.order]
         many = right.ndim == 3
         pivots = self.pivots[:, None, :] if many else self.pivots
         below = self.below[:, None, :] if many else self.below
@@ -164,7 +165,13 @@ def analyse(rows: np.ndarray, cols: np.ndarray, size: int) -> Pattern:
 def _analyse(row_bytes: bytes, col_bytes: bytes, size: int) -> Pattern:
     rows = np.frombuffer(row_bytes, dtype=np.int64)
     cols = np.frombuffer(col_bytes, dtype=np.int64)
-    inside = rows.size == cols.size and rows.size and rows.max() < size and cols.min() >= 0 and (rows >= cols).all()
+    inside = (
+        rows.size == cols.size
+        and rows.size
+        and rows.max() < size
+        and cols.min() >= 0
+        and (rows >= cols).all()
+    )
     if not inside or len(set(zip(rows, cols, strict=True))) != rows.size or np.sum(rows == cols) != size:
         raise ValueError(f"not the lower triangle of a {size} x {size} pattern with its whole diagonal")
     order, structures = _eliminate(rows, cols, size)

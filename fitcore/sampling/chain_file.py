@@ -75,7 +75,8 @@ class ChainFile:
         self.path = path
         self.header = header
         self.notices = notices
-        self._file = file
+        # A reader keeps no file open: it would hinder a writer in the same process.
+        self._file = None if lock is None else file
         self._lock = lock
         self._buffer: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
         self._buffer_state: Any = None
@@ -185,7 +186,7 @@ class ChainFile:
         for attempt in range(_READ_ATTEMPTS):
             try:
                 file, header, notices = _open_checked(path, "r")
-                with store_errors(path, "read the file"):
+                with file, store_errors(path, "read the file"):
                     return cls(path, file, header, None, notices)
             except StoreError:
                 # A writer may be in the middle of a flush; it takes milliseconds.
@@ -195,11 +196,11 @@ class ChainFile:
         raise AssertionError("unreachable")
 
     def close(self) -> None:
-        """Commit what is buffered, close the file and give the lock back."""
-        if self._file is None:
+        """Commit what is buffered, close the file and give the lock back; a reader has nothing to close."""
+        if self._file is None or self._lock is None:
             return
         try:
-            if self._lock is not None and not self._failed:
+            if not self._failed:
                 self.commit()
                 with store_errors(self.path, "close the file"):
                     self._file["bookkeeping/closed_at"][()] = self.committed_steps
@@ -213,8 +214,19 @@ class ChainFile:
                 with store_errors(self.path, "close the file"):
                     file.close()
             finally:
-                if self._lock is not None:
-                    self._lock.release()
+                self._lock.release()
+
+    @contextlib.contextmanager
+    def _opened(self, doing: str) -> Iterator[Any]:
+        """The open file of a writer, or the file opened for this one use."""
+        with store_errors(self.path, doing):
+            if self._lock is not None:
+                yield self._file
+            else:
+                import h5py
+
+                with h5py.File(self.path, "r", locking=False) as file:
+                    yield file
 
     def __enter__(self) -> ChainFile:
         return self
@@ -242,7 +254,8 @@ class ChainFile:
     @property
     def derived_names(self) -> tuple[str, ...]:
         """Names of the stored derived quantities."""
-        return tuple(sorted(self._file["derived"]))
+        with self._opened("read the derived quantities") as file:
+            return tuple(sorted(file["derived"]))
 
     def check_problem(self, problem: Any) -> None:
         """Refuse a problem that is not the one sampled.
@@ -286,19 +299,20 @@ class ChainFile:
             When a derived quantity is not stored for all steps.
         """
         for name in derived:
-            if name not in self._file["derived"] or self.derived_steps(name) < self.committed_steps:
+            if self.derived_steps(name) < self.committed_steps or not self.committed_steps:
                 raise UnknownNameError(name, "derived quantity of this chain", self.derived_names)
         begin = 0
-        for number, end in enumerate(self._block_ends):
+        ends = [int(end) for end in self._block_ends]
+        for number, end in enumerate(ends):
             if end > start:
-                yield self._read_block(number, begin, int(end), max(start, begin), derived, verify)
-            begin = int(end)
+                yield self._read_block(number, begin, end, max(start, begin), derived, verify)
+            begin = end
 
     def _read_block(
         self, number: int, begin: int, end: int, cut: int, derived: tuple[str, ...], verify: bool
     ) -> Block:
-        file, rows = self._file, slice(begin, end)
-        with store_errors(self.path, f"read steps {begin} to {end - 1}"):
+        rows = slice(begin, end)
+        with self._opened(f"read steps {begin} to {end - 1}") as file:
             chain = file["chain"][rows]
             log_posterior = file["log_posterior"][rows]
             accepted = file["accepted"][rows]
@@ -306,11 +320,10 @@ class ChainFile:
             if verify:
                 state = file["random_state"][number]
                 found = block_checksum(begin, chain, log_posterior, accepted, state)
-                self._compare(number, begin, end, found, "bookkeeping/block_checksum")
+                self._compare(file, number, begin, end, found, "bookkeeping/block_checksum")
                 for name, value in values.items():
-                    self._compare(
-                        number, begin, end, block_checksum(begin, value), f"bookkeeping/derived/{name}"
-                    )
+                    found = block_checksum(begin, value)
+                    self._compare(file, number, begin, end, found, f"bookkeeping/derived/{name}")
         keep = slice(cut - begin, None)
         return Block(
             cut,
@@ -320,8 +333,8 @@ class ChainFile:
             {name: value[keep] for name, value in values.items()},
         )
 
-    def _compare(self, number: int, begin: int, end: int, found: int, dataset: str) -> None:
-        if found != int(self._file[dataset][number]):
+    def _compare(self, file: Any, number: int, begin: int, end: int, found: int, dataset: str) -> None:
+        if found != int(file[dataset][number]):
             raise StoreError(
                 f"{self.path}: steps {begin} to {end - 1} do not match their checksum ({dataset}); the file "
                 "is damaged. Restore it from a copy; nothing was changed"
@@ -354,14 +367,15 @@ class ChainFile:
 
     def read_proposal(self) -> dict[str, np.ndarray]:
         """The arrays of :meth:`write_proposal`."""
-        with store_errors(self.path, "read the proposal"):
-            return {name: data[()] for name, data in self._file["proposal"].items()}
+        with self._opened("read the proposal") as file:
+            return {name: data[()] for name, data in file["proposal"].items()}
 
     def derived_steps(self, name: str) -> int:
         """Number of leading steps for which a derived quantity is stored."""
-        if name not in self._file["derived"]:
-            return 0
-        return int(self._file[f"derived/{name}"].attrs["committed_steps"])
+        with self._opened("read the derived quantities") as file:
+            if name not in file["derived"]:
+                return 0
+            return int(file[f"derived/{name}"].attrs["committed_steps"])
 
     def write_derived(self, name: str, block: int, values: np.ndarray, *, unit: str = "1", title: str = "") -> None:
         """Store a derived quantity for committed block number ``block`` (blocks in order)."""
@@ -423,8 +437,8 @@ class ChainFile:
             return self._buffer_state
         if not self.committed_steps:
             return None
-        with store_errors(self.path, "read the generator state"):
-            return unpack_state(self._file["random_state"][len(self._block_ends) - 1])
+        with self._opened("read the generator state") as file:
+            return unpack_state(file["random_state"][len(self._block_ends) - 1])
 
     def reset(self, walkers: int, parameters: int) -> None:
         """Refuse to wipe steps or change the shape; a no-op on an empty chain.
@@ -525,8 +539,8 @@ class ChainFile:
             raise UnknownNameError(name, "chain content", ("chain", "log_prob"))
         dataset = {"chain": "chain", "log_prob": "log_posterior"}[name]
         first = discard + thin - 1
-        with store_errors(self.path, f"read {dataset}"):
-            stored = self._file[dataset][first : self.committed_steps : thin]
+        with self._opened(f"read {dataset}") as file:
+            stored = file[dataset][first : self.committed_steps : thin]
         parts = [stored] if first < self.committed_steps else []
         column = 0 if name == "chain" else 1
         parts += [
@@ -564,9 +578,9 @@ class ChainFile:
 
     def _count_accepted(self) -> np.ndarray:
         total = np.zeros(self.shape[0])
-        with store_errors(self.path, "read the acceptance"):
+        with self._opened("read the acceptance") as file:
             for begin in range(0, self.committed_steps, 4096):
-                total += self._file["accepted"][begin : min(begin + 4096, self.committed_steps)].sum(axis=0)
+                total += file["accepted"][begin : min(begin + 4096, self.committed_steps)].sum(axis=0)
         return total
 
     def _reserve(self, size: int) -> None:

@@ -168,7 +168,8 @@ def effective_sample_size(draws: np.ndarray) -> float:
     rho[0] = 1.0
     pairs = rho[: n // 2 * 2].reshape(-1, 2).sum(axis=1)
     ends = np.flatnonzero(pairs <= 0.0)
-    last = int(ends[0]) if len(ends) else len(pairs)
+    # Lags close to the length of the chains are noise and never summed.
+    last = min(int(ends[0]) if len(ends) else len(pairs), max((n - 3) // 2, 1))
     # The even term of the first negative pair still counts when it is positive.
     extra = max(float(rho[2 * last]), 0.0) if last < len(pairs) else 0.0
     tau = -1.0 + 2.0 * float(np.minimum.accumulate(pairs[:last]).sum()) + extra

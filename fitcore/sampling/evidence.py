@@ -15,6 +15,7 @@ from observables.errors import InputError
 __all__ = ["Evidence", "evidence", "pareto_k"]
 
 PARETO_LIMIT = 0.7
+_MOST_DEGREES = 16.0
 
 
 @dataclass(frozen=True)
@@ -97,6 +98,8 @@ def evidence(problem: Any, chain: Any, *, draws: int = 40_000, rng: Any = None, 
     fitted = StudentMixture.from_draws(samples, labels, lower, upper, spread)
     pick = random.integers(len(samples), size=min(4000, len(samples)))
     fitted, _ = best_degrees(target, fitted, samples[pick], log_posterior[pick], random)
+    # Heavier tails than a chain's proposal needs: the weights then have their maximum inside the posterior.
+    fitted = fitted.with_degrees(min(fitted.degrees, _MOST_DEGREES))
     points = fitted.draw(draws, random)
     log_weights = target(points) - fitted.log_density(points)
     return _estimate(log_weights)

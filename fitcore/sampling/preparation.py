@@ -98,8 +98,9 @@ def checked_modes(problem: Any, target: Target, modes: Sequence[Any]) -> list[Mo
             complaints.append(f"mode {number}: outside the bounds in {', '.join(outside)}")
         elif not np.isfinite(target(point[None])[0]):
             # A fit may end exactly on a bound where the prior vanishes: a hair inside is good enough.
-            inside = np.clip(point, lower + 1e-9 * (upper - lower), upper - 1e-9 * (upper - lower))
-            inside = np.where(np.isfinite(inside), inside, point)
+            size = upper - lower
+            margin = np.where(np.isfinite(size), 1e-9 * np.where(np.isfinite(size), size, 1.0), 0.0)
+            inside = np.clip(point, lower + margin, upper - margin)
             if np.isfinite(target(inside[None])[0]):
                 checked.append((inside, covariance, float(weight)))
             else:

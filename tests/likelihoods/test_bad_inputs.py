@@ -49,7 +49,8 @@ PAIR = '[correlated 1 "pair"] '
 
 SINGLE = [
     ("unknown-key", "error = 0.1", "eror = 0.1", [
-        f"my.toml:1: {ONE}error is missing; write error = NUMBER, error = [PLUS, MINUS] or errors = {{ NAME = NUMBER }}",
+        f"my.toml:1: {ONE}error is missing; write error = NUMBER, error = [PLUS, MINUS] or "
+        "errors = { NAME = NUMBER }",
         f'my.toml:5: {ONE}unknown key "eror"; did you mean "error"?',
     ]),
     ("unknown-quantity", '"tide_frequency"', '"tide_hight"', [
@@ -185,7 +186,8 @@ IN_BLOCK = [
         f"my.toml:8: {PAIR}correlation row 2 column 1 must be finite, not nan",
     ]),
     ("diagonal", "[[1.0, 0.5], [0.5, 1.0]]", "[[1.0, 0.5],\n [0.5, 4.0]]", [
-        f"my.toml:8: {PAIR}the correlation has 4 on its diagonal (row 2); must be 1; write covariance = ... if it is one",
+        f"my.toml:8: {PAIR}the correlation has 4 on its diagonal (row 2); must be 1; write covariance = ... if "
+        "it is one",
     ]),
     ("flat-list", "[[1.0, 0.5], [0.5, 1.0]]", "[1.0, 0.5]", [
         f"my.toml:7: {PAIR}correlation must be a nested list or the name of a CSV file, not a list",
@@ -234,7 +236,9 @@ IN_BLOCK = [
     ]),
 ]  # fmt: skip
 
-TWO = GOOD + "\n" + GOOD.replace('"one"', '"two"').replace("tide_frequency", "tide_mass").replace("1/ps", "GeV")
+TWO = (
+    GOOD + "\n" + GOOD.replace('"one"', '"two"').replace("tide_frequency", "tide_mass").replace("1/ps", "GeV")
+)
 
 WHOLE = [
     ("empty", "", ["my.toml:1: the file is empty; `weakmix new` writes a template"]),
@@ -289,20 +293,27 @@ WHOLE = [
     ("twice-correlated", TWO + 2 * '[[correlation]]\nbetween = ["one", "two"]\ncoefficient = 0.2\n', [
         "my.toml:19: [correlation] the pair was already given in line 16; keep one",
     ]),
-    ("correlated-in-block", BLOCK + '[[correlation]]\nbetween = ["pair:tide_depth", "pair:tide_height"]\ncoefficient = 0.1', [
+    ("correlated-in-block", BLOCK
+     + '[[correlation]]\nbetween = ["pair:tide_depth", "pair:tide_height"]\ncoefficient = 0.1', [
         'my.toml:9: [correlation] "pair:tide_depth" and "pair:tide_height" are already correlated by the block "pair"; '
         "state a correlation once",
     ]),
     ("correlated-by-source", TWO.replace("error = 0.1", "errors = { statistical = 0.1, tagging = 0.1 }")
      + '[[correlation]]\nbetween = ["two", "one"]\ncoefficient = 0.1', [
-        'my.toml:16: [correlation] "two" and "one" are already correlated by the shared error source "tagging"; state a '
-        "correlation once",
+        'my.toml:16: [correlation] "two" and "one" are already correlated by the shared error source "tagging"; '
+        "state a correlation once",
     ]),
     ("combined", BLOCK + GOOD + '[[correlation]]\nbetween = ["one", "pair:tide_depth"]\ncoefficient = 0.9\n'
      + '[[correlation]]\nbetween = ["one", "pair:tide_height"]\ncoefficient = -0.9\n', [
         'my.toml:1: [correlated 1 "pair"] "pair:tide_height" the combined correlation matrix of "pair:tide_height", '
         '"pair:tide_depth", "one" is not positive definite: lowest eigenvalue -0.547; check coefficients and shared '
         "error sources",
+    ]),
+    ("absurd-numbers", changed(GOOD, "error = 0.1", "error = 1e-300"), [
+        f"my.toml:1: {ONE}has a value or error outside 1e-100 to 1e+100 1/ps; check the numbers and the unit",
+    ]),
+    ("absurd-asymmetry", changed(GOOD, "error = 0.1", "error = [1e-9, 1.0]"), [
+        f"my.toml:1: {ONE}has errors that differ by more than a factor 1e+06; check the numbers and the unit",
     ]),
     ("fully-shared", TWO.replace("error = 0.1", "errors = { tagging = 0.1 }"), [
         'my.toml:1: [measurement 1 "one"] the combined correlation matrix of "one", "two" is not positive definite: '
@@ -312,8 +323,8 @@ WHOLE = [
         'my.toml:8: [parameters.tide_mas] unknown parameter "tide_mas"; closest: tide_mass, tide_phase, tide_angle',
     ]),
     ("set-quantity", GOOD + "[parameters.tide_height]\nstart = 1.0\n", [
-        'my.toml:8: [parameters.tide_height] "tide_height" is computed from others; only parameters and constants can be '
-        "set",
+        'my.toml:8: [parameters.tide_height] "tide_height" is computed from others; only parameters and constants '
+        "can be set",
     ]),
     ("fixed-nowhere", GOOD + "[parameters.tide_mass]\nfixed = true\n", [
         "my.toml:9: [parameters.tide_mass] a fixed parameter needs its value; write start = NUMBER",
@@ -344,7 +355,9 @@ WHOLE = [
 ]  # fmt: skip
 
 
-@pytest.mark.parametrize(("old", "new", "expected"), [case[1:] for case in SINGLE], ids=[case[0] for case in SINGLE])
+@pytest.mark.parametrize(
+    ("old", "new", "expected"), [case[1:] for case in SINGLE], ids=[case[0] for case in SINGLE]
+)
 def test_measurement(load, old: str, new: str, expected: list[str]) -> None:
     assert list(problems_of(load, changed(GOOD, old, new))) == expected
 
@@ -361,7 +374,9 @@ def test_file(load, text: str, expected: list[str] | None) -> None:
     problems = problems_of(load, text)
     if expected is None:  # depends on which sets are bundled
         assert len(problems) == 1
-        assert problems[0].startswith('my.toml:1: include "no-such-set": no-such-set: no such file and no bundled ')
+        assert problems[0].startswith(
+            'my.toml:1: include "no-such-set": no-such-set: no such file and no bundled '
+        )
         assert re.search(r"; closest: \S+, \S+, \S+$", problems[0])
     else:
         assert list(problems) == expected
@@ -373,7 +388,9 @@ def test_good_files_load(load) -> None:
 
 def test_all_problems_of_all_files_are_shown_together(write, load) -> None:
     write("base.toml", changed(GOOD, "error = 0.1", "error = 0"))
-    problems = problems_of(load, 'include = ["base.toml"]\n' + changed(TWO, 'quantity = "tide_mass"', 'quantity = "x"'))
+    problems = problems_of(
+        load, 'include = ["base.toml"]\n' + changed(TWO, 'quantity = "tide_mass"', 'quantity = "x"')
+    )
     assert [problem.split(": ")[0] for problem in problems] == ["my.toml:12", "base.toml:5"]
 
 
@@ -387,13 +404,15 @@ def test_circular_include_through_others(write, load) -> None:
 
 def test_file_that_is_not_there(write, catalogue) -> None:
     write("tidal.toml", GOOD)
-    with pytest.raises(InputError, match=r"^tidl.toml: no such file and no bundled inputs of that name; closest: tidal"):
+    with pytest.raises(
+        InputError, match=r"^tidl.toml: no such file and no bundled inputs of that name; closest: tidal"
+    ):
         load_inputs("tidl.toml", catalogue=catalogue)
 
 
 def test_directory(write, tmp_path: Path, catalogue) -> None:
     (tmp_path / "folder").mkdir()
-    with pytest.raises(InputError, match="^folder: is a directory; give the inputs file inside it$"):
+    with pytest.raises(InputError, match=r"^folder: is a directory; give the inputs file inside it$"):
         load_inputs("folder", catalogue=catalogue)
 
 
@@ -406,14 +425,14 @@ def test_impossible_name(name: str, catalogue) -> None:
 def test_bytes_that_are_not_text(tmp_path: Path, catalogue, monkeypatch) -> None:
     monkeypatch.chdir(tmp_path)
     (tmp_path / "my.toml").write_bytes(b'title = "x"\nnote = "\xff\xfe"\n')
-    with pytest.raises(InputError, match="^my.toml:2: not UTF-8 text; save the file as UTF-8$"):
+    with pytest.raises(InputError, match=r"^my\.toml:2: not UTF-8 text; save the file as UTF-8$"):
         load_inputs("my.toml", catalogue=catalogue)
 
 
 @pytest.mark.skipif(os.name != "posix" or os.geteuid() == 0, reason="permissions bind ordinary users only")
 def test_unreadable_file(write, catalogue) -> None:
     write("my.toml", GOOD).chmod(0)
-    with pytest.raises(InputError, match="^my.toml: cannot be read: Permission denied$"):
+    with pytest.raises(InputError, match=r"^my\.toml: cannot be read: Permission denied$"):
         load_inputs("my.toml", catalogue=catalogue)
 
 

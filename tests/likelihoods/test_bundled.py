@@ -17,9 +17,13 @@ def test_published_sets_are_bundled() -> None:
 
 
 def test_closest_names() -> None:
-    with pytest.raises(InputError, match=r'^no bundled inputs file "averages-2062"; closest: averages-2026, '):
+    with pytest.raises(
+        InputError, match=r'^no bundled inputs file "averages-2062"; closest: averages-2026, '
+    ):
         bundled_path("averages-2062")
-    with pytest.raises(InputError, match=r"^averages-2062: no such file and no bundled .*; closest: averages-2026, "):
+    with pytest.raises(
+        InputError, match=r"^averages-2062: no such file and no bundled .*; closest: averages-2026, "
+    ):
         load_inputs("averages-2062")
 
 

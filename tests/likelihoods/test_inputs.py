@@ -14,7 +14,13 @@ from likelihoods import Inputs, Notice, ParameterSetting, Prior, average, load_i
 from observables.errors import InputError, UnknownNameError
 
 
-def entry(identity: str, extra: str = "error = 0.1", quantity: str = "tide_height", unit: str = "1", value: float = 1.0) -> str:
+def entry(
+    identity: str,
+    extra: str = "error = 0.1",
+    quantity: str = "tide_height",
+    unit: str = "1",
+    value: float = 1.0,
+) -> str:
     return (
         f'[[measurement]]\nid = "{identity}"\nquantity = "{quantity}"\nvalue = {value}\nunit = "{unit}"\n'
         f'source = "invented"\n{extra}\n'
@@ -72,7 +78,13 @@ class TestMeasurement:
         inputs = load(entry("one"))
         (read,) = inputs.entries
         assert (read.kind, read.groups, read.overlaps, read.inflate) == ("experiment", (), (), 1.0)
-        assert (read.flat_halfwidth, read.pdg, read.recalled, read.note, read.part_of) == (0.0, None, False, None, None)
+        assert (read.flat_halfwidth, read.pdg, read.recalled, read.note, read.part_of) == (
+            0.0,
+            None,
+            False,
+            None,
+            None,
+        )
         assert (inputs.title, inputs.name, inputs.path, inputs.revision) == ("my", "my", "my.toml", 1)
         assert inputs.notices == ()
 
@@ -98,7 +110,9 @@ class TestMeasurement:
         assert_allclose(inputs.terms.standardised([1.0]), [1.0])
 
     def test_parameters_and_constants_can_be_measured(self, load) -> None:
-        inputs = load(entry("p", "error = 1.0", "tide_mass", "GeV") + entry("c", "error = 1.0", "tide_constant", "GeV"))
+        inputs = load(
+            entry("p", "error = 1.0", "tide_mass", "GeV") + entry("c", "error = 1.0", "tide_constant", "GeV")
+        )
         assert [read.quantity for read in inputs.entries] == ["tide_mass", "tide_constant"]
 
 
@@ -137,9 +151,14 @@ class TestErrorSources:
         """The same number in other units gives the same correlation."""
         errors = "errors = {{ statistical = {0}, energy = {0} }}"
         inputs = load(
-            entry("a", errors.format(0.003), "tide_mass", "GeV") + entry("b", errors.format(5.0), "tide_constant", "MeV")
+            entry("a", errors.format(0.003), "tide_mass", "GeV")
+            + entry("b", errors.format(5.0), "tide_constant", "MeV")
         )
         assert_allclose(inputs.correlation_matrix()[0, 1], 0.5, rtol=1e-14)
+        assert_allclose([read.errors["energy"] for read in inputs.entries], [0.003, 0.005], rtol=1e-15)
+        assert_allclose(
+            [read.plus for read in inputs.entries], np.sqrt(2.0) * np.array([0.003, 0.005]), rtol=1e-15
+        )
 
 
 class TestCorrelated:
@@ -155,7 +174,10 @@ class TestCorrelated:
         assert_array_equal(inputs.correlation_matrix(), expected)
 
     def test_own_ids(self, load) -> None:
-        inputs = load(BLOCK + 'ids = ["h", "m"]\npdg = ["S001", ""]\nflat_halfwidths = [0.0, 100.0]\ninflate = [1.0, 3.0]')
+        inputs = load(
+            BLOCK
+            + 'ids = ["h", "m"]\npdg = ["S001", ""]\nflat_halfwidths = [0.0, 100.0]\ninflate = [1.0, 3.0]'
+        )
         assert inputs.ids == ("h", "m")
         assert [read.pdg for read in inputs.entries] == ["S001", None]
         assert [read.flat_halfwidth for read in inputs.entries] == [0.0, 0.1]
@@ -186,7 +208,9 @@ class TestCorrelated:
 
     def test_between_entries(self, load) -> None:
         inputs = load(
-            entry("one") + BLOCK + '[[correlation]]\nbetween = ["pair:tide_mass", "one"]\ncoefficient = 0.5\nsource = "x"'
+            entry("one")
+            + BLOCK
+            + '[[correlation]]\nbetween = ["pair:tide_mass", "one"]\ncoefficient = 0.5\nsource = "x"'
         )
         assert inputs.correlation_matrix()[0, 2] == inputs.correlation_matrix()[2, 0] == 0.5
         assert [block.indices.tolist() for block in inputs.terms.correlation_blocks] == [[0, 1, 2]]
@@ -234,7 +258,10 @@ class TestInclude:
         assert notices(inputs, "replaced") == [("a", "my.toml:3 replaces the entry of base.toml:1")]
 
     def test_drop(self, write, load) -> None:
-        write("base.toml", entry("a") + BLOCK + '[[correlation]]\nbetween = ["a", "pair:tide_mass"]\ncoefficient = 0.1')
+        write(
+            "base.toml",
+            entry("a") + BLOCK + '[[correlation]]\nbetween = ["a", "pair:tide_mass"]\ncoefficient = 0.1',
+        )
         inputs = load('include = ["base.toml"]\ndrop = ["a"]')
         assert inputs.ids == ("pair:tide_height", "pair:tide_mass")
         assert inputs.correlations == ()
@@ -246,23 +273,34 @@ class TestInclude:
 
     def test_unknown_drop_names_the_closest(self, write, load) -> None:
         write("base.toml", entry("tide-a") + entry("tide-b") + entry("tide-c") + entry("other"))
-        with pytest.raises(InputError, match=r'^my.toml:2: drop "tide-d": .*; closest: tide-c, tide-b, tide-a$'):
+        with pytest.raises(
+            InputError, match=r'^my.toml:2: drop "tide-d": .*; closest: tide-c, tide-b, tide-a$'
+        ):
             load('include = ["base.toml"]\ndrop = ["tide-d"]')
 
     def test_replacing_a_block(self, write, load) -> None:
         write("base.toml", BLOCK + entry("a"))
-        assert load('include = ["base.toml"]\n' + BLOCK.replace("-0.25", "0.5")).correlation_matrix()[1, 2] == 0.5
+        assert (
+            load('include = ["base.toml"]\n' + BLOCK.replace("-0.25", "0.5")).correlation_matrix()[1, 2]
+            == 0.5
+        )
         member = load('include = ["base.toml"]\n' + entry("pair:tide_height", value=3.0))
         assert_array_equal(member.correlation_matrix(), np.eye(3))
         assert load('include = ["base.toml"]\n' + entry("pair", value=3.0)).ids == ("a", "pair")
 
     def test_correlation_with_an_included_entry(self, write, load) -> None:
         write("base.toml", entry("a"))
-        inputs = load('include = ["base.toml"]\n' + entry("b") + '[[correlation]]\nbetween = ["a", "b"]\ncoefficient = 0.3')
+        inputs = load(
+            'include = ["base.toml"]\n'
+            + entry("b")
+            + '[[correlation]]\nbetween = ["a", "b"]\ncoefficient = 0.3'
+        )
         assert inputs.correlation_matrix()[0, 1] == 0.3
 
     def test_later_coefficient_replaces_included_one(self, write, load) -> None:
-        write("base.toml", entry("a") + entry("b") + '[[correlation]]\nbetween = ["a", "b"]\ncoefficient = 0.3')
+        write(
+            "base.toml", entry("a") + entry("b") + '[[correlation]]\nbetween = ["a", "b"]\ncoefficient = 0.3'
+        )
         inputs = load('include = ["base.toml"]\n[[correlation]]\nbetween = ["b", "a"]\ncoefficient = 0.4')
         assert inputs.correlation_matrix()[0, 1] == 0.4
 
@@ -281,7 +319,9 @@ class TestInclude:
         write("base.toml", entry("a") + "[parameters.tide_mass]\nstart = 1.0\n")
         inputs = load('include = ["base.toml"]\n[parameters.tide_mass]\nstart = 2.0\n')
         assert inputs.parameters["tide_mass"].start == 2.0
-        assert notices(inputs, "replaced") == [("tide_mass", "my.toml replaces the settings of this parameter")]
+        assert notices(inputs, "replaced") == [
+            ("tide_mass", "my.toml replaces the settings of this parameter")
+        ]
 
     def test_dropping_an_overlap_mends_it(self, write, load) -> None:
         write("base.toml", entry("a", 'error = 0.1\npdg = "S1"'))
@@ -331,7 +371,9 @@ class TestInflateGroup:
         without = inputs.select(without=["b"])
         assert [read.plus for read in without.entries] == [0.1, 0.1]  # 1.0 and 1.1 agree: no factor
         assert [read.plus for read in without.select(without=["c"]).entries] == [0.1]
-        assert_allclose(inputs.select(only=["a", "b"])["a"].inflate, np.sqrt(1.0 / (0.1**2 + 0.2**2)), rtol=1e-12)
+        assert_allclose(
+            inputs.select(only=["a", "b"])["a"].inflate, np.sqrt(1.0 / (0.1**2 + 0.2**2)), rtol=1e-12
+        )
 
     def test_setting_a_factor_takes_an_entry_out(self, load) -> None:
         inputs = load(self.TEXT).with_settings(["b.inflate=1.5"])
@@ -341,7 +383,9 @@ class TestInflateGroup:
 class TestAverage:
     def test_symmetric(self) -> None:
         found = average([1.0, 3.0], [1.0, 1.0], [1.0, 1.0])
-        assert_allclose([found.value, found.error, found.chi2, found.scale], [2.0, np.sqrt(0.5), 2.0, np.sqrt(2.0)])
+        assert_allclose(
+            [found.value, found.error, found.chi2, found.scale], [2.0, np.sqrt(0.5), 2.0, np.sqrt(2.0)]
+        )
 
     def test_single(self) -> None:
         assert average([1.0], [0.2], [0.1]).scale == 1.0
@@ -392,7 +436,9 @@ class TestSettings:
         )
 
     def test_numbers(self, inputs: Inputs) -> None:
-        changed = inputs.with_settings(["a.b.error = 20", "a.b.value=0.6 GeV", "c.errors.tagging=-1.2", "a.b.inflate=2"])
+        changed = inputs.with_settings(
+            ["a.b.error = 20", "a.b.value=0.6 GeV", "c.errors.tagging=-1.2", "a.b.inflate=2"]
+        )
         assert_allclose([changed["a.b"].value, changed["a.b"].plus], [0.6, 0.04])
         assert changed["c"].errors == {"statistical": 0.3, "tagging": -1.2}
         assert notices(changed, "changed")[0] == ("a.b", "error set to 20")
@@ -447,7 +493,9 @@ class TestSettings:
             inputs.with_settings(["parameters.tide_mas.start=1"], catalogue=catalogue)
 
     def test_correlation_must_stay_positive_definite(self, load) -> None:
-        text = entry("a", "errors = { statistical = 0.3, tagging = 0.4 }") + entry("b", "errors = { tagging = 0.4, own = 0.1 }")
+        text = entry("a", "errors = { statistical = 0.3, tagging = 0.4 }") + entry(
+            "b", "errors = { tagging = 0.4, own = 0.1 }"
+        )
         inputs = load(text)
         with pytest.raises(InputError, match="not positive definite"):
             inputs.with_settings(["a.errors.statistical=1e-9", "b.errors.own=1e-9"])
@@ -456,7 +504,8 @@ class TestSettings:
 class TestNotices:
     def test_recalled_and_inflated(self, load) -> None:
         inputs = load(
-            entry("a", 'error = 0.1\nrecalled = true\ninflate = 2.5\nnote = "they disagree"') + entry("b", "error = 1.0\ninflate = 1.5")
+            entry("a", 'error = 0.1\nrecalled = true\ninflate = 2.5\nnote = "they disagree"')
+            + entry("b", "error = 1.0\ninflate = 1.5")
         )
         assert inputs.notices == (
             Notice("recalled", "a", "quoted from memory: invented"),

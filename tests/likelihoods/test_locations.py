@@ -93,12 +93,17 @@ def test_missing_paths_fall_back() -> None:
 # Random documents, written by a writer that notes the line of everything it writes.
 
 keys = st.one_of(
-    st.text("abcXYZ019_-", min_size=1, max_size=4), st.text(st.characters(codec="utf-8", exclude_categories=["C"]), max_size=4)
+    st.text("abcXYZ019_-", min_size=1, max_size=4),
+    st.text(st.characters(codec="utf-8", exclude_categories=["C"]), max_size=4),
 )
 texts = st.text(st.characters(codec="utf-8", exclude_categories=["C"]) | st.just("\n"), max_size=8)
-scalars = st.one_of(st.integers(-99, 99), st.booleans(), st.floats(allow_nan=False, allow_infinity=False), texts)
+scalars = st.one_of(
+    st.integers(-99, 99), st.booleans(), st.floats(allow_nan=False, allow_infinity=False), texts
+)
 values = st.recursive(
-    scalars, lambda inner: st.lists(inner, max_size=3) | st.dictionaries(keys, inner, max_size=3), max_leaves=6
+    scalars,
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(keys, inner, max_size=3),
+    max_leaves=6,
 )
 comments = st.sampled_from(["", "  # plain", " # with ] } \" ' = ,"])
 
@@ -178,7 +183,8 @@ def test_random_documents(data: st.DataObject) -> None:
     cut = data.draw(st.integers(0, len(names)))
     top = {name: data.draw(values) for name in names[:cut]}
     tables = {
-        name: data.draw(st.lists(st.dictionaries(keys, values, max_size=3), min_size=1, max_size=3)) for name in names[cut:]
+        name: data.draw(st.lists(st.dictionaries(keys, values, max_size=3), min_size=1, max_size=3))
+        for name in names[cut:]
     }
     writer = Writer(data.draw)
     writer.document(top, tables)

@@ -22,7 +22,7 @@ UNITS = {
     "tide_mass": ["GeV", "MeV"],
     "tide_lifetime": ["s", "ps"],
 }
-positive = st.floats(1e-6, 1e6)
+positive = st.floats(1e-2, 1e3)
 finite = st.floats(-1e6, 1e6)
 texts = st.text(st.characters(codec="utf-8"), min_size=1, max_size=12).filter(str.strip)
 words = st.text("abc-", min_size=1, max_size=5)
@@ -49,7 +49,11 @@ def measurements(draw: Any, identity: str) -> dict[str, Any]:
     table["unit"] = draw(st.sampled_from(UNITS[quantity]))
     how = draw(st.sampled_from(["single", "pair", "named"]))
     if how == "named":
-        sources = draw(st.dictionaries(st.sampled_from(["tagging", "energy scale", "x.y"]), st.floats(0.1, 2.0), max_size=3))
+        sources = draw(
+            st.dictionaries(
+                st.sampled_from(["tagging", "energy scale", "x.y"]), st.floats(0.1, 2.0), max_size=3
+            )
+        )
         table["errors"] = {"statistical": draw(st.floats(0.5, 2.0)), **sources}
     else:
         table["error"] = draw(positive) if how == "single" else [draw(positive), draw(positive)]
@@ -69,6 +73,13 @@ def blocks(draw: Any, identity: str) -> dict[str, Any]:
     table["values"] = [draw(finite) for _ in quantities]
     table["units"] = [draw(st.sampled_from(UNITS[quantity])) for quantity in quantities]
     if draw(st.booleans()):
+        table["flat_halfwidths"] = [draw(positive | st.just(0.0)) for _ in quantities]
+        table["pdg"] = [draw(st.sampled_from(["", f"{identity}-{i}"])) for i in range(size)]
+    if draw(st.booleans()):
+        table["inflate"] = draw(st.just(2.0) | st.just([draw(st.floats(0.5, 5.0)) for _ in quantities]))
+    if draw(st.booleans()):
+        table["ids"] = [f"{identity} member {i}" for i in range(size)]
+    if draw(st.booleans()):
         table["covariance"] = (root @ root.T).tolist()
     else:
         scale = np.sqrt(np.diagonal(root @ root.T))
@@ -80,10 +91,18 @@ def blocks(draw: Any, identity: str) -> dict[str, Any]:
 @st.composite
 def documents(draw: Any) -> dict[str, Any]:
     names = [f"entry {i}" for i in range(draw(st.integers(1, 5)))]
-    document: dict[str, Any] = {"title": draw(texts), "measurement": [draw(measurements(name)) for name in names]}
+    document: dict[str, Any] = {
+        "title": draw(texts),
+        "measurement": [draw(measurements(name)) for name in names],
+    }
     document["correlated"] = [draw(blocks(f"block.{i}")) for i in range(draw(st.integers(0, 2)))]
     document["parameters"] = {
-        "tide_phase": {"start": draw(st.floats(0.0, 1.0)), "fixed": draw(st.booleans()), "lower": -1.0, "upper": 2.0}
+        "tide_phase": {
+            "start": draw(st.floats(0.0, 1.0)),
+            "fixed": draw(st.booleans()),
+            "lower": -1.0,
+            "upper": 2.0,
+        }
     }
     return document
 
@@ -146,7 +165,9 @@ def test_random_files(catalogue: Any, document: dict[str, Any]) -> None:
 
 def test_everything_else(write, load, catalogue) -> None:
     """Includes, drops, replacements, groups of scale factors, single coefficients, priors."""
-    template = '[[measurement]]\nid = "{}"\nquantity = "tide_height"\nvalue = {}\nunit = "%"\nsource = "s"\n{}\n'
+    template = (
+        '[[measurement]]\nid = "{}"\nquantity = "tide_height"\nvalue = {}\nunit = "%"\nsource = "s"\n{}\n'
+    )
     group = 'error = 1.0\ninflate_group = "g"'
     write("base.toml", "".join(template.format(name, i, group) for i, name in enumerate("abc")))
     inputs = load(

@@ -8,6 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
 
+from fitcore.minimise.derivatives import Dual
 from likelihoods import Terms
 from observables.errors import InputError
 
@@ -38,7 +39,11 @@ def mixed() -> Terms:
     plus = [1.0, 0.5, 2.0, 0.1, 3.0, 0.7, 1.2]
     minus = [1.0, 0.9, 1.5, 0.1, 3.0, 0.7, 0.4]
     return Terms(
-        [0.0, 1.0, 2.0, 3.0, 170.0, 5.0, 6.0], plus, minus, correlation, [None, None, None, None, 360.0, None, None]
+        [0.0, 1.0, 2.0, 3.0, 170.0, 5.0, 6.0],
+        plus,
+        minus,
+        correlation,
+        [None, None, None, None, 360.0, None, None],
     )
 
 
@@ -137,7 +142,8 @@ class TestDerivative:
             replaced = np.tile(mixed.values[:, None], 81)
             replaced[row] = measured
             assert_array_equal(
-                mixed.standardised_row(row, predictions[row], measured), mixed.standardised(predictions, replaced)[row]
+                mixed.standardised_row(row, predictions[row], measured),
+                mixed.standardised(predictions, replaced)[row],
             )
             assert_array_equal(
                 mixed.derivative_row(row, predictions[row], measured),
@@ -145,6 +151,16 @@ class TestDerivative:
             )
         assert isinstance(float(mixed.standardised_row(1, 1.5)), float)
         assert np.shape(mixed.derivative_row(1, 1.5)) == ()
+
+
+def test_row_of_arrays_that_carry_derivatives(mixed: Terms) -> None:
+    for row in range(7):
+        predictions = mixed.values[row] + np.linspace(-20.0, 20.0, 41)
+        dual = mixed.standardised_row(row, Dual(predictions, (3,), np.ones((1, 41))))
+        assert_array_equal(dual.value, mixed.standardised_row(row, predictions))
+        assert_allclose(
+            np.broadcast_to(dual.tangents[0], 41), mixed.derivative_row(row, predictions), rtol=1e-11
+        )
 
 
 class TestPeriod:
@@ -158,7 +174,9 @@ class TestPeriod:
 
     def test_ends_of_the_interval(self) -> None:
         terms = one(1.0, 1.0, 0.0, 360.0)
-        assert_array_equal(terms.standardised([[180.0, -180.0, 181.0, 540.0, 0.0]])[0], [180.0, 180.0, -179.0, 180.0, 0.0])
+        assert_array_equal(
+            terms.standardised([[180.0, -180.0, 181.0, 540.0, 0.0]])[0], [180.0, 180.0, -179.0, 180.0, 0.0]
+        )
 
     def test_across_zero(self) -> None:
         assert_allclose(one(2.0, 1.0, 359.0, 360.0).standardised([1.0]), [1.0])
@@ -172,7 +190,9 @@ class TestWhitening:
 
     def test_is_the_inverse_cholesky_factor(self, mixed: Terms) -> None:
         u = np.random.default_rng(1).standard_normal(7)
-        assert_allclose(mixed.whiten(u), np.linalg.solve(np.linalg.cholesky(mixed.correlation), u), rtol=1e-12)
+        assert_allclose(
+            mixed.whiten(u), np.linalg.solve(np.linalg.cholesky(mixed.correlation), u), rtol=1e-12
+        )
 
     def test_blocks(self, mixed: Terms) -> None:
         assert [block.indices.tolist() for block in mixed.correlation_blocks] == [[0, 2, 5], [1, 6]]
@@ -232,7 +252,10 @@ class TestPseudoData:
         assert_allclose(np.corrcoef(u), mixed.correlation, atol=4.5 / np.sqrt(size))
 
     def test_seeds(self, mixed: Terms) -> None:
-        assert_array_equal(mixed.pseudo_data(mixed.values, 3, 4), mixed.pseudo_data(mixed.values, 3, np.random.default_rng(4)))
+        assert_array_equal(
+            mixed.pseudo_data(mixed.values, 3, 4),
+            mixed.pseudo_data(mixed.values, 3, np.random.default_rng(4)),
+        )
         assert mixed.pseudo_data(mixed.values, 0, 4).shape == (0, 7)
 
     def test_wrong_shape(self, mixed: Terms) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import math
 import subprocess
 import sys
@@ -73,7 +74,9 @@ def test_different_things(unit: str, target: str) -> None:
         factor(unit, target)
 
 
-@pytest.mark.parametrize("unit", ["furlong", "gev!", "1/", "GeV(", "import os", "s-1", "inverse ps", "1 2", "\n", "\0", "x" * 100])
+@pytest.mark.parametrize(
+    "unit", ["furlong", "gev!", "1/", "GeV(", "import os", "s-1", "inverse ps", "1 2", "\n", "\0", "x" * 100]
+)
 def test_not_known(unit: str) -> None:
     with pytest.raises(UnitError):
         factor(unit, "1/ps")
@@ -81,11 +84,13 @@ def test_not_known(unit: str) -> None:
 
 @pytest.mark.parametrize("unit", ["0", "-1", "nan", "inf", "-2 GeV", "0 GeV", "1e400"])
 def test_not_a_scale(unit: str) -> None:
-    with pytest.raises(UnitError, match="positive scale|not known"):
+    with pytest.raises(UnitError, match=r"positive scale|not known"):
         factor(unit, "GeV" if "GeV" in unit else "1")
 
 
-@pytest.mark.parametrize("unit", ["9^9^9^9", "9**9**9", "(9)^(9)^(9)", "10^99^99", "2.10^3", "10^(9^9)", "10^1000", "1e3^99"])
+@pytest.mark.parametrize(
+    "unit", ["9^9^9^9", "9**9**9", "(9)^(9)^(9)", "10^99^99", "2.10^3", "10^(9^9)", "10^1000", "1e3^99"]
+)
 def test_powers_cannot_stall_the_reader(unit: str) -> None:
     with pytest.raises(UnitError):
         factor(unit, "1")
@@ -93,15 +98,14 @@ def test_powers_cannot_stall_the_reader(unit: str) -> None:
 
 @given(st.text(max_size=12))
 def test_any_text_is_a_factor_or_a_unit_error(text: str) -> None:
-    try:
+    with contextlib.suppress(UnitError):
         assert factor(text, "GeV") > 0.0
-    except UnitError:
-        pass
 
 
 def test_equal_strings_and_plain_scales_need_no_unit_library() -> None:
     code = (
-        "import sys; from likelihoods.units import factor; factor('1/ps', '1/ps'); factor('%', '1'); factor('1e-3', '1');"
+        "import sys; from likelihoods.units import factor; "
+        "factor('1/ps', '1/ps'); factor('%', '1'); factor('1e-3', '1'); "
         "sys.exit('pint' in sys.modules)"
     )
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0

@@ -13,8 +13,8 @@ from observables import catalogue
 MODES = {
     "K0_pi_e": ("mass_K0", "mass_pi", "mass_e"),
     "K0_pi_mu": ("mass_K0", "mass_pi", "mass_mu"),
-    "K_pi_e": ("mass_K", "mass_pi0", "mass_e"),
-    "K_pi_mu": ("mass_K", "mass_pi0", "mass_mu"),
+    "K_pi0_e": ("mass_K", "mass_pi0", "mass_e"),
+    "K_pi0_mu": ("mass_K", "mass_pi0", "mass_mu"),
 }
 
 
@@ -131,8 +131,8 @@ def test_masses_can_be_arrays():
         ("branching_KL_pi_e_nu", "KL", "K0_pi_e", 1.0, ("radiative_K0_pi_e_nu", 0)),
         ("branching_KL_pi_mu_nu", "KL", "K0_pi_mu", 1.0, ("radiative_K0_pi_mu_nu", 0)),
         ("branching_KS_pi_e_nu", "KS", "K0_pi_e", 1.0, ("radiative_K0_pi_e_nu", 0)),
-        ("branching_K_pi0_e_nu", "K", "K_pi_e", 0.5, ("radiative_K_pi0_e_nu", 2)),
-        ("branching_K_pi0_mu_nu", "K", "K_pi_mu", 0.5, ("radiative_K_pi0_mu_nu", 2)),
+        ("branching_K_pi0_e_nu", "K", "K_pi0_e", 0.5, ("radiative_K_pi0_e_nu", 2)),
+        ("branching_K_pi0_mu_nu", "K", "K_pi0_mu", 0.5, ("radiative_K_pi0_mu_nu", 2)),
     ],
 )
 @pytest.mark.parametrize("form", ["", "_quadratic"])

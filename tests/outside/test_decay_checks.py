@@ -96,8 +96,8 @@ def test_average_product_of_the_kaon_modes():
         # by M. Moulson and E. Passemar (values from memory)
         ("phase_space_K0_pi_e_nu", 0.15470, 0.00015),
         ("phase_space_K0_pi_mu_nu", 0.10247, 0.00015),
-        ("phase_space_K_pi_e_nu", 0.15915, 0.00015),
-        ("phase_space_K_pi_mu_nu", 0.10553, 0.00016),
+        ("phase_space_K_pi0_e_nu", 0.15915, 0.00015),
+        ("phase_space_K_pi0_mu_nu", 0.10553, 0.00016),
     ],
 )
 def test_phase_space_integrals(name, published, error):

@@ -166,6 +166,14 @@ def test_compute_from_run_moved_by_hand_has_no_intervals(weakmix: Run, template:
     assert "No intervals: --at moved wolfenstein_A" in done.stderr
 
 
+def test_compute_takes_the_hypothesis_of_the_run(weakmix: Run, template: Path) -> None:
+    weakmix("fit", template, "--out", "run", "--no-figures", "--quiet")
+    path = Path("run/result.json")
+    path.write_text(path.read_text().replace('"hypothesis": "standard"', '"hypothesis": "of-the-run"'))
+    assert "'of-the-run'" in weakmix("compute", "jarlskog", "--from", "run").stderr
+    assert weakmix("compute", "jarlskog", "--from", "run", "--hypothesis", "standard").exit_code == 0
+
+
 def test_compute_from_something_else(weakmix: Run, tmp_path: Path) -> None:
     (tmp_path / "empty").mkdir()
     done = weakmix("compute", "jarlskog", "--from", "empty")

@@ -103,10 +103,10 @@ def test_rail_shows_one_error_with_one_length() -> None:
 
 
 @given(middle=st.floats(-1e3, 1e3), width=st.floats(1e-6, 1e3))
-def test_every_scale_has_two_to_four_round_ticks_inside(middle: float, width: float) -> None:
+def test_every_scale_has_two_to_five_round_ticks_inside(middle: float, width: float) -> None:
     low, high = middle - width / 2, middle + width / 2
     found = dumbbell.ticks(low, high)
-    assert 1 <= len(found) <= 4
+    assert 2 <= len(found) <= 5
     assert all(low < tick < high for tick in found)
 
 
@@ -130,7 +130,7 @@ def test_everything_lies_on_the_page(result: FitResult) -> None:
 
 def test_correlation_bars_have_sign_and_length(result: FitResult) -> None:
     from matplotlib.colors import to_hex
-    from matplotlib.patches import Rectangle
+    from matplotlib.patches import PathPatch, Rectangle
 
     drawing = correlation.draw(result, latex={"first": r"\bar\rho"})
     bars = [
@@ -144,7 +144,8 @@ def test_correlation_bars_have_sign_and_length(result: FitResult) -> None:
     assert filled[style.NAVY] == pytest.approx(correlation.GAP / 2)  # from the left edge of the first cell
     assert set(filled) == {style.NAVY, style.PAPER}
     shown = texts(drawing.figure)
-    assert {"50", "\N{MINUS SIGN}75", "first", r"$\bar\rho$"} <= set(shown)
+    assert {"50", "\N{MINUS SIGN}75", "first"} <= set(shown)
+    assert len([patch for patch in drawing.figure.axes[0].patches if isinstance(patch, PathPatch)]) == 2
     assert len(drawing.rows) == 3
 
 
@@ -172,18 +173,34 @@ def test_files_are_complete_and_reproducible(result: FitResult, tmp_path: Path) 
 
 
 def test_latex_that_cannot_be_set_falls_back_to_the_name() -> None:
-    assert style.symbol(r"\Delta m_d", "x") == r"$\Delta m_d$"
-    assert style.symbol(r"\nosuchcommand{x", "x") == "x"
-    assert style.symbol("", "x") == "x"
+    assert style.symbol_path(r"\Delta m_d") is not None
+    for latex in (r"\nosuchcommand{x", r"\frac{1", "", " "):
+        assert style.symbol_path(latex) is None
+    with style.in_style():
+        axes = style.new_figure(2, 1).add_axes((0, 0, 1, 1))
+        style.draw_symbol(axes, 0.5, 0.5, r"\nosuchcommand{x", "its_name", size=9, room=1)
+        assert [item.get_text() for item in axes.texts] == ["its_name"]
+
+
+@pytest.mark.parametrize("align", [0.0, 0.5, 1.0])
+def test_symbols_are_anchored_and_fit_their_room(align: float) -> None:
+    axes = style.new_figure(2, 1).add_axes((0, 0, 1, 1))
+    style.draw_symbol(axes, 3.0, 0.5, r"B(K^+ \to \pi^0 e \nu)", "", size=20, room=0.5, align=align)
+    box = axes.patches[0].get_path().get_extents()
+    assert box.width == pytest.approx(0.5)
+    assert box.x0 + align * box.width == pytest.approx(3.0)
+    style.draw_symbol(axes, 0.0, 0.0, "x", "", size=72, room=5.0)
+    letter = axes.patches[1].get_path().get_extents()
+    assert (letter.y0 + letter.y1) / 2 == pytest.approx(
+        0.0, abs=0.03
+    )  # small letters are centred on the anchor
 
 
 def test_every_symbol_of_the_catalogue_can_be_set() -> None:
     from observables import catalogue
 
-    unset = [
-        n for n in catalogue.names() if catalogue[n].latex and style.symbol(catalogue[n].latex, "no") == "no"
-    ]
-    assert unset == []
+    nodes = [catalogue[name] for name in catalogue.names()]
+    assert [node.name for node in nodes if node.latex and style.symbol_path(node.latex) is None] == []
 
 
 def test_families() -> None:

@@ -47,9 +47,11 @@ def curved(least_squares_problem, free_parameter):
         quantities={
             "radius": lambda t: t[0] ** 2 + t[1] ** 2,
             "sum": lambda t: t[0] + t[1] + t[2],
-            "angle": lambda t: 57.29577951308232 * np.log((t[0] + 1j * t[1]) / abs(t[0] + 1j * t[1])).imag
-            if not np.iscomplexobj(t)
-            else 57.29577951308232 * np.arctan(t[1] / t[0]),
+            "angle": lambda t: (
+                57.29577951308232 * np.log((t[0] + 1j * t[1]) / abs(t[0] + 1j * t[1])).imag
+                if not np.iscomplexobj(t)
+                else 57.29577951308232 * np.arctan(t[1] / t[0])
+            ),
         },
         periods={"angle": 180.0},
     )
@@ -172,7 +174,11 @@ def slsqp(problem, names, values, starts):
     best = np.inf
     for start in starts:
         found = minimize(
-            lambda x: problem.chi2(x)[0], start, constraints=rules, method="SLSQP", options={"ftol": 1e-13, "maxiter": 800}
+            lambda x: problem.chi2(x)[0],
+            start,
+            constraints=rules,
+            method="SLSQP",
+            options={"ftol": 1e-13, "maxiter": 800},
         )
         if max(abs(rule["fun"](found.x)) for rule in rules) < 1e-6:
             best = min(best, found.fun)
@@ -203,7 +209,9 @@ def test_equality_constraints_agree_with_slsqp(curved):
 
 def test_different_constraints_in_different_rows_and_periods(curved):
     names = ("radius", "angle")
-    constraints = EqualityConstraints(names, np.array([[3.0], [60.0], [60.0 - 180.0], [60.0 + 540.0]]), np.array([[0], [1], [1], [1]]))
+    constraints = EqualityConstraints(
+        names, np.array([[3.0], [60.0], [60.0 - 180.0], [60.0 + 540.0]]), np.array([[0], [1], [1], [1]])
+    )
     result = minimise_batch(curved, np.tile([1.0, 1.0, 0.0, 0.0], (4, 1)), constraints=constraints)
     assert result.converged.all()
     values = curved.values(result.theta, names)
@@ -242,7 +250,9 @@ def test_range_nuisances_against_exact_bounded_least_squares(least_squares_probl
     widths = np.full(terms, 0.3)
 
     def physics(x, y):
-        return np.concatenate([np.cos(k * 0.4) * x + np.sin(k * 0.7) * y + 0.2 * k * x * y / 3.0 for k in range(terms)], -1)
+        return np.concatenate(
+            [np.cos(k * 0.4) * x + np.sin(k * 0.7) * y + 0.2 * k * x * y / 3.0 for k in range(terms)], -1
+        )
 
     def residual(t):
         shifts = sum(mixing[:, k] * t[2 + k] for k in range(ranges + gaussian))
@@ -264,7 +274,9 @@ def test_range_nuisances_against_exact_bounded_least_squares(least_squares_probl
     matrix[terms + np.arange(gaussian), ranges + np.arange(gaussian)] = 2.0
     bound = np.array([0.4] * ranges + [np.inf] * gaussian)
     for k in range(0, 400, 8):
-        constant = np.concatenate([(physics(points[k, :1], points[k, 1:]) - 0.8) / widths, np.zeros(gaussian)])
+        constant = np.concatenate(
+            [(physics(points[k, :1], points[k, 1:]) - 0.8) / widths, np.zeros(gaussian)]
+        )
         exact = lsq_linear(matrix, -constant, bounds=(-bound, bound), method="bvls", tol=1e-14)
         assert result.chi2[k] == pytest.approx(2.0 * exact.cost, abs=1e-6, rel=1e-8)
 

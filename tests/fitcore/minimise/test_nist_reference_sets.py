@@ -95,7 +95,8 @@ class ReferenceSet:
 def make_problem(name, reference, problem_class, parameter_class):
     model = MODELS[name]
     parameters = [
-        parameter_class(f"b{k + 1}", scale=float(abs(start)) or 1.0) for k, start in enumerate(reference.starts[1])
+        parameter_class(f"b{k + 1}", scale=float(abs(start)) or 1.0)
+        for k, start in enumerate(reference.starts[1])
     ]
     return problem_class(lambda b: (model(b, reference.x) - reference.y) / reference.spread, parameters)
 
@@ -112,18 +113,23 @@ def best_digits(name, reference, found):
     return max(digits(found[order], reference.certified) for order in labels)
 
 
-# What is expected of a plain call, per set: start 2 always reaches six digits. From the far start 1 these end
-# elsewhere, or not within 1000 linearisations, and say so or sit in another true minimum; the ladder's strongly damped
-# rung mends all but BoxBOD (a plateau where b1 alone is fitted: a true local minimum at infinity) and MGH10.
-PLAIN_START_1_FAILS = {"BoxBOD", "Lanczos1", "Lanczos2", "Lanczos3", "MGH10"}
-LADDER_START_1_FAILS = {"BoxBOD", "MGH10"}
+# What is expected, per set. Start 2: six digits for all 27. Start 1 (far away): the sets below do not get there in a
+# plain call, but say so (or, for BoxBOD, sit in the true local minimum on the plateau b2 -> infinity); the ladder,
+# given start 2 as the extra start, mends all but BoxBOD and MGH17 (which damping leads to such a plateau too).
+PLAIN_START_1_FAILS = {"BoxBOD", "Lanczos1", "Lanczos2", "Lanczos3", "MGH10", "MGH17"}
+LADDER_START_1_FAILS = {"BoxBOD", "MGH17"}
+# Expected distance to the minimum that counts as converged; Lanczos1 has residuals of 1e-14, where rounding of the
+# predictions alone moves this chi-square by 1e-5.
+TOLERANCE = {"Lanczos1": 1e-3}
 
 
 @pytest.mark.parametrize("name", sorted(MODELS))
 def test_reaches_the_certified_values_from_start_2(name, least_squares_problem, free_parameter):
     reference = ReferenceSet(name)
     problem = make_problem(name, reference, least_squares_problem, free_parameter)
-    result = minimise_batch(problem, reference.starts[1:], tolerance=1e-16, max_iterations=1000)
+    result = minimise_batch(
+        problem, reference.starts[1:], tolerance=TOLERANCE.get(name, 1e-16), max_iterations=1000
+    )
     assert result.converged[0]
     assert best_digits(name, reference, result.theta[0]) >= 6.0
 
@@ -132,7 +138,9 @@ def test_reaches_the_certified_values_from_start_2(name, least_squares_problem, 
 def test_reaches_the_certified_values_from_start_1(name, least_squares_problem, free_parameter):
     reference = ReferenceSet(name)
     problem = make_problem(name, reference, least_squares_problem, free_parameter)
-    result = minimise_batch(problem, reference.starts[:1], tolerance=1e-16, max_iterations=1000)
+    result = minimise_batch(
+        problem, reference.starts[:1], tolerance=TOLERANCE.get(name, 1e-16), max_iterations=1000
+    )
     assert result.converged[0]
     assert best_digits(name, reference, result.theta[0]) >= 6.0
 
@@ -142,15 +150,28 @@ def test_the_ladder_helps_from_start_1_or_says_so(name, least_squares_problem, f
     reference = ReferenceSet(name)
     problem = make_problem(name, reference, least_squares_problem, free_parameter)
     result = solve_with_retries(
-        problem, reference.starts[:1], extra_starts=reference.starts[1:], tolerance=1e-16, max_iterations=1000
+        problem,
+        reference.starts[:1],
+        extra_starts=reference.starts[1:],
+        tolerance=TOLERANCE.get(name, 1e-16),
+        max_iterations=1000,
     )
     if name not in LADDER_START_1_FAILS:
         assert result.converged[0]
         assert best_digits(name, reference, result.theta[0]) >= 6.0
     else:
-        right = best_digits(name, reference, result.theta[0]) >= 6.0
-        higher = result.chi2[0] > reference.degrees_of_freedom + 1.0
-        assert right or higher or not result.converged[0]
+        assert result.chi2[0] > reference.degrees_of_freedom + 1.0
+        assert np.abs(result.gradient[0] * np.abs(result.theta[0])).max() < 1e-3
+
+
+@pytest.mark.parametrize("name", sorted(PLAIN_START_1_FAILS - LADDER_START_1_FAILS))
+def test_a_failure_from_start_1_is_never_silent(name, least_squares_problem, free_parameter):
+    reference = ReferenceSet(name)
+    problem = make_problem(name, reference, least_squares_problem, free_parameter)
+    result = minimise_batch(
+        problem, reference.starts[:1], tolerance=TOLERANCE.get(name, 1e-16), max_iterations=300
+    )
+    assert best_digits(name, reference, result.theta[0]) >= 6.0 or not result.converged[0]
 
 
 @pytest.mark.parametrize("name", sorted(set(MODELS) - {"Lanczos1"}))

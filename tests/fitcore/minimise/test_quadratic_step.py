@@ -41,7 +41,11 @@ def test_box_steps_equal_scipy(size, seed):
     assert step.settled.all()
     for b in range(4):
         exact = lsq_linear(
-            jacobian[b], -residual[b], bounds=(quadratic.low[:, b], quadratic.high[:, b]), method="bvls", tol=1e-14
+            jacobian[b],
+            -residual[b],
+            bounds=(quadratic.low[:, b], quadratic.high[:, b]),
+            method="bvls",
+            tol=1e-14,
         )
         mine = np.sum((jacobian[b] @ step.step[:, b] + residual[b]) ** 2)
         assert mine <= 2.0 * exact.cost * (1 + 1e-9) + 1e-12

@@ -38,9 +38,13 @@ def test_solves_and_multiplies_like_dense_algebra(size, terms, batch, seed):
     condition = np.linalg.cond(matrix).max()
     tolerance = 1e-14 * condition * size
     expected = np.linalg.solve(matrix, one.T[:, :, None])[:, :, 0].T
-    np.testing.assert_allclose(factor.solve(one), expected, rtol=tolerance, atol=tolerance * np.abs(expected).max())
+    np.testing.assert_allclose(
+        factor.solve(one), expected, rtol=tolerance, atol=tolerance * np.abs(expected).max()
+    )
     expected = np.linalg.solve(matrix, many.transpose(2, 0, 1)).transpose(1, 2, 0)
-    np.testing.assert_allclose(factor.solve(many), expected, rtol=tolerance, atol=tolerance * np.abs(expected).max())
+    np.testing.assert_allclose(
+        factor.solve(many), expected, rtol=tolerance, atol=tolerance * np.abs(expected).max()
+    )
     product = np.einsum("bij,jb->ib", dense, one)
     np.testing.assert_allclose(pattern.product(normal.values, one), product, rtol=1e-12, atol=1e-12)
     np.testing.assert_allclose(pattern.diagonal(normal.values), np.einsum("bii->ib", dense), rtol=1e-13)
@@ -85,7 +89,13 @@ def test_frozen_components_do_not_move():
 
 @pytest.mark.parametrize(
     ("rows", "cols", "size"),
-    [([0], [0], 2), ([0, 1, 0], [0, 1, 1], 2), ([0, 1, 1, 1], [0, 1, 0, 0], 2), ([0, 2], [0, 2], 2), ([], [], 1)],
+    [
+        ([0], [0], 2),
+        ([0, 1, 0], [0, 1, 1], 2),
+        ([0, 1, 1, 1], [0, 1, 0, 0], 2),
+        ([0, 2], [0, 2], 2),
+        ([], [], 1),
+    ],
 )
 def test_refuses_what_is_not_a_lower_triangle(rows, cols, size):
     with pytest.raises(ValueError, match="lower triangle"):

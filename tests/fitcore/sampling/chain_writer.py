@@ -1,4 +1,4 @@
-"""Sample a small problem into a chain file: chain_writer.py FILE UNTIL [SECONDS PER EVALUATION]."""
+"""Sample a small problem into a chain file: chain_writer.py FILE UNTIL [SECONDS PER EVALUATION [FILE SIZE LIMIT]]."""
 
 import resource
 import sys
@@ -16,10 +16,8 @@ from fitcore.sampling.posterior import sample
 from observables.errors import WeakmixError
 
 
-def main():
-    path, until = sys.argv[1], int(sys.argv[2])
-    pause = float(sys.argv[3]) if len(sys.argv) > 3 else 0.0
-    limit = int(sys.argv[4]) if len(sys.argv) > 4 else 0
+def write(path, until, pause=0.0):
+    """Write (or go on writing) the chain whose content the tests know."""
     problem = problems.gaussian(problems.correlated(5, 0.5))
     plain = problem.log_density
 
@@ -29,14 +27,20 @@ def main():
 
     if pause:
         problem.log_density = slow
+    return sample(
+        problem, covariance=problems.correlated(5, 0.5), chain_path=path, until=until, walkers=16, ensembles=2,
+        rng=np.random.SeedSequence(11), block_steps=8, check_widths=False,
+    )  # fmt: skip
+
+
+def main():
+    path, until = sys.argv[1], int(sys.argv[2])
+    pause = float(sys.argv[3]) if len(sys.argv) > 3 else 0.0
+    limit = int(sys.argv[4]) if len(sys.argv) > 4 else 0
     if limit:
         resource.setrlimit(resource.RLIMIT_FSIZE, (limit, limit))
-    print("started", flush=True)
     try:
-        result = sample(
-            problem, covariance=problems.correlated(5, 0.5), chain_path=path, until=until, walkers=16, ensembles=2,
-            rng=np.random.SeedSequence(11), block_steps=8, check_widths=False,
-        )  # fmt: skip
+        result = write(path, until, pause)
     except WeakmixError as error:
         print(type(error).__name__, error, flush=True)
         sys.exit(2)

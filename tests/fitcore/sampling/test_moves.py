@@ -15,7 +15,7 @@ def unit_gaussian(theta):
     return -0.5 * np.einsum("ij,ij->i", theta, theta)
 
 
-def standard_deviation(move, steps, walkers=400, seed=3, log_density=unit_gaussian):
+def standard_deviation(move, steps, walkers=800, seed=3, log_density=unit_gaussian):
     """Root mean square over 14 dimensions of a chain that starts in the target."""
     random = np.random.RandomState(np.random.MT19937(np.random.SeedSequence(seed)))
     sampler = emcee.EnsembleSampler(walkers, N, log_density, moves=[move], vectorize=True)
@@ -32,15 +32,15 @@ def shifted_mixture(shift=0.1, degrees=8.0):
 @pytest.mark.parametrize(
     ("make", "steps"),
     [
-        (lambda: DifferentialEvolution(4), 2000),
-        (lambda: DifferentialEvolution(1, jumps=0.0, scatter=0.0), 2000),
+        (lambda: DifferentialEvolution(4), 1500),
+        (lambda: DifferentialEvolution(1, jumps=0.0, scatter=0.0), 1500),
         (lambda: SnookerMove(4), 4000),
-        (lambda: IndependenceMove(shifted_mixture()), 500),
+        (lambda: IndependenceMove(shifted_mixture()), 300),
     ],
     ids=["differential-evolution", "differential-evolution-plain", "snooker", "independence"],
 )
 def test_each_move_alone_leaves_a_gaussian_in_14_dimensions_as_it_is(make, steps):
-    # The Monte Carlo error of the mean square over 14 dimensions is below 0.001 for each.
+    # The Monte Carlo error is at most 0.0015: walkers x steps x 14 / tau, with tau up to 170 (snooker).
     assert standard_deviation(make(), steps) == pytest.approx(1.0, abs=TOLERANCE)
 
 

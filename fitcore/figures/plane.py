@@ -1,0 +1,405 @@
+"""The plane: what each constraint says about two quantities, and what all say together.
+
+Flat fills are 68.3 % regions, ticked edges 95.4 % regions, both for two parameters. Nothing is written on the bands:
+a rail in the margin names each one where it leaves the frame, with its share of chi-square as a strip.
+"""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from fitcore.figures import style
+from fitcore.figures.margin_rail import Exit, find_exit, spread
+from fitcore.figures.outlines import contour_lines, draw_edge, height
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+__all__ = ["Band", "PlaneAxis", "draw"]
+
+WIDTH, HEIGHT = 9.6, 6.5
+LEFT, BOTTOM, BOX_WIDTH, BOX_HEIGHT = 0.78, 1.02, 5.95, 4.42
+RAIL_GAP = 0.34
+LINE_STYLES: tuple[Any, ...] = ("-", (0, (5, 1.6)), (0, (1.2, 1.3)), (0, (5, 1.4, 1.2, 1.4)), (0, (2.6, 1.2)))
+STRIP = 0.95
+
+
+@dataclass(frozen=True)
+class PlaneAxis:
+    """One of the two quantities.
+
+    Attributes
+    ----------
+    name, latex, unit : str
+    """
+
+    name: str
+    latex: str = ""
+    unit: str = "1"
+
+    @property
+    def label(self) -> str:
+        """Symbol with its unit."""
+        unit = "" if self.unit == "1" else f"  [{self.unit}]"
+        return style.symbol(self.latex, self.name) + unit
+
+
+@dataclass(frozen=True)
+class Band:
+    """One constraint alone, or everything combined.
+
+    Attributes
+    ----------
+    name : str
+    latex : str
+    family : Family
+        Gives the colour; members of a family differ by line style.
+    x, y : ndarray
+    delta : ndarray, shape (x.size, y.size)
+        Chi-square above its lowest value.
+    share : float
+        Contribution to chi-square at the best fit of everything.
+    outlines : dict
+        Level -> polished outlines; where absent they are interpolated on the grid.
+    overview : tuple of (x, y, delta), or None
+    """
+
+    name: str
+    latex: str
+    family: style.Family
+    x: np.ndarray
+    y: np.ndarray
+    delta: np.ndarray
+    share: float = 0.0
+    outlines: dict[float, list[np.ndarray]] = field(default_factory=dict)
+    overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None
+
+    @property
+    def grid(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """x, y and delta."""
+        return self.x, self.y, self.delta
+
+    def lines(self, level: float) -> list[np.ndarray]:
+        """Outlines at a level."""
+        return self.outlines[level] if level in self.outlines else contour_lines(*self.grid, level)
+
+
+def draw(
+    axes_of: tuple[PlaneAxis, PlaneAxis],
+    combined: Band,
+    bands: Sequence[Band] = (),
+    *,
+    levels: Sequence[tuple[str, float]],
+    best: tuple[float, float] | None = None,
+    chi2: float | None = None,
+    guides: Sequence[np.ndarray] = (),
+    equal: bool = False,
+    footer: str = "",
+    caption: str = "",
+) -> style.Drawing:
+    """Draw a plane.
+
+    Parameters
+    ----------
+    axes_of : (PlaneAxis, PlaneAxis)
+    combined : Band
+        Everything together; its grid is the frame. Its `overview`, if there is one, makes the inset.
+    bands : sequence of Band
+        Constraints alone, on the same grid.
+    levels : sequence of (str, float)
+        Words such as ``"68.3 %"`` and Delta chi-square, innermost first: the first is filled, the others are edges.
+    best : (float, float), optional
+        Best fit.
+    chi2 : float, optional
+        Of the best fit of everything; the strips show shares of it.
+    guides : sequence of array, shape (k, 2)
+        Lines to steady the eye, such as the sides of a triangle.
+    equal : bool
+        One unit is equally long in both directions.
+    footer, caption : str
+
+    Returns
+    -------
+    Drawing
+    """
+    with style.in_style():
+        figure = style.new_figure(WIDTH, HEIGHT)
+        width, tall = _box(combined, equal)
+        main = figure.add_axes((LEFT / WIDTH, BOTTOM / HEIGHT, width / WIDTH, tall / HEIGHT))
+        _frame(main, combined.x, combined.y)
+        main.set_xlabel(axes_of[0].label, fontsize=12)
+        main.set_ylabel(axes_of[1].label, fontsize=12)
+        styles = _line_styles(bands)
+        for guide in guides:
+            main.plot(*guide.T, color=style.FAINT_INK, lw=0.6, zorder=1.0)
+        for band, dashes in zip(bands, styles, strict=True):
+            _band(main, band, dashes, levels)
+        _together(main, combined, levels, best, alone=not bands)
+        exits: list[Exit | None] = []
+        for band in bands:
+            exits.append(find_exit(*band.grid, levels[0][1], [e for e in exits if e is not None]))
+        used = _rails(figure, main, (width, tall), bands, styles, exits, chi2)
+        _summary(figure, axes_of, combined, bands, levels, chi2, used, (width, tall))
+        if combined.overview is not None:
+            _overview(figure, combined, bands, levels, guides, equal)
+        _texts(figure, axes_of, caption, footer)
+    return style.Drawing(figure, *_data(axes_of, combined, bands))
+
+
+def _box(combined: Band, equal: bool) -> tuple[float, float]:
+    if not equal:
+        return BOX_WIDTH, BOX_HEIGHT
+    shape = float(np.ptp(combined.x) / np.ptp(combined.y))
+    width = min(BOX_WIDTH, BOX_HEIGHT * shape)
+    return width, width / shape
+
+
+def _frame(axes: Axes, x: np.ndarray, y: np.ndarray) -> None:
+    axes.set_xlim(float(x[0]), float(x[-1]))
+    axes.set_ylim(float(y[0]), float(y[-1]))
+    for side in ("top", "right"):
+        axes.spines[side].set_visible(True)
+    for spine in axes.spines.values():
+        spine.set_color(style.FAINT_INK)
+        spine.set_linewidth(0.7)
+        spine.set_zorder(20)
+    axes.tick_params(length=3, width=0.7, labelsize=8.5)
+    axes.set_facecolor("#fbfbfc")
+
+
+def _line_styles(bands: Sequence[Band]) -> list[Any]:
+    seen: dict[str, int] = {}
+    chosen = []
+    for band in bands:
+        number = seen.get(band.family.colour, 0)
+        seen[band.family.colour] = number + 1
+        chosen.append(LINE_STYLES[number % len(LINE_STYLES)])
+    return chosen
+
+
+def _fill(axes: Axes, grid: tuple[np.ndarray, np.ndarray, np.ndarray], level: float, colour: Any, **more: Any) -> None:
+    x, y, delta = grid
+    surface = height(delta, level)
+    if surface.min() < np.sqrt(level):
+        axes.contourf(x, y, surface.T, levels=[-1.0, float(np.sqrt(level))], colors=[colour], **more)
+
+
+def _band(axes: Axes, band: Band, dashes: Any, levels: Sequence[tuple[str, float]]) -> None:
+    inner, colour = levels[0][1], band.family.colour
+    _fill(axes, band.grid, inner, colour, alpha=0.2, zorder=2.0)
+    draw_edge(axes, band.lines(inner), band.grid, colour, width=1.15, style=dashes, zorder=3.0, label=band.name)
+    for _, level in levels[1:]:
+        draw_edge(
+            axes, band.lines(level), band.grid, style.tint(colour, 0.6), width=0.45, ticks=2.2, spacing=9.0, zorder=2.5
+        )
+
+
+def _together(
+    axes: Axes, combined: Band, levels: Sequence[tuple[str, float]], best: tuple[float, float] | None, *, alone: bool
+) -> None:
+    from matplotlib.patches import Polygon
+
+    inner = levels[0][1]
+    lines = combined.lines(inner)
+    closed = [line for line in lines if np.allclose(line[0], line[-1])]
+    if len(closed) == len(lines):
+        for line in lines:
+            axes.add_patch(Polygon(line, closed=True, facecolor=style.NAVY, lw=0, zorder=6.0))
+    else:
+        _fill(axes, combined.grid, inner, style.NAVY, zorder=6.0)
+    draw_edge(axes, lines, combined.grid, "white", width=1.6, zorder=6.1, label="all")
+    for _, level in levels[1:]:
+        draw_edge(
+            axes,
+            combined.lines(level),
+            combined.grid,
+            style.NAVY,
+            width=1.3,
+            outline=0.0 if alone else 1.1,
+            ticks=4.0,
+            spacing=8.0,
+            zorder=6.2,
+        )
+    if best is not None:
+        axes.plot(*best, marker="o", ms=3.2, mfc="white", mec="white", zorder=6.5)
+
+
+def _rails(
+    figure: Figure,
+    main: Axes,
+    box: tuple[float, float],
+    bands: Sequence[Band],
+    styles: Sequence[Any],
+    exits: Sequence[Exit | None],
+    chi2: float | None,
+) -> dict[str, int]:
+    """Names in the margins; returns how many stand at each side."""
+    width, tall = box
+    page = _page(figure)
+    used: dict[str, int] = {}
+    for side in ("right", "top", "left", "bottom"):
+        chosen = [k for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side]
+        used[side] = len(chosen)
+        if not chosen:
+            continue
+        upright = side in ("right", "left")
+        limits = main.get_ylim() if upright else main.get_xlim()
+        length, origin = (tall, BOTTOM) if upright else (width, LEFT)
+        at = [origin + (exits[k].at - limits[0]) / (limits[1] - limits[0]) * length for k in chosen]  # type: ignore[union-attr]
+        room = [0.42 if upright else 1.22] * len(chosen)
+        reach = (0.0, 0.1) if upright else (0.45, 0.55)
+        placed = spread(at, room, origin - reach[0], origin + length + reach[1])
+        rail = {
+            "right": LEFT + width + RAIL_GAP,
+            "top": BOTTOM + tall + 0.24,
+            "left": LEFT - 0.62,
+            "bottom": BOTTOM - 0.52,
+        }[side]
+        edge = {"right": LEFT + width, "top": BOTTOM + tall, "left": LEFT, "bottom": BOTTOM}[side]
+        ends = (min(placed) - 0.14, max(placed) + 0.14)
+        line = ([rail, rail], ends) if upright else (ends, [rail, rail])
+        page.plot(*line, color=style.RULE, lw=2.2, solid_capstyle="round", zorder=1)
+        outwards = 1.0 if side in ("right", "top") else -1.0
+        for k, start, end in zip(chosen, at, placed, strict=True):
+            colour = bands[k].family.colour
+            path = [(edge, start), (edge + 0.05 * outwards, start), (rail - 0.05 * outwards, end), (rail + 0.06 * outwards, end)]
+            points = np.array(path if upright else [point[::-1] for point in path])
+            page.plot(*points.T, color=colour, lw=0.9, solid_joinstyle="round", zorder=2)
+            tick = points[-2:]
+            page.plot(*tick.T, color=colour, lw=2.6, solid_capstyle="butt", zorder=3)
+            _name(page, bands[k], styles[k], side, rail, end, chi2)
+    lost = [bands[k] for k, leaving in enumerate(exits) if leaving is None]
+    used["inside"] = len(lost)
+    for number, band in enumerate(lost):  # a closed band never leaves: it is named below the rail
+        k = list(bands).index(band)
+        _name(page, band, styles[k], "right", LEFT + width + RAIL_GAP, BOTTOM - 0.3 - 0.42 * number, chi2)
+    return used
+
+
+def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float, chi2: float | None) -> None:
+    from matplotlib.patches import Rectangle
+
+    symbol = style.symbol(band.latex, band.name)
+    size = 9.5 * min(1.0, 14 / max(style.glyphs(symbol), 1))
+    colour = band.family.colour
+    if side in ("right", "left"):
+        x, y = (rail + 0.14, at) if side == "right" else (rail - 0.14, at)
+        sign, align = (1.0, "left") if side == "right" else (-1.0, "right")
+        page.text(x, y + 0.045, symbol, fontsize=size, ha=align, va="center")
+        strip_x, strip_y = (x if sign > 0 else x - STRIP), y - 0.135
+    else:
+        up = side == "top"
+        x, y = at, rail + (0.24 if up else -0.24)
+        page.text(x, y + (0.055 if up else -0.05), symbol, fontsize=size, ha="center", va="center")
+        strip_x, strip_y = x - 0.5 * STRIP, y - 0.115
+    sample = strip_x
+    page.plot([sample, sample + 0.24], [strip_y + 0.02] * 2, color=colour, lw=1.4, ls=dashes, zorder=3)
+    strip_x, full = strip_x + 0.3, STRIP - 0.3
+    part = 0.0 if not chi2 else min(max(band.share / chi2, 0.0), 1.0)
+    page.add_patch(Rectangle((strip_x, strip_y), full, 0.045, facecolor=style.RULE, lw=0, zorder=2))
+    page.add_patch(
+        Rectangle((strip_x, strip_y), max(full * part, 0.012), 0.045, facecolor=colour, lw=0, zorder=3, gid=f"share:{band.name}")
+    )
+    page.text(strip_x + full + 0.05, strip_y + 0.02, f"{band.share:.1f}", fontsize=6, color=style.FAINT_INK, va="center")
+
+
+def _summary(
+    figure: Figure,
+    axes_of: tuple[PlaneAxis, PlaneAxis],
+    combined: Band,
+    bands: Sequence[Band],
+    levels: Sequence[tuple[str, float]],
+    chi2: float | None,
+    used: dict[str, int],
+    box: tuple[float, float],
+) -> None:
+    """What fills and edges mean, and all together."""
+    from matplotlib.patches import Rectangle
+
+    page = _page(figure)
+    x, y = 7.02, HEIGHT - 0.34
+    page.add_patch(Rectangle((x, y - 0.075), 0.3, 0.15, facecolor=style.NAVY, lw=0))
+    page.text(x + 0.4, y, f"everything: {levels[0][0]} region, two parameters", fontsize=7, va="center")
+    for number, (words, _) in enumerate(levels[1:], start=1):
+        row = y - 0.2 * number
+        page.plot([x, x + 0.3], [row + 0.03] * 2, color=style.NAVY, lw=1.3)
+        for tick in np.linspace(x + 0.05, x + 0.25, 3):
+            page.plot([tick, tick], [row + 0.03, row - 0.04], color=style.NAVY, lw=1.0)
+        page.text(x + 0.4, row, f"{words} region, two parameters", fontsize=7, va="center")
+    if bands:
+        row = y - 0.2 * len(levels)
+        words = "each name: line of its band; strip: its share of"
+        total = "" if chi2 is None else rf" $\chi^2$ = {chi2:.1f}"
+        page.text(x, row, words + total, fontsize=6.2, va="center", color=style.FAINT_INK)
+
+
+def _overview(
+    figure: Figure,
+    combined: Band,
+    bands: Sequence[Band],
+    levels: Sequence[tuple[str, float]],
+    guides: Sequence[np.ndarray],
+    equal: bool,
+) -> None:
+    from matplotlib.patches import Rectangle
+
+    assert combined.overview is not None
+    x, y, _ = combined.overview
+    width, tall = 2.2, 1.5
+    if equal:
+        shape = float(np.ptp(x) / np.ptp(y))
+        width, tall = (2.2, 2.2 / shape) if shape > 2.2 / 1.55 else (1.55 * shape, 1.55)
+    small = figure.add_axes(((WIDTH - 0.22 - width) / WIDTH, 0.66 / HEIGHT, width / WIDTH, tall / HEIGHT))
+    _frame(small, x, y)
+    small.tick_params(length=2, labelsize=5.5, pad=1.5)
+    small.locator_params(nbins=4)
+    for band in bands:
+        if band.overview is not None:
+            _fill(small, band.overview, levels[0][1], band.family.colour, alpha=0.3, zorder=2.0)
+    for guide in guides:
+        small.plot(*guide.T, color=style.INK, lw=0.7, zorder=4)
+    _fill(small, combined.overview, levels[-1][1], style.NAVY, zorder=5)
+    corner = (float(combined.x[0]), float(combined.y[0]))
+    small.add_patch(
+        Rectangle(corner, float(np.ptp(combined.x)), float(np.ptp(combined.y)), fill=False, ec=style.INK, lw=0.9, zorder=6)
+    )
+
+
+def _texts(figure: Figure, axes_of: tuple[PlaneAxis, PlaneAxis], caption: str, footer: str) -> None:
+    head = " and ".join(style.symbol(axis.latex, axis.name) for axis in axes_of)
+    figure.text(0.2 / WIDTH, 1 - 0.36 / HEIGHT, head, fontsize=14, fontweight="bold", va="center")
+    if caption:
+        text = textwrap.fill(caption, 150)
+        figure.text(0.2 / WIDTH, 0.32 / HEIGHT, text, fontsize=6, color=style.FAINT_INK, va="bottom", linespacing=1.35)
+    style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.12 / HEIGHT)
+
+
+def _page(figure: Figure) -> Axes:
+    """The whole page as axes in inches; made once."""
+    for axes in figure.axes:
+        if axes.get_label() == "page":
+            return axes
+    page = figure.add_axes((0.0, 0.0, 1.0, 1.0), label="page", zorder=-1)
+    page.set_axis_off()
+    page.set_xlim(0.0, WIDTH)
+    page.set_ylim(0.0, HEIGHT)
+    return page
+
+
+def _data(
+    axes_of: tuple[PlaneAxis, PlaneAxis], combined: Band, bands: Sequence[Band]
+) -> tuple[tuple[str, ...], tuple[tuple[Any, ...], ...]]:
+    columns = (axes_of[0].name, axes_of[1].name, "delta_chi2", *(f"delta_chi2 {band.name}" for band in bands))
+    parts = [band.delta for band in (combined, *bands)]
+    rows = tuple(
+        (float(x), float(y), *(float(part[i, j]) if np.isfinite(part[i, j]) else None for part in parts))
+        for i, x in enumerate(combined.x)
+        for j, y in enumerate(combined.y)
+    )
+    return columns, rows

@@ -1,0 +1,159 @@
+import resource
+import subprocess
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+from scipy import stats
+
+pytest.importorskip("emcee")
+
+from fitcore.sampling.density import density_1d, density_2d, highest_density, shortest_interval  # noqa: E402
+from fitcore.sampling.posterior import sample  # noqa: E402
+from fitcore.sampling.summary import summarise  # noqa: E402
+from observables.errors import InputError, UnknownNameError  # noqa: E402
+
+
+@pytest.fixture(scope="module")
+def gaussian_result(problems):
+    problem = problems.gaussian(np.diag([1.0, 4.0]), np.array([0.0, 3.0]))
+    return sample(problem, modes=[(np.array([0.0, 3.0]), np.diag([1.0, 4.0]), 1.0)], effective=40_000, rng=1)
+
+
+@pytest.mark.stat
+@pytest.mark.parametrize("kind", ["highest-density", "equal-tailed"])
+def test_gaussian_intervals(gaussian_result, kind):
+    summary = summarise(gaussian_result.chain, kind=kind)
+    for name, mean, width in (("p0", 0.0, 1.0), ("p1", 3.0, 2.0)):
+        row = summary[name]
+        assert row.mean == pytest.approx(mean, abs=5 * row.mean_error)
+        assert row.error == pytest.approx(width, rel=0.03)
+        ((low, high),) = row.intervals[0.6827]
+        # The ends of a highest-density interval scatter more than quantiles: the density is flat there.
+        assert (low, high) == pytest.approx((mean - width, mean + width), abs=0.06 * width)
+        ((low, high),) = row.intervals[0.9545]
+        assert (low, high) == pytest.approx((mean - 2 * width, mean + 2 * width), abs=0.1 * width)
+    assert summary.to_dict()["parameters"]["p0"]["unit"] == "1"
+
+
+def test_names_and_credibilities_are_checked(gaussian_result):
+    chain = gaussian_result.chain
+    with pytest.raises(UnknownNameError, match="p2"):
+        summarise(chain, names=["p2"])
+    with pytest.raises(InputError, match="between 0 and 1"):
+        summarise(chain, cl=[68.0])
+    with pytest.raises(InputError, match="kind"):
+        summarise(chain, kind="widest")
+    assert [row.name for row in summarise(chain, names=["p1"]).rows] == ["p1"]
+    with pytest.raises(UnknownNameError):
+        summarise(chain)["q"]
+
+
+class TestDensity:
+    rng = np.random.default_rng(3)
+
+    @pytest.mark.stat
+    @pytest.mark.parametrize(
+        ("distribution", "bounds"),
+        [
+            (stats.norm(), (-np.inf, np.inf)),
+            (stats.uniform(), (0.0, 1.0)),
+            (stats.expon(), (0.0, np.inf)),
+            (stats.t(3), (-np.inf, np.inf)),
+        ],
+    )
+    def test_close_to_the_truth(self, distribution, bounds):
+        draws = distribution.rvs(100_000, random_state=self.rng)
+        found = density_1d(draws, lower=bounds[0], upper=bounds[1])
+        step = found.grid[1] - found.grid[0]
+        assert np.abs(found.density - distribution.pdf(found.grid)).sum() * step < 0.05
+
+    def test_narrow_modes_far_apart_keep_their_widths(self):
+        draws = np.concatenate([self.rng.normal(0, 1, 50_000), self.rng.normal(100, 1, 50_000)])
+        assert density_1d(draws).bandwidth < 0.4
+
+    @pytest.mark.stat
+    def test_disconnected_region(self):
+        draws = np.concatenate([self.rng.normal(0, 1, 60_000), self.rng.normal(10, 0.5, 60_000)])
+        regions = highest_density(density_1d(draws), 0.9)
+        assert len(regions) == 2
+        mixture = [stats.norm(0, 1), stats.norm(10, 0.5)]
+        mass = sum(0.5 * (m.cdf(b) - m.cdf(a)) for m in mixture for a, b in regions)
+        assert mass == pytest.approx(0.9, abs=0.01)
+        # Highest density: the same height at all four ends.
+        heights = [0.5 * sum(m.pdf(x) for m in mixture) for region in regions for x in region]
+        assert np.ptp(heights) < 0.15 * np.mean(heights)
+
+    @pytest.mark.parametrize("effective", [None, 2000])
+    def test_a_plateau_is_one_region(self, effective):
+        draws = self.rng.uniform(-1, 1, 20_000)
+        regions = highest_density(density_1d(draws, lower=-1, upper=1, effective=effective), 0.6827)
+        assert len(regions) == 1
+        assert np.diff(regions[0])[0] == pytest.approx(2 * 0.6827, abs=0.05)
+
+    def test_region_at_an_edge_ends_there(self):
+        draws = self.rng.exponential(size=50_000)
+        ((low, high),) = highest_density(density_1d(draws, lower=0.0), 0.6827)
+        assert low == pytest.approx(0.0, abs=1e-4)
+        assert high == pytest.approx(-np.log(1 - 0.6827), abs=0.03)
+
+    def test_constant(self):
+        ((low, high),) = highest_density(density_1d(np.full(100, 2.0)), 0.68)
+        assert low == pytest.approx(2.0)
+        assert high == pytest.approx(2.0)
+
+    def test_shortest_interval(self):
+        assert shortest_interval(np.array([0.0, 1.0, 1.1, 1.2, 1.3, 5.0]), 0.5) == (1.0, 1.3)
+
+    @pytest.mark.stat
+    @pytest.mark.parametrize("cl", [0.6827, 0.9545])
+    def test_plane(self, cl):
+        x, y = self.rng.multivariate_normal([0, 0], [[1, 0.8], [0.8, 1]], 200_000).T
+        found = density_2d(x, y)
+        area = (found.x[1] - found.x[0]) * (found.y[1] - found.y[0])
+        inside = area * (found.density >= found.level(cl)).sum()
+        # An ellipse of chi2 < q holds cl of a plane: its area is pi q sqrt(det).
+        assert inside == pytest.approx(np.pi * stats.chi2(2).ppf(cl) * 0.6, rel=0.08)
+        assert found.density.sum() * area == pytest.approx(1.0)
+
+
+@pytest.mark.slow
+def test_two_gibibytes_are_summarised_in_less_than_one(tmp_path):
+    script = """
+import resource, sys
+import numpy as np
+from emcee.state import State
+from fitcore.sampling.chain_file import ChainFile
+from fitcore.sampling.chain_format import ChainHeader
+from fitcore.sampling.diagnostics import diagnose
+from fitcore.sampling.summary import summarise
+walkers, n = 256, 30
+path = sys.argv[1]
+header = ChainHeader(tuple(f"p{i}" for i in range(n)), tuple(np.repeat([0, 1, 2, 3], 64)), "f")
+rng = np.random.default_rng(1)
+random_state = np.random.RandomState(1).get_state()
+steps = 2**31 // (walkers * n * 8) + 1
+with ChainFile.create(path, header, block_steps=64) as chain:
+    pool = rng.standard_normal((97, walkers, n))
+    moved = np.ones(walkers, dtype=bool)
+    for t in range(steps):
+        chain.save_step(State(np.roll(pool[t % 97], t % 89, axis=0), np.zeros(walkers), None, random_state), moved)
+written = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+with ChainFile.open(path) as chain:
+    summarise(chain)
+    diagnose(chain)
+print(written, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+"""
+    path = tmp_path / "long.h5"
+    run = subprocess.run(
+        [sys.executable, "-c", script, str(path)],
+        check=True, capture_output=True, text=True, cwd=Path(__file__).parents[3],
+    )  # fmt: skip
+    written, peak = (int(v) for v in run.stdout.split())
+    assert path.stat().st_size > 2**31
+    unit = 1 if sys.platform == "darwin" else 1024
+    assert written * unit < 2**29
+    assert peak * unit < 2**30
+    assert resource.getpagesize() > 0
+    path.unlink()
