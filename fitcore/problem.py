@@ -30,7 +30,7 @@ from likelihoods.ranges import apply_scheme
 from observables import Catalogue, Hypothesis
 from observables import catalogue as public_catalogue
 from observables.errors import InputError, UnknownNameError
-from observables.graph import Graph, compile_graph, find_parameters
+from observables.graph import Caller, Graph, compile_graph, find_parameters
 
 if TYPE_CHECKING:
     from fitcore.result import FitResult
@@ -339,10 +339,8 @@ class Problem:
         """
         wanted = tuple(names)
         points, single = self.theta(theta)
-        graph = self._graph_for(wanted)
-        results = graph.evaluate(list(points[: len(graph.inputs)]))
         shaped = {}
-        for name, result in zip(wanted, results, strict=True):
+        for name, result in self._evaluate(wanted, list(points)).items():
             array = np.array(np.broadcast_to(result, points.shape[1:]))
             shaped[name] = array[0] if single else array
         return shaped
@@ -351,20 +349,27 @@ class Problem:
         """Real quantities and their exact gradients: shapes (B, q) and (B, q, n)."""
         wanted = tuple(names)
         points, single = self.theta(theta)
-        graph = self._graph_for(wanted)
         batch = points.shape[1]
+        everything = tuple(range(self.n_parameters))
         values = np.empty((len(wanted), batch))
         gradient = np.zeros((len(wanted), self.n_parameters, batch))
         with np.errstate(all="ignore"):
-            results = graph.evaluate(seed(points[: len(graph.inputs)]), call_with_derivatives)
-        for row, (name, result) in enumerate(zip(wanted, results, strict=True)):
+            results = self._evaluate(wanted, seed(points), call_with_derivatives)
+        for row, name in enumerate(wanted):
             if self.is_complex(name):
                 raise InputError(f"{name!r} is complex; take its real part, magnitude or phase")
-            values[row] = getattr(result, "value", result)
-            support = graph.supports[name]
-            gradient[row, list(support)] = tangents_of(result, support, batch)
+            values[row] = getattr(results[name], "value", results[name])
+            gradient[row] = tangents_of(results[name], everything, batch)
         value_rows, gradient_rows = values.T, np.moveaxis(gradient, -1, 0)
         return (value_rows[0], gradient_rows[0]) if single else (value_rows, gradient_rows)
+
+    def _evaluate(self, names: tuple[str, ...], leaves: list[Any], call: Caller | None = None) -> dict[str, Any]:
+        """Name -> value; the ranges among the names are parameters that the graph knows nothing of."""
+        ranges = {p.name: leaf for p, leaf in zip(self.parameters, leaves, strict=True) if self._is_shift(p)}
+        computed = tuple(name for name in names if name not in ranges)
+        graph = self._graph_for(computed)
+        found = dict(zip(computed, graph.evaluate(leaves[: len(graph.inputs)], call), strict=True)) | ranges
+        return {name: found[name] for name in names}
 
     def _graph_for(self, names: tuple[str, ...]) -> Graph:
         if names not in self._graphs:
@@ -442,6 +447,8 @@ class Problem:
 
     def determines(self, name: str) -> bool:
         """Whether every parameter that a quantity rests on has a value in this problem."""
+        if name in self.parameter_names:
+            return True
         try:
             self._graph_for((name,))
         except (InputError, UnknownNameError):
@@ -516,11 +523,18 @@ class Problem:
 
     # -- what to do with it -------------------------------------------------------------------------------------
 
-    def fit(self, *, derived: Iterable[str] | None = None, profile: Iterable[str] | None = None) -> FitResult:
+    def fit(
+        self,
+        *,
+        derived: Iterable[str] | None = None,
+        profile: Iterable[str] | None = None,
+        starts: int = 64,
+        rng: np.random.Generator | int | None = 0,
+    ) -> FitResult:
         """Best fit, intervals, goodness of fit, pulls and other minima; see `fitcore.minimise.best_fit.fit`."""
         from fitcore.minimise.best_fit import fit
 
-        return fit(self, derived=derived, profile=profile)
+        return fit(self, derived=derived, profile=profile, starts=starts, rng=rng)
 
 
 def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:

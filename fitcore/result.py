@@ -217,7 +217,7 @@ class FitResult:
                 n_calls=dict(data["n_calls"]),
                 provenance=dict(data["provenance"]),
             )
-        except (KeyError, TypeError, AttributeError) as error:
+        except (KeyError, TypeError, ValueError, AttributeError) as error:
             raise StoreError(f"this is not a stored weakmix fit: {error!r}") from error
 
     @classmethod

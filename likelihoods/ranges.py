@@ -66,7 +66,7 @@ def apply_scheme(entries: Sequence[Entry], scheme: str, is_leaf: Callable[[str],
         elif scheme == "flat" and entry.kind == "theory":
             if not is_leaf(entry.quantity):
                 problems.append(
-                    f"{entry.where}: [{entry.id}] is a theory entry on {entry.quantity!r}, which is computed; "
+                    f"{entry.where} is a theory entry on {entry.quantity!r}, which is computed; "
                     "flat theory errors need it on a parameter: leave it out with --without"
                 )
                 continue
@@ -75,7 +75,7 @@ def apply_scheme(entries: Sequence[Entry], scheme: str, is_leaf: Callable[[str],
             high = min(high, entry.value + entry.plus + half)
             if not low < high:
                 problems.append(
-                    f"{entry.where}: [{entry.id}] the flat ranges of {entry.quantity!r} do not meet"
+                    f"{entry.where} the flat ranges of {entry.quantity!r} do not meet"
                 )
             bounds[entry.quantity] = (low, high)
         else:

@@ -41,6 +41,17 @@ hbar = 1 = ħ
 """
 
 _DIMENSIONLESS = {"1": 1.0, "": 1.0, "%": 1e-2, "percent": 1e-2}
+# What nearly every entry is written in, so that a fit does not wait for pint: unit -> dimension, mantissa, power of ten.
+_ENERGIES = {"meV": -3, "eV": 0, "keV": 3, "MeV": 6, "GeV": 9, "TeV": 12}
+_TIMES = {"fs": -15, "ps": -12, "ns": -9, "us": -6, "ms": -3, "s": 0}
+_COMMON: dict[str, tuple[str, float, int]] = {
+    **{unit: ("energy", 1.0, power) for unit, power in _ENERGIES.items()},
+    **{unit: ("time", 1.0, power) for unit, power in _TIMES.items()},
+    **{f"1/{unit}": ("1/time", 1.0, -power) for unit, power in _TIMES.items()},
+    "rad": ("angle", 1.0, 0),
+    "mrad": ("angle", 1.0, -3),
+    "deg": ("angle", math.pi / 180.0, 0),
+}
 # Powers are kept small and unchained, so that no string can make the parser compute for minutes.
 _POWER = re.compile(r"\*\*|\^")
 _TAME_POWER = re.compile(r"(?:[A-Za-z]|(?<![\d.])10)\s*(?:\*\*|\^)\s*[-+]?\d{1,2}(?![\d.]|\s*(?:\*\*|\^))")
@@ -109,6 +120,11 @@ def factor(unit: str, target: str) -> float:
         return 1.0
     if not unit.strip():
         raise UnitError(f'unit is empty; write "{target}"')
+    if unit in _COMMON and target in _COMMON:
+        (dimension, mantissa, power), (wanted, target_mantissa, target_power) = _COMMON[unit], _COMMON[target]
+        if dimension != wanted:
+            raise UnitError(f'unit "{unit}" cannot be converted to "{target}"')
+        return mantissa / target_mantissa * float(f"1e{power - target_power}")
     scale, target_scale = _scale(unit), _scale(target)
     if scale is not None and target_scale is not None:
         return scale / target_scale

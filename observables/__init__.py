@@ -8,7 +8,7 @@ from observables.catalogue import catalogue as _catalogue
 from observables.hypothesis import Hypothesis
 
 # The order of import is the order of declaration, and so of the parameters of a problem.
-from observables import (  # isort: skip
+from observables import (  # noqa: F401  # isort: skip
     mixing_matrix,
     constants,
     beta_decays,
@@ -16,6 +16,7 @@ from observables import (  # isort: skip
     semileptonic_decays,
     scale_evolution,
     neutral_mixing,
+    kaon_mixing,
     cp_asymmetries,
 )
 

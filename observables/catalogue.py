@@ -284,7 +284,9 @@ class Catalogue:
             arguments = tuple(inspect.signature(function).parameters)
             renamed = dict(ingredients or {})
             if unknown := set(renamed) - set(arguments):
-                raise CatalogueError(f"{origin}: {label!r} renames {sorted(unknown)}, which are not its arguments")
+                raise CatalogueError(
+                    f"{origin}: {label!r} renames {sorted(unknown)}, which are not its arguments"
+                )
             self._add(
                 Quantity(
                     name=label,
@@ -418,12 +420,17 @@ class Catalogue:
             node = self._nodes.get(name)
             if not isinstance(node, Quantity):
                 close = ", ".join(self.close_matches(name, self.names("quantity"))) or "nothing like it"
-                faults.append(f"hypothesis {overlay.name!r} replaces {name!r}, which is no quantity; there is {close}")
+                faults.append(
+                    f"hypothesis {overlay.name!r} replaces {name!r}, which is no quantity; there is {close}"
+                )
             elif any(layer.complex_valued != node.complex_valued for layer in layers):
                 kind = "Complex" if node.complex_valued else "Real"
-                faults.append(f"hypothesis {overlay.name!r} replaces {name!r}, which must stay '-> {kind}' ({node.origin})")
+                faults.append(
+                    f"hypothesis {overlay.name!r} replaces {name!r}, which must stay '-> {kind}' ({node.origin})"
+                )
         faults.extend(
-            f"two owners of the name {name!r}: hypothesis {overlay.name!r} ({node.origin}) and {self._nodes[name].origin}"
+            f"two owners of the name {name!r}: hypothesis {overlay.name!r} ({node.origin}) and "
+            f"{self._nodes[name].origin}"
             for name, node in overlay.parameters.items()
             if name in self._nodes
         )
@@ -477,7 +484,7 @@ class Catalogue:
         CatalogueError
             Every fault, with the place of its declaration.
         """
-        faults = []
+        faults: list[str] = []
         for name, node in self._nodes.items():
             if not isinstance(node, Quantity):
                 continue
@@ -487,7 +494,9 @@ class Catalogue:
                 if needed not in self._nodes
             )
             if node.cp not in ("even", "odd", "conjugate") and node.cp not in self._nodes:
-                faults.append(f"{node.origin}: {name!r} names the CP partner {node.cp!r}, which nobody declares")
+                faults.append(
+                    f"{node.origin}: {name!r} names the CP partner {node.cp!r}, which nobody declares"
+                )
         if not faults:
             faults = self._cycles()
         if faults:

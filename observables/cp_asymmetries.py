@@ -13,7 +13,6 @@ PDG review "CP Violation in the Quark Sector" (T. Gershon, Y. Nir); HFLAV, arXiv
 from __future__ import annotations
 
 import math
-from typing import Any
 
 import numpy as np
 
@@ -58,7 +57,7 @@ parameter(
     source=_GERSHON_NIR,
     cp="odd",
 )
-def sine_2beta_ccs(mixing_phase_Bd: Any, penguin_shift_2beta: Any) -> Real:
+def sine_2beta_ccs(mixing_phase_Bd: Real, penguin_shift_2beta: Real) -> Real:
     """``sin(phi_d + penguin shift)``, dimensionless; CP-odd.
 
     Sign: ``+S`` of J/psi K_S, ``-S`` of J/psi K_L; positive in the standard model (``sin 2 beta``). The phase
@@ -73,7 +72,7 @@ def sine_2beta_ccs(mixing_phase_Bd: Any, penguin_shift_2beta: Any) -> Real:
     latex=r"\cos 2\beta",
     source=_GERSHON_NIR,
 )
-def cosine_2beta_ccs(mixing_phase_Bd: Any, penguin_shift_2beta: Any) -> Real:
+def cosine_2beta_ccs(mixing_phase_Bd: Real, penguin_shift_2beta: Real) -> Real:
     """``cos(phi_d + penguin shift)``, dimensionless; CP-even, positive in the standard model."""
     return np.cos((mixing_phase_Bd + penguin_shift_2beta) * RADIAN_PER_DEGREE)
 
@@ -86,7 +85,7 @@ def cosine_2beta_ccs(mixing_phase_Bd: Any, penguin_shift_2beta: Any) -> Real:
     cp="odd",
     period=2 * math.pi,
 )
-def phase_phi_s(mixing_phase_Bs: Any, penguin_shift_phi_s: Any) -> Real:
+def phase_phi_s(mixing_phase_Bs: Real, penguin_shift_phi_s: Real) -> Real:
     """B_s mixing phase plus penguin shift, in rad (the shift itself is in deg); CP-odd.
 
     Sign: ``-2 beta_s`` in the standard model, about -0.037; ``S = -eta_f sin(phi_s)`` for a final state of CP
@@ -102,7 +101,7 @@ def phase_phi_s(mixing_phase_Bs: Any, penguin_shift_phi_s: Any) -> Real:
     source=_GERSHON_NIR,
     cp="odd",
 )
-def sine_2beta_plus_gamma(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
+def sine_2beta_plus_gamma(mixing_phase_Bd: Real, angle_gamma: Real) -> Real:
     """``sin(phi_d + gamma)`` as measured in B_d -> D(*) pi, dimensionless; CP-odd.
 
     Sign: positive in the standard model, ``sin(2 beta + gamma)`` with an argument near 110 deg.
@@ -119,7 +118,7 @@ def sine_2beta_plus_gamma(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
     cp="odd",
     period=180.0,
 )
-def isospin_alpha(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
+def isospin_alpha(mixing_phase_Bd: Real, angle_gamma: Real) -> Real:
     """``180 deg - gamma - phi_d/2`` modulo 180 deg, given in [0, 180); CP-odd.
 
     The CP operation exchanges alpha and 180 deg - alpha, which is -alpha. The decays fix the sum of gamma
@@ -128,6 +127,6 @@ def isospin_alpha(mixing_phase_Bd: Any, angle_gamma: Any) -> Real:
     penguins (about 1.5 deg) are neglected.
     """
     alpha = 180.0 - angle_gamma - 0.5 * mixing_phase_Bd
-    for _ in range(2):  # gamma and phi_d lie in (-180, 180], so alpha starts in [-90, 450)
+    for _ in range(2):  # gamma and phi_d lie in [-180, 180], so alpha starts in [-90, 450]
         alpha = np.where(alpha < 0.0, alpha + 180.0, np.where(alpha >= 180.0, alpha - 180.0, alpha))
     return alpha

@@ -212,7 +212,8 @@ def compute(
     results = graph.evaluate(arrays)
     shape = np.broadcast_shapes(*(np.shape(a) for a in arrays))
     return {
-        name: np.array(np.broadcast_to(result, shape))[()] for name, result in zip(names, results, strict=True)
+        name: np.array(np.broadcast_to(result, shape))[()]
+        for name, result in zip(names, results, strict=True)
     }
 
 

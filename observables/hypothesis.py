@@ -72,7 +72,9 @@ class Hypothesis:
     def __repr__(self) -> str:
         return f"Hypothesis({self.name!r})"
 
-    def parameter(self, name: str, *, unit: str, start: float, scale: float, title: str, **more: Any) -> Parameter:
+    def parameter(
+        self, name: str, *, unit: str, start: float, scale: float, title: str, **more: Any
+    ) -> Parameter:
         """Declare a parameter that exists only under this hypothesis; arguments as `Catalogue.parameter`."""
         origin, owner = _caller_origin(), _caller_owner()
         held = self.parameters.get(name)
@@ -80,11 +82,15 @@ class Hypothesis:
             raise CatalogueError(
                 f"{self.name!r} declares the parameter {name!r} twice: {held.origin} and {origin}"
             )
-        node = make_parameter(name, origin=origin, owner=owner, unit=unit, start=start, scale=scale, title=title, **more)
+        node = make_parameter(
+            name, origin=origin, owner=owner, unit=unit, start=start, scale=scale, title=title, **more
+        )
         self.parameters[name] = node
         return node
 
-    def replaces(self, name: str, ingredients: Mapping[str, str] | None = None) -> Callable[[Function], Function]:
+    def replaces(
+        self, name: str, ingredients: Mapping[str, str] | None = None
+    ) -> Callable[[Function], Function]:
         """Make the decorated function stand in for the quantity ``name``."""
 
         def declare(function: Function) -> Function:
@@ -92,7 +98,9 @@ class Hypothesis:
             renamed = dict(ingredients or {})
             arguments = tuple(inspect.signature(function).parameters)
             if unknown := set(renamed) - set(arguments):
-                raise CatalogueError(f"{origin}: {name!r} renames {sorted(unknown)}, which are not its arguments")
+                raise CatalogueError(
+                    f"{origin}: {name!r} renames {sorted(unknown)}, which are not its arguments"
+                )
             layer = Layer(
                 function=function,
                 ingredients={a: renamed.get(a, a) for a in arguments},

@@ -285,7 +285,7 @@ def top_mass_msbar_from_pole(
     source="K. Melnikov, T. van Ritbergen, Phys. Lett. B 482, 99 (2000)",
     recalled=True,
 )
-def top_mass_pole(top_mass_msbar: Any, strong_coupling_mZ: Any, mass_Z: Any) -> Real:
+def top_mass_pole(top_mass_msbar: Real, strong_coupling_mZ: Real, mass_Z: Real) -> Real:
     """Pole mass of the top quark, GeV, from its MSbar mass with three loops.
 
     Lets an inputs file state a measured top mass as such. Whether a mass fitted to decay products *is* the

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from fitcore.commands.errors import EXIT_FELL_SHORT, input_error
-from fitcore.commands.options import hypothesis_option, output_options
+from fitcore.commands.options import hypothesis_option, module_option, output_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -60,6 +60,7 @@ class Point:
     help="Set a parameter or constant; repeatable.",
 )
 @hypothesis_option
+@module_option
 @output_options
 @click.pass_context
 def command(
@@ -69,6 +70,7 @@ def command(
     start_values: bool,
     assignments: tuple[str, ...],
     hypothesis: tuple[str, ...],
+    modules: tuple[str, ...],
     output: Output,
 ) -> None:
     """Compute each QUANTITY from the parameters.
@@ -86,9 +88,11 @@ def command(
       weakmix compute asymmetry_CP_even_DK --start-values --at strong_phase_DK=128.5deg
     """
     from fitcore.commands import tables
+    from fitcore.commands.modules import load_modules
     from fitcore.commands.rounding import number
     from observables import catalogue
 
+    load_modules(modules)
     names = tuple(dict.fromkeys(quantities))
     point = Point() if source is None else point_from(source, hypothesis)
     chosen = "+".join(hypothesis) or point.hypothesis
@@ -104,12 +108,12 @@ def command(
         errors = propagate(names, values, overlay, point, {n: node.period for n, node in nodes.items()})
 
     output.headline("values", f"hypothesis {overlay.name}", point.name)
-    made = tables.table("Parameters used", ("name", "whole"), ("value", "whole"), "unit", "from")
+    made = tables.table("Parameters used", ("name", "name"), ("value", "whole"), "unit", "from")
     for name, origin in origins.items():
         made.add_row(name, number(float(values[name])), tables.shown_unit(leaves[name].unit), origin)
     if origins:
         output.show(made)
-    rows = tables.table("Values", ("quantity", "whole"), ("value", "whole"), "unit", "title")
+    rows = tables.table("Values", ("quantity", "name"), ("value", "whole"), "unit", "title")
     for name in names:
         rows.add_row(
             name,
@@ -145,24 +149,21 @@ def command(
         }
     output.write_json(content)
     if output.out is not None:
-        write_run(output, content, source, assignments, start_values)
+        options = {
+            **{"quantities": list(names), "from": source, "at": list(assignments)},
+            **{"start_values": start_values, "hypothesis": list(hypothesis), "modules": list(modules)},
+        }
+        write_run(output, content, options)
     undefined = [name for name in names if not math.isfinite(abs(computed[name]))]
     if undefined:
         click.echo(f"weakmix: no value at this point: {', '.join(undefined)}", err=True)
         ctx.exit(EXIT_FELL_SHORT)
 
 
-def write_run(
-    output: Output,
-    content: dict[str, Any],
-    source: str | None,
-    assignments: tuple[str, ...],
-    start_values: bool,
-) -> None:
+def write_run(output: Output, content: dict[str, Any], options: dict[str, Any]) -> None:
     """Write a run folder with the values."""
     from fitcore.commands import run_folder
 
-    options = {"from": source, "at": list(assignments), "start_values": start_values}
     with run_folder.writing("compute", "values", out=output.out, options=options) as run:
         run.write_json("result.json", content)
     output.show(f"Written to {run.place}")

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from fitcore.commands.errors import input_error
-from fitcore.commands.options import ProblemRequest, Work, output_options, work_options
+from fitcore.commands.options import ProblemRequest, Work, output_options, seed_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -25,7 +25,7 @@ INPUTS = "tidewater"
 @click.command("demo")
 @click.option("--no-figures", is_flag=True, help="Draw nothing (saves about a second).")
 @output_options
-@work_options
+@seed_options
 @click.pass_context
 def command(ctx: click.Context, no_figures: bool, output: Output, work: Work) -> None:
     """Fit the invented Tidewater inputs and say where their truth lies.
@@ -38,13 +38,13 @@ def command(ctx: click.Context, no_figures: bool, output: Output, work: Work) ->
 
     request = ProblemRequest(INPUTS)
     problem = request.load()
-    announce(output, "demo", problem)
+    announce(output, "demo", problem, notices=False)
     truth = read_truth(problem)
     asked = tuple(name for name in truth if name not in problem.parameter_names and name not in problem.fixed)
     result, place = fit_and_store(
         problem, request, output, work, command="demo", derived=asked, figures=not no_figures
     )
-    print_fit(output, result, place)
+    print_fit(output, problem, result, place)
     rows = against_truth(result, truth)
     output.show("", truth_table(rows))
     held = sum(row["in_68"] for row in rows.values())
@@ -104,10 +104,10 @@ def truth_table(rows: dict[str, dict[str, Any]]) -> Table:
 
     made = tables.table(
         "Where the truth lies",
-        ("name", "whole"),
+        ("name", "name"),
         ("truth", "right"),
         ("68.27 % interval", "whole"),
-        "unit",
+        ("unit", "whole"),
         ("away", "right"),
         "68.27 %",
         "95.0 %",

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import click
 
 from fitcore.commands.errors import EXIT_UNUSABLE_INPUT
-from fitcore.commands.options import reading_options
+from fitcore.commands.options import module_option, reading_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -53,9 +53,17 @@ SYNONYMS = {
 @click.option(
     "--limit", type=click.IntRange(min=1), default=30, show_default=True, help="Show at most this many."
 )
+@module_option
 @reading_options
 @click.pass_context
-def command(ctx: click.Context, words: tuple[str, ...], kind: str | None, limit: int, output: Output) -> None:
+def command(
+    ctx: click.Context,
+    words: tuple[str, ...],
+    kind: str | None,
+    limit: int,
+    modules: tuple[str, ...],
+    output: Output,
+) -> None:
     """Search names, titles, symbols and latex of the catalogue; the best match first.
 
     \b
@@ -66,8 +74,10 @@ def command(ctx: click.Context, words: tuple[str, ...], kind: str | None, limit:
       weakmix find sin2b
     """
     from fitcore.commands import tables
+    from fitcore.commands.modules import load_modules
     from observables import catalogue
 
+    load_modules(modules)
     pool = [catalogue[name] for name in catalogue.names(kind)]
     found = search(pool, words)
     output.headline("catalogue", f"{len(found)} of {len(pool)} match {' '.join(words)!r}")

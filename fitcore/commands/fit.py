@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import click
 
 from fitcore.commands.errors import EXIT_FELL_SHORT
-from fitcore.commands.options import ProblemRequest, Work, output_options, problem_options, work_options
+from fitcore.commands.options import ProblemRequest, Work, output_options, problem_options, seed_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -28,7 +28,7 @@ if TYPE_CHECKING:
 )
 @click.option("--no-figures", is_flag=True, help="Draw nothing (saves about a second).")
 @output_options
-@work_options
+@seed_options
 @click.pass_context
 def command(
     ctx: click.Context,
@@ -49,11 +49,11 @@ def command(
       weakmix fit mine.toml --set frequency-Bd.error=0.001 --json - | jq .p_value
     """
     problem = request.load()
-    announce(output, "fit", problem)
+    announce(output, "fit", problem, notices=False)
     result, place = fit_and_store(
         problem, request, output, work, command="fit", derived=derived, figures=not no_figures
     )
-    print_fit(output, result, place)
+    print_fit(output, problem, result, place)
     output.write_json(result.to_dict())
     leave_if_not_valid(ctx, result)
 
@@ -88,21 +88,23 @@ def fit_and_store(
 
     names = derived_names(problem, derived)
     if output.json_on_stdout and output.out is None:
-        return problem.fit(derived=names), None
+        return problem.fit(derived=names, rng=work.seed), None
     options = {**request.describe(), "derived": list(derived), "figures": figures}
     with run_folder.writing(
         command, problem.inputs.name, out=output.out, options=options, seed=work.seed
     ) as run:
-        result = problem.fit(derived=names)
+        result = problem.fit(derived=names, rng=work.seed)
         write_run(run, problem, result, figures=figures)
     return result, run.place
 
 
-def print_fit(output: Output, result: FitResult, place: Path | None) -> None:
-    """Print a fit for a person, the verdict first."""
+def print_fit(output: Output, problem: Problem, result: FitResult, place: Path | None) -> None:
+    """Print a fit for a person: the verdict, what is special about the inputs, the numbers."""
     from fitcore.commands import tables
 
-    output.show(*tables.verdict(result), "")
+    output.show(*tables.verdict(result))
+    show_notices(output, problem)
+    output.show("")
     output.show(tables.estimates("Parameters", result.parameters))
     if result.derived:
         output.show(tables.estimates("Derived", result.derived))
@@ -115,10 +117,14 @@ def print_fit(output: Output, result: FitResult, place: Path | None) -> None:
         output.show(f"\nWritten to {place}")
 
 
-def announce(output: Output, what: str, problem: Problem) -> None:
-    """Print the first lines of every command on INPUTS: what is fitted, and what is special about it."""
-    from fitcore.commands import tables
+def announce(output: Output, what: str, problem: Problem, *, notices: bool = True) -> None:
+    """Print the first lines of every command on INPUTS: what is fitted, and what is special about it.
 
+    Parameters
+    ----------
+    notices : bool
+        False for a command that calls `show_notices` itself, after its verdict.
+    """
     inputs = problem.inputs
     output.headline(
         what,
@@ -127,9 +133,19 @@ def announce(output: Output, what: str, problem: Problem) -> None:
         f"hypothesis {problem.hypothesis}",
         f"theory errors {problem.theory_errors}",
     )
+    if notices:
+        show_notices(output, problem)
+        output.show("")
+
+
+def show_notices(output: Output, problem: Problem) -> None:
+    """Print what is special about the inputs: replaced, recalled, inflated, held fixed."""
+    from fitcore.commands import tables
+
     units = {name: problem.unit_of(name) for name in problem.fixed}
-    output.show(tables.notices(inputs.notices, problem.fixed, units))
-    output.show("")
+    made = tables.notices(problem.inputs.notices, problem.fixed, units)
+    if made.row_count:
+        output.show(made)
 
 
 def derived_names(problem: Problem, asked: tuple[str, ...]) -> tuple[str, ...]:

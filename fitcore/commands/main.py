@@ -28,6 +28,12 @@ COMMANDS: dict[str, dict[str, str]] = {
     },
     "Fit": {
         "fit": "Find the best fit, its intervals and its pulls.",
+        "profile": "Scan one or two quantities: intervals, regions, each constraint as a band.",
+    },
+    "Study": {
+        "indirect": "What everything else says about a quantity, and the tension with its measurement.",
+        "budget": "Which input makes which part of an uncertainty.",
+        "outlook": "Expected intervals when some uncertainties shrink.",
     },
     "Share": {
         "demo": "Fit the invented Tidewater inputs and compare with their known truth.",

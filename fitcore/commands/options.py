@@ -1,11 +1,11 @@
 """Options shared by the commands, and the small objects that commands receive from them.
 
-Three decorators, to be put under `@click.command(...)`; each adds its options and passes *one* object:
+Decorators, to be put under `@click.command(...)`; each adds its options and passes *one* object:
 
-- `@problem_options`: INPUTS, --only, --without, --set, --hypothesis, --theory-errors
+- `@problem_options`: INPUTS, --only, --without, --set, --hypothesis, --theory-errors, --module
   -> `request: ProblemRequest`
 - `@output_options`: --json, --out, --quiet -> `output: Output`
-- `@work_options`: --seed, --jobs -> `work: Work`
+- `@work_options`: --seed, --jobs -> `work: Work`; `@seed_options` is --seed alone
 """
 
 from __future__ import annotations
@@ -38,17 +38,20 @@ class ProblemRequest:
     settings: tuple[str, ...] = ()
     hypothesis: tuple[str, ...] = ()
     theory_errors: str = "as-given"
+    modules: tuple[str, ...] = ()
 
     def load(self) -> Problem:
-        """Read the inputs and compile the problem.
+        """Read the user's modules and the inputs, and compile the problem.
 
         Raises
         ------
         InputError, UnknownNameError
-            As `Problem.load` does.
+            As `Problem.load` and `load_modules` do.
         """
+        from fitcore.commands.modules import load_modules
         from fitcore.problem import Problem
 
+        load_modules(self.modules)
         return Problem.load(
             self.inputs,
             hypothesis="+".join(self.hypothesis) or "standard",
@@ -67,6 +70,7 @@ class ProblemRequest:
             "set": list(self.settings),
             "hypothesis": list(self.hypothesis),
             "theory_errors": self.theory_errors,
+            "modules": list(self.modules),
         }
 
 
@@ -113,9 +117,19 @@ hypothesis_option = click.option(
 )
 
 
+module_option = click.option(
+    "--module",
+    "modules",
+    multiple=True,
+    metavar="FILE.py",
+    type=click.Path(),
+    help="Python file that declares quantities or hypotheses of your own; repeatable.",
+)
+
+
 def problem_options(function: Command) -> Command:
     """Add INPUTS and the options that choose and change its entries; passes `request`."""
-    keys = ("inputs", "only", "without", "settings", "hypothesis", "theory_errors")
+    keys = ("inputs", "only", "without", "settings", "hypothesis", "theory_errors", "modules")
     return _chain(
         _gathered("request", ProblemRequest, keys)(function),
         [
@@ -141,6 +155,7 @@ def problem_options(function: Command) -> Command:
                 show_default=True,
                 help="Treat theory errors as Gaussian, as flat ranges, or as the file says.",
             ),
+            module_option,
         ],
     )
 
@@ -170,24 +185,23 @@ def reading_options(function: Command) -> Command:
     return _chain(_gathered("output", Output, ("json", "quiet"))(function), [json_option, quiet_option])
 
 
+seed_option = click.option(
+    "--seed",
+    type=click.IntRange(min=0),
+    default=0,
+    show_default=True,
+    help="Seed of all random numbers.",
+)
+jobs_option = click.option(
+    "--jobs", type=click.IntRange(min=1), default=1, show_default=True, help="Number of processes."
+)
+
+
+def seed_options(function: Command) -> Command:
+    """Add --seed, for commands whose work runs in one process; passes `work`."""
+    return _chain(_gathered("work", Work, ("seed",))(function), [seed_option])
+
+
 def work_options(function: Command) -> Command:
     """Add --seed and --jobs; passes `work`."""
-    return _chain(
-        _gathered("work", Work, ("seed", "jobs"))(function),
-        [
-            click.option(
-                "--seed",
-                type=click.IntRange(min=0),
-                default=0,
-                show_default=True,
-                help="Seed of all random numbers.",
-            ),
-            click.option(
-                "--jobs",
-                type=click.IntRange(min=1),
-                default=1,
-                show_default=True,
-                help="Number of processes.",
-            ),
-        ],
-    )
+    return _chain(_gathered("work", Work, ("seed", "jobs"))(function), [seed_option, jobs_option])

@@ -14,8 +14,8 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from rich.console import Console, RenderableType
 
+#: Columns written to a file or pipe.
 PIPE_WIDTH = 140
-NARROW = 100
 
 
 def weakmix_version() -> str:
@@ -96,20 +96,27 @@ class Output:
 
     def show(self, *parts: RenderableType) -> None:
         """Print parts for a person."""
-        from rich.table import Table
-
         for part in parts:
-            if isinstance(part, Table) and self.console.width < NARROW:
-                for column in part.columns:
-                    column.no_wrap = False  # a column that may not break would be cut off
-            self.console.print(part)
+            fit_into = getattr(part, "fit_into", None)
+            if fit_into is None:
+                self.console.print(part)
+            else:
+                self.console.print(fit_into(self.console), "")
 
     def headline(self, what: str, *details: str) -> None:
         """Print the first line of a command: program, what it does to quark mixing, on what."""
         from rich.text import Text
 
         line = Text(f"weakmix {weakmix_version()} - quark mixing {what}", style="bold")
-        line.append("".join(f" - {detail}" for detail in details if detail), style="not bold")
+        length = len(line)
+        for detail in filter(None, details):  # broken between details, not inside them
+            if length + 3 + len(detail) > self.console.width:
+                line.append("\n  ")
+                length = 2 + len(detail)
+            else:
+                line.append(" - ", style="not bold")
+                length += 3 + len(detail)
+            line.append(detail, style="not bold")
         self.show(line)
 
     def write_json(self, content: Any) -> None:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from fitcore.commands.options import hypothesis_option, reading_options
+from fitcore.commands.options import hypothesis_option, module_option, reading_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -18,8 +18,9 @@ if TYPE_CHECKING:
 @click.command("recipe")
 @click.argument("name")
 @hypothesis_option
+@module_option
 @reading_options
-def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
+def command(name: str, hypothesis: tuple[str, ...], modules: tuple[str, ...], output: Output) -> None:
     """Print how NAME is made: formula, ingredients, parameters, sources.
 
     \b
@@ -29,10 +30,12 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
     from rich.padding import Padding
 
     from fitcore.commands import tables
+    from fitcore.commands.modules import load_modules
     from fitcore.commands.rounding import number, with_error
     from observables import catalogue
     from observables.graph import find_parameters
 
+    load_modules(modules)
     overlay = catalogue.get_hypothesis("+".join(hypothesis) or "standard")
     node: Any = overlay.parameters[name] if name in overlay.parameters else catalogue[name]
     leaves = find_parameters(catalogue, (name,), overlay)
@@ -64,7 +67,7 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
     if parameters:
         made = tables.table(
             "Parameters",
-            ("name", "whole"),
+            ("name", "name"),
             ("start", "right"),
             ("lower", "right"),
             ("upper", "right"),
@@ -83,7 +86,7 @@ def command(name: str, hypothesis: tuple[str, ...], output: Output) -> None:
             )
         output.show(made)
     if constants:
-        made = tables.table("Constants", ("name", "whole"), ("value", "whole"), "unit", "source")
+        made = tables.table("Constants", ("name", "name"), ("value", "whole"), "unit", "source")
         for leaf in constants:
             made.add_row(
                 leaf.name,

@@ -4,6 +4,7 @@
     inputs.toml      the exact inputs, self-contained
     run.json         command, options, seed, versions, and the sha256 of every other file
     log.jsonl        what happened when, one JSON object per line
+    NAME.py          the user's own modules, if any
     NAME.pdf .png .csv   each figure with its data
 
 A folder appears whole or not at all: it is built beside its final place and renamed into it.
@@ -210,7 +211,7 @@ def writing(
     out : Path or None
         The place, if the user named it.
     options : mapping
-        The command's options, as plain data.
+        The command's options, as plain data; files listed under ``"modules"`` are copied into the folder.
     seed : int or None
         The seed of the run.
 
@@ -245,6 +246,8 @@ def writing(
     try:
         building.chmod(0o777 & ~_umask())
         run.log("started", command=command)
+        for module in options.get("modules", ()):
+            shutil.copyfile(module, building / Path(module).name)
         yield run
         run.log("finished")
         run.finish()

@@ -33,8 +33,8 @@ def command(request: ProblemRequest, sources: bool, output: Output) -> None:
     output.show(f"{inputs.title}\n")
     made = tables.table(
         "",
-        ("id", "whole"),
-        "quantity",
+        ("id", "name"),
+        ("quantity", "spare"),
         ("value", "whole"),
         ("unit", "whole"),
         "groups",
@@ -55,7 +55,7 @@ def command(request: ProblemRequest, sources: bool, output: Output) -> None:
         )
     output.show(made)
     if sources:
-        listed = tables.table("Sources", ("id", "whole"), "source")
+        listed = tables.table("Sources", ("id", "name"), "source")
         for entry in problem.entries:
             listed.add_row(entry.id, entry.source + (f" [{entry.pdg}]" if entry.pdg else ""))
             if entry.note:

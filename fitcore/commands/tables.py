@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import copy
 import math
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -13,10 +15,17 @@ from rich.text import Text
 from fitcore.commands.rounding import interval, number, with_error
 
 if TYPE_CHECKING:
+    from rich.console import Console
+
     from fitcore.result import Estimate, FitResult, MeasurementRow
 
 #: Order of the notices about the inputs; other kinds follow.
 NOTICE_ORDER = ("replaced", "dropped", "changed", "inflated", "shared", "recalled")
+
+#: Names are not folded into lines shorter than this.
+SHORTEST_NAME = 14
+#: Text columns are not squeezed below this where a spare column can go instead.
+READABLE = 24
 
 CAUTION = (
     "Intervals are those of chi-square differences of 1.000 (68.27 %) and 3.841 (95.0 %) for one quantity at "
@@ -26,7 +35,89 @@ CAUTION = (
 )
 
 
-def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Table:
+class HouseTable(Table):
+    """A table that gives up its least columns, then folds names, before it breaks a number.
+
+    Attributes
+    ----------
+    spare : list of int
+        Columns that go when there is no room, the first one first.
+    folding : list of int
+        Columns of names, which may be folded at `_`, `-`, `.` and `/`.
+    """
+
+    def __init__(self, *args: Any, **kwargs: Any) -> None:
+        super().__init__(*args, **kwargs)
+        self.spare: list[int] = []
+        self.folding: list[int] = []
+
+    def fit_into(self, console: Console) -> HouseTable:
+        """Return the table in a form that a console has room for; the table itself if it has."""
+        if self._least(console) <= console.width:
+            return self
+        dropped: list[int] = []
+        made = self._compact(dropped)
+        for column in self.spare:
+            if made._least(console) <= console.width:
+                return made
+            dropped.append(column)
+            made = self._compact(dropped)
+        if made._least(console) > console.width:
+            for part in made.columns:
+                part.header = fold(part.header, SHORTEST_NAME)
+        excess = made._least(console) - console.width
+        for index in made.folding:
+            if excess <= 0:
+                break
+            cells = [str(cell) for cell in made.columns[index].cells]
+            before = max((len(cell) for cell in cells), default=0)
+            room = max(before - excess, SHORTEST_NAME)
+            made.columns[index]._cells = [fold(cell, room) for cell in made.columns[index]._cells]
+            excess = made._least(console) - console.width
+        if excess > 0:  # a column that may not break would be cut off
+            for part in made.columns:
+                part.no_wrap = False
+        return made
+
+    def _least(self, console: Console) -> int:
+        """Width at which no number is broken and text columns stay readable."""
+        from rich.measure import Measurement
+
+        roomy = console.options.update(width=10_000)
+        _, right, _, left = self.padding
+        total = (len(self.columns) - 1) * (1 + left + right) + 2 * self.show_edge
+        for column in self.columns:
+            sizes = [Measurement.get(console, roomy, cell) for cell in (column.header, *column.cells)]
+            natural = max(size.maximum for size in sizes)
+            word = max(size.minimum for size in sizes)
+            total += natural if column.no_wrap else min(natural, max(word, READABLE))
+        return total
+
+    def _compact(self, dropped: Sequence[int]) -> HouseTable:
+        """Copy the table without some columns."""
+        made = copy.copy(self)
+        kept = [index for index in range(len(self.columns)) if index not in dropped]
+        made.columns = [copy.copy(self.columns[index]) for index in kept]
+        for new, column in enumerate(made.columns):
+            column._index = new
+        made.folding = [kept.index(index) for index in self.folding if index in kept]
+        made.spare = []
+        return made
+
+
+def fold(name: Any, room: int) -> Any:
+    """Fold a name into lines that fit, at its separators where it can be."""
+    if not isinstance(name, str) or len(name) <= room:
+        return name
+    lines = [""]
+    for piece in re.findall(r"[^_\-./]+[_\-./]?|[_\-./]", name):
+        if lines[-1] and len(lines[-1]) + len(piece) > room:
+            lines.append("")
+        lines[-1] += piece
+    return "\n".join(lines)
+
+
+def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> HouseTable:
     """Make an empty table in the house style.
 
     Parameters
@@ -34,12 +125,16 @@ def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Tab
     title : str
         Heading.
     columns : str or (str, str)
-        Heads, each alone or with `"left"`, `"right"` or `"whole"` (left); the last two are not broken where
-        there is room.
+        Heads, each alone or with a word on how its cells behave:
+
+        - ``"left"`` (a head alone): text, wrapped as needed;
+        - ``"right"``, ``"whole"``: numbers, to the right or left; not broken where there is any room;
+        - ``"name"``: a name, folded at its separators where there is no room;
+        - ``"spare"``: as ``"whole"``, but left out where there is no room.
     caption : str
         A line under the table.
     """
-    made = Table(
+    made = HouseTable(
         title=title,
         title_style="bold",
         title_justify="left",
@@ -47,12 +142,18 @@ def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Tab
         caption_justify="left",
         box=box.SIMPLE_HEAD,
         pad_edge=False,
+        padding=(0, 1, 0, 0),
+        show_edge=False,
         header_style="bold",
     )
-    for column in columns:
+    for index, column in enumerate(columns):
         head, side = (column, "left") if isinstance(column, str) else column
         justify: Literal["left", "right"] = "right" if side == "right" else "left"
         made.add_column(head, justify=justify, overflow="fold", no_wrap=side != "left")
+        if side == "spare":
+            made.spare.append(index)
+        if side == "name":
+            made.folding.append(index)
     return made
 
 
@@ -143,7 +244,15 @@ def estimate(one: Estimate) -> str:
 
 def estimates(title: str, rows: Mapping[str, Estimate]) -> Table:
     """Tabulate parameters or derived quantities."""
-    made = table(title, ("name", "whole"), ("value", "whole"), "68.27 %", "95.0 %", "unit", "intervals")
+    made = table(
+        title,
+        ("name", "name"),
+        ("value", "whole"),
+        ("68.27 %", "spare"),
+        ("95.0 %", "whole"),
+        ("unit", "whole"),
+        ("method", "whole"),
+    )
     for name, one in rows.items():
         made.add_row(
             name,
@@ -171,7 +280,7 @@ def measurements(rows: Sequence[MeasurementRow]) -> Table:
     """Tabulate measured against fitted values, the largest pull first."""
     made = table(
         "Measured against fitted",
-        ("id", "whole"),
+        ("id", "name"),
         ("measured", "whole"),
         ("fitted", "whole"),
         ("unit", "whole"),
@@ -234,7 +343,7 @@ def other_minima(result: FitResult) -> Table | None:
 
 def names(title: str, rows: Iterable[tuple[str, str, str, str]]) -> Table:
     """Tabulate catalogue names: name, kind, unit, title."""
-    made = table(title, ("name", "whole"), "kind", "unit", "title")
+    made = table(title, ("name", "name"), ("kind", "spare"), ("unit", "whole"), "title")
     for name, kind, unit, text in rows:
         made.add_row(name, kind, shown_unit(unit), text)
     return made

@@ -15,7 +15,8 @@ import numpy as np
 
 from fitcore.figures import style
 from fitcore.figures.margin_rail import Exit, find_exit, spread
-from fitcore.figures.outlines import contour_lines, draw_edge, height
+from fitcore.figures.outlines import contour_lines, draw_edge, height, refine
+from fitcore.figures.symbols import glyphs, symbol_text
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -23,11 +24,13 @@ if TYPE_CHECKING:
 
 __all__ = ["Band", "PlaneAxis", "draw"]
 
-WIDTH, HEIGHT = 9.6, 6.5
-LEFT, BOTTOM, BOX_WIDTH, BOX_HEIGHT = 0.78, 1.02, 5.95, 4.42
+WIDTH, HEIGHT = 9.6, 6.75
+LEFT, BOTTOM, BOX_WIDTH, BOX_HEIGHT = 0.78, 1.08, 6.1, 4.42
 RAIL_GAP = 0.34
 LINE_STYLES: tuple[Any, ...] = ("-", (0, (5, 1.6)), (0, (1.2, 1.3)), (0, (5, 1.4, 1.2, 1.4)), (0, (2.6, 1.2)))
 STRIP = 0.95
+#: Bands wider than their partner's pair, which needs less ink, are drawn thinner.
+FAINT = 0.45
 
 
 @dataclass(frozen=True)
@@ -47,7 +50,7 @@ class PlaneAxis:
     def label(self) -> str:
         """Symbol with its unit."""
         unit = "" if self.unit == "1" else f"  [{self.unit}]"
-        return style.symbol(self.latex, self.name) + unit
+        return symbol_text(self.latex, self.name) + unit
 
 
 @dataclass(frozen=True)
@@ -100,6 +103,7 @@ def draw(
     chi2: float | None = None,
     guides: Sequence[np.ndarray] = (),
     equal: bool = False,
+    title: str = "",
     footer: str = "",
     caption: str = "",
 ) -> style.Drawing:
@@ -122,7 +126,7 @@ def draw(
         Lines to steady the eye, such as the sides of a triangle.
     equal : bool
         One unit is equally long in both directions.
-    footer, caption : str
+    title, footer, caption : str
 
     Returns
     -------
@@ -139,16 +143,16 @@ def draw(
         for guide in guides:
             main.plot(*guide.T, color=style.FAINT_INK, lw=0.6, zorder=1.0)
         for band, dashes in zip(bands, styles, strict=True):
-            _band(main, band, dashes, levels)
+            contained = any(other.name.startswith(f"{band.name}+") for other in bands)
+            _band(main, band, dashes, levels, FAINT if contained else 1.0)
         _together(main, combined, levels, best, alone=not bands)
         exits: list[Exit | None] = []
         for band in bands:
             exits.append(find_exit(*band.grid, levels[0][1], [e for e in exits if e is not None]))
-        used = _rails(figure, main, (width, tall), bands, styles, exits, chi2)
+        used = _rails(figure, main, (width, tall), bands, styles, exits, chi2, _overview_size(combined.overview, equal)[1])
         _summary(figure, axes_of, combined, bands, levels, chi2, used, (width, tall))
-        if combined.overview is not None:
-            _overview(figure, combined, bands, levels, guides, equal)
-        _texts(figure, axes_of, caption, footer)
+        _overview(figure, combined, bands, levels, guides, equal)
+        _texts(figure, axes_of, title, caption, footer)
     return style.Drawing(figure, *_data(axes_of, combined, bands))
 
 
@@ -190,14 +194,15 @@ def _fill(axes: Axes, grid: tuple[np.ndarray, np.ndarray, np.ndarray], level: fl
         axes.contourf(x, y, surface.T, levels=[-1.0, float(np.sqrt(level))], colors=[colour], **more)
 
 
-def _band(axes: Axes, band: Band, dashes: Any, levels: Sequence[tuple[str, float]]) -> None:
+def _band(axes: Axes, band: Band, dashes: Any, levels: Sequence[tuple[str, float]], ink: float) -> None:
     inner, colour = levels[0][1], band.family.colour
-    _fill(axes, band.grid, inner, colour, alpha=0.2, zorder=2.0)
-    draw_edge(axes, band.lines(inner), band.grid, colour, width=1.15, style=dashes, zorder=3.0, label=band.name)
+    _fill(axes, band.grid, inner, colour, alpha=0.22 * ink, zorder=2.0)
+    draw_edge(
+        axes, band.lines(inner), band.grid, colour, width=0.6 + 0.6 * ink, style=dashes, zorder=3.0, label=band.name
+    )
+    pale = style.tint(colour, 0.55)
     for _, level in levels[1:]:
-        draw_edge(
-            axes, band.lines(level), band.grid, style.tint(colour, 0.6), width=0.45, ticks=2.2, spacing=9.0, zorder=2.5
-        )
+        draw_edge(axes, band.lines(level), band.grid, pale, width=0.45, ticks=2.2, spacing=9.0, zorder=2.5)
 
 
 def _together(
@@ -238,6 +243,7 @@ def _rails(
     styles: Sequence[Any],
     exits: Sequence[Exit | None],
     chi2: float | None,
+    overview: float,
 ) -> dict[str, int]:
     """Names in the margins; returns how many stand at each side."""
     width, tall = box
@@ -252,9 +258,12 @@ def _rails(
         limits = main.get_ylim() if upright else main.get_xlim()
         length, origin = (tall, BOTTOM) if upright else (width, LEFT)
         at = [origin + (exits[k].at - limits[0]) / (limits[1] - limits[0]) * length for k in chosen]  # type: ignore[union-attr]
-        room = [0.42 if upright else 1.22] * len(chosen)
-        reach = (0.0, 0.1) if upright else (0.45, 0.55)
-        placed = spread(at, room, origin - reach[0], origin + length + reach[1])
+        room = [0.42 if upright else 1.45] * len(chosen)
+        reach = (0.0, 0.1) if upright else (0.5, 0.6)
+        low = origin - reach[0]
+        if side == "right" and overview:
+            low = max(low, 0.78 + overview + 0.12)
+        placed = spread(at, room, low, origin + length + reach[1])
         rail = {
             "right": LEFT + width + RAIL_GAP,
             "top": BOTTOM + tall + 0.24,
@@ -285,8 +294,8 @@ def _rails(
 def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float, chi2: float | None) -> None:
     from matplotlib.patches import Rectangle
 
-    symbol = style.symbol(band.latex, band.name)
-    size = 9.5 * min(1.0, 14 / max(style.glyphs(symbol), 1))
+    symbol = symbol_text(band.latex, band.name)
+    size = 9.5 * min(1.0, 14 / max(glyphs(symbol), 1))
     colour = band.family.colour
     if side in ("right", "left"):
         x, y = (rail + 0.14, at) if side == "right" else (rail - 0.14, at)
@@ -323,7 +332,7 @@ def _summary(
     from matplotlib.patches import Rectangle
 
     page = _page(figure)
-    x, y = 7.02, HEIGHT - 0.34
+    x, y = 6.98, HEIGHT - 0.3
     page.add_patch(Rectangle((x, y - 0.075), 0.3, 0.15, facecolor=style.NAVY, lw=0))
     page.text(x + 0.4, y, f"everything: {levels[0][0]} region, two parameters", fontsize=7, va="center")
     for number, (words, _) in enumerate(levels[1:], start=1):
@@ -339,6 +348,13 @@ def _summary(
         page.text(x, row, words + total, fontsize=6.2, va="center", color=style.FAINT_INK)
 
 
+def _overview_size(overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None, equal: bool) -> tuple[float, float]:
+    if overview is None:
+        return 0.0, 0.0
+    shape = float(np.ptp(overview[0]) / np.ptp(overview[1])) if equal else 2.2 / 1.5
+    return (2.2, 2.2 / shape) if shape > 2.2 / 1.55 else (1.55 * shape, 1.55)
+
+
 def _overview(
     figure: Figure,
     combined: Band,
@@ -349,34 +365,36 @@ def _overview(
 ) -> None:
     from matplotlib.patches import Rectangle
 
-    assert combined.overview is not None
-    x, y, _ = combined.overview
-    width, tall = 2.2, 1.5
-    if equal:
-        shape = float(np.ptp(x) / np.ptp(y))
-        width, tall = (2.2, 2.2 / shape) if shape > 2.2 / 1.55 else (1.55 * shape, 1.55)
-    small = figure.add_axes(((WIDTH - 0.22 - width) / WIDTH, 0.66 / HEIGHT, width / WIDTH, tall / HEIGHT))
+    overview = combined.overview
+    if overview is None:
+        return
+    x, y, _ = overview
+    width, tall = _overview_size(overview, equal)
+    small = figure.add_axes(((WIDTH - 0.22 - width) / WIDTH, 0.78 / HEIGHT, width / WIDTH, tall / HEIGHT))
     _frame(small, x, y)
     small.tick_params(length=2, labelsize=5.5, pad=1.5)
     small.locator_params(nbins=4)
     for band in bands:
         if band.overview is not None:
-            _fill(small, band.overview, levels[0][1], band.family.colour, alpha=0.3, zorder=2.0)
+            _fill(small, refine(*band.overview), levels[0][1], band.family.colour, alpha=0.3, zorder=2.0)
     for guide in guides:
         small.plot(*guide.T, color=style.INK, lw=0.7, zorder=4)
-    _fill(small, combined.overview, levels[-1][1], style.NAVY, zorder=5)
+    _fill(small, overview, levels[-1][1], style.NAVY, zorder=5)
+    for line in combined.lines(levels[-1][1]):
+        small.fill(*line.T, color=style.NAVY, lw=0, zorder=5)
     corner = (float(combined.x[0]), float(combined.y[0]))
     small.add_patch(
         Rectangle(corner, float(np.ptp(combined.x)), float(np.ptp(combined.y)), fill=False, ec=style.INK, lw=0.9, zorder=6)
     )
 
 
-def _texts(figure: Figure, axes_of: tuple[PlaneAxis, PlaneAxis], caption: str, footer: str) -> None:
-    head = " and ".join(style.symbol(axis.latex, axis.name) for axis in axes_of)
-    figure.text(0.2 / WIDTH, 1 - 0.36 / HEIGHT, head, fontsize=14, fontweight="bold", va="center")
+def _texts(figure: Figure, axes_of: tuple[PlaneAxis, PlaneAxis], title: str, caption: str, footer: str) -> None:
+    head = "Constraints on " + " and ".join(symbol_text(axis.latex, axis.name) for axis in axes_of)
+    figure.text(0.2 / WIDTH, 1 - 0.34 / HEIGHT, head, fontsize=14, fontweight="bold", va="center")
+    figure.text(0.2 / WIDTH, 1 - 0.61 / HEIGHT, title, fontsize=8, color=style.FAINT_INK, va="center")
     if caption:
-        text = textwrap.fill(caption, 150)
-        figure.text(0.2 / WIDTH, 0.32 / HEIGHT, text, fontsize=6, color=style.FAINT_INK, va="bottom", linespacing=1.35)
+        text = textwrap.fill(caption, 196)
+        figure.text(0.2 / WIDTH, 0.3 / HEIGHT, text, fontsize=5.8, color=style.FAINT_INK, va="bottom", linespacing=1.35)
     style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.12 / HEIGHT)
 
 

@@ -27,6 +27,7 @@ SKY_BLUE = "#56b4e9"
 GREY = "#7d7d7d"
 GREEN = "#009e73"
 ORANGE = "#e69f00"
+BLUE = "#0072b2"
 BROWN = "#8c5a2b"
 
 INK = "#1d1d1f"
@@ -80,21 +81,34 @@ class Family:
 THEORY = Family("theory inputs", GREEN, frozenset())
 OTHER = Family("other measurements", BROWN, frozenset())
 
-#: In order: the first family that has one of an entry's groups takes it.
+TREE = Family("tree-level magnitudes and phase", VERMILLION, frozenset({"magnitude", "tree-phase"}))
+
+#: Which family words of the published sets belong to which lane; an entry has one of these words.
 FAMILIES = (
     Family("kaon epsilon", GREY, frozenset({"kaon-epsilon"})),
     Family("CP asymmetries", PURPLE, frozenset({"cp-asymmetry", "cp-phase"})),
     Family("oscillation frequencies", SKY_BLUE, frozenset({"oscillation"})),
-    Family("tree-level magnitudes and phase", VERMILLION, frozenset({"tree", "magnitude", "tree-phase"})),
+    TREE,
     Family("rare decays", ORANGE, frozenset({"rare", "rare-decay"})),
+    Family("lifetimes and form-factor shapes", BLUE, frozenset({"lifetime", "form-factor-shape"})),
 )
+#: Words for theory inputs, in case an entry does not say so by its kind.
+THEORY_WORDS = frozenset({"lattice", "perturbative", "radiative"})
 
 
 def family_of(groups: Sequence[str], kind: str = "experiment") -> Family:
-    """Return the family of an entry with these groups and this kind."""
+    """Return the family of an entry with these groups and this kind.
+
+    The family word decides; "tree", which many families share, counts only where there is none.
+    """
     if kind == "theory":
         return THEORY
-    return next((family for family in FAMILIES if family.groups.intersection(groups)), OTHER)
+    for family in FAMILIES:
+        if family.groups.intersection(groups):
+            return family
+    if THEORY_WORDS.intersection(groups):
+        return THEORY
+    return TREE if "tree" in groups else OTHER
 
 
 def tint(colour: str, strength: float) -> tuple[float, float, float]:

@@ -95,7 +95,7 @@ def fit(
     if names:  # raises early, before any work is done
         problem.linearise_quantities(problem.start, names)
     notes = _Notes()
-    minima = find_minima(problem, size=starts, rng=rng)
+    minima = find_minima(problem, size=starts, rng=rng) if problem.n_parameters else _only_point(problem)
     if not minima:
         return _failed(problem, notes, "no start of the search is a possible point: check bounds and [parameters] starts")
     notes.calls["starts"] = starts
@@ -103,25 +103,36 @@ def fit(
     best = minima[0]
     if not best.converged:
         notes.add("solver-not-converged", "the search for minima did not converge")
-    theta, ok = _migrad(problem, best, minima, notes)
-    chi2 = float(problem.chi2(theta))
-    if best.chi2 < chi2 - 1e-3:
+    bounded = any(p.is_range for p in problem.parameters)
+    if problem.n_parameters:
+        found, ok = (_trust_region if bounded else _migrad)(problem, best, minima, notes)
+    else:
+        found, ok = best.theta, True
+    best = _twin(problem, found, minima)
+    theta, chi2 = found, float(problem.chi2(found))
+    if best.chi2 < chi2 - 1e-3:  # the better one is reported, but two that differ are no proof of each other
         theta, chi2 = best.theta, best.chi2
     curvature = curvature_at(problem, theta)
-    ok &= _agree(problem, theta, best, curvature, notes)
+    ok &= _agree(problem, found, best, curvature, notes)
     if not curvature.positive:
         notes.add("curvature-not-positive", "the second derivatives at the minimum are not positive: errors are unreliable")
         ok = False
     ok &= best.converged
 
     wanted = [n for n in PROFILED if n in problem.parameter_names]
+    if bounded:  # a parabola knows nothing of ranges: every interval is a profile
+        notes.add("flat-ranges", "flat theory ranges: intervals are profiles, parabolic errors and the p-value are left out")
+        wanted += [p.name for p in problem.parameters if not p.is_range and p.name not in wanted]
+        wanted += names
     wanted += [n for n in asked if n not in wanted]
     parameters, derived_estimates = _estimates(problem, theta, curvature, names, wanted, notes)
     if curvature.unconstrained.any():
         loose = [n for n, free in zip(problem.parameter_names, curvature.unconstrained, strict=True) if free]
         notes.add("unconstrained", f"the inputs do not constrain {', '.join(loose)}")
-    others = tuple(OtherMinimum(_named(problem, m.theta), m.chi2) for m in minima[1:])
-    if any(m.chi2 < chi2 + LEVELS[1] for m in minima[1:]):
+        # Points along a valley are no minima of their own.
+        minima = [minima[0], *(m for m in minima[1:] if m.chi2 > minima[0].chi2 + 1e-3)]
+    others = tuple(OtherMinimum(_named(problem, m.theta), m.chi2) for m in minima if m is not best)
+    if any(m.chi2 < chi2 + LEVELS[1] for m in others):
         notes.add("several-minima", "another minimum lies within Delta chi2 = 3.84: intervals belong to the best one only")
     return FitResult(
         valid=bool(ok),
@@ -206,22 +217,68 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Note
     return theta, ok
 
 
+def _trust_region(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Notes) -> tuple[np.ndarray, bool]:
+    """SciPy's bounded trust-region solver in place of MIGRAD, which stalls where flat ranges leave directions open."""
+    from scipy.optimize import least_squares
+
+    start = best.start
+    bounds = np.array([(p.lower, p.upper) for p in problem.parameters]).T
+    width = np.where(np.isfinite(bounds[1] - bounds[0]), bounds[1] - bounds[0], 1.0)
+    inside = np.clip(start, bounds[0] + 1e-9 * width, bounds[1] - 1e-9 * width)
+    scales = np.array([p.scale for p in problem.parameters])
+    found = least_squares(
+        lambda x: np.nan_to_num(problem.residuals(x), nan=1e3),
+        inside,
+        jac=lambda x: np.nan_to_num(problem.jacobian(x)),
+        bounds=bounds,
+        x_scale=scales,
+        xtol=1e-12,
+        ftol=1e-13,
+        gtol=1e-12,
+        max_nfev=2000,
+    )
+    notes.calls |= {"residuals": int(found.nfev), "jacobian": int(found.njev)}
+    if not found.success:
+        notes.add("trust-region-not-converged", f"the trust-region solver did not converge: {found.message}")
+    return np.asarray(found.x), bool(found.success)
+
+
+def _twin(problem: Any, theta: np.ndarray, minima: Sequence[Minimum]) -> Minimum:
+    """The minimum of the search to compare with: of several equally low ones (mirror images) the nearest."""
+    scales = np.array([p.scale for p in problem.parameters])
+    lowest = [m for m in minima if m.chi2 < minima[0].chi2 + 1e-4]
+    return min(lowest, key=lambda m: float(np.sum((_difference(problem, theta, m.theta) / scales) ** 2)))
+
+
+def _difference(problem: Any, left: np.ndarray, right: np.ndarray) -> np.ndarray:
+    """left - right, angles modulo their periods."""
+    gap = left - right
+    for i, parameter in enumerate(problem.parameters):
+        if parameter.period:
+            gap[i] -= parameter.period * np.rint(gap[i] / parameter.period)
+    return gap
+
+
+def _only_point(problem: Any) -> list[Minimum]:
+    """Where nothing varies there is one point, if it is possible."""
+    point = np.zeros(0)
+    chi2 = float(problem.chi2(point))
+    return [Minimum(point, chi2, point, 1, True)] if math.isfinite(chi2) else []
+
+
 def _agree(problem: Any, theta: np.ndarray, best: Minimum, curvature: Curvature, notes: _Notes) -> bool:
     sigma = np.sqrt(np.clip(np.diagonal(curvature.covariance), 0.0, None))
     solid = (sigma > 0) & ~curvature.unconstrained
     # On a flat range any point is as good as another; the ranges are compared through chi-square only.
-    solid &= np.array([not p.is_range for p in problem.parameters])
+    solid &= np.array([not p.is_range for p in problem.parameters], dtype=bool)
     ranges = any(p.is_range for p in problem.parameters)
-    difference = theta - best.theta
-    for i, parameter in enumerate(problem.parameters):
-        if parameter.period:
-            difference[i] -= parameter.period * np.rint(difference[i] / parameter.period)
+    difference = _difference(problem, theta, best.theta)
     worst = float(np.max(np.abs(difference[solid]) / sigma[solid], initial=0.0))
     chi2_gap = abs(float(problem.chi2(theta)) - best.chi2)
-    if chi2_gap > 1e-4 or (worst > AGREEMENT and not ranges):
+    if chi2_gap > (1e-3 if ranges else 1e-4) or (worst > AGREEMENT and not ranges):
         notes.add(
             "minimisers-disagree",
-            f"MIGRAD and the batch solver disagree by {worst:.2g} standard deviations, {chi2_gap:.2g} in chi-square",
+            f"the two minimisers disagree by {worst:.2g} standard deviations, {chi2_gap:.2g} in chi-square",
         )
         return False
     return True
@@ -237,13 +294,14 @@ def _estimates(
     lower = np.array([p.lower for p in problem.parameters])
     upper = np.array([p.upper for p in problem.parameters])
     at_bound = ((theta - lower) < NEAR_BOUND * sigma) | ((upper - theta) < NEAR_BOUND * sigma)
-    at_bound |= np.array([p.is_range for p in problem.parameters])
+    # With flat ranges about, no parabola is to be trusted.
+    at_bound |= any(p.is_range for p in problem.parameters)
     near = [n for n, b, loose in zip(problem.parameter_names, at_bound, curvature.unconstrained, strict=True) if b and not loose]
     # A flat range has no interval of interest; it is reported by its value alone unless asked for.
     ranged = {p.name for p in problem.parameters if p.is_range}
     wanted = [*wanted, *(n for n in near if n not in wanted and n not in ranged)]
     intervals = _profile(problem, theta, curvature, wanted, notes)
-    if near_named := [n for n in near if n not in ranged]:
+    if not ranged and (near_named := near):
         notes.add("near-bound", f"{', '.join(near_named)} near a bound: no parabolic error")
 
     parameters = {}
@@ -256,15 +314,11 @@ def _estimates(
         values, gradient = problem.linearise_quantities(theta, names)
         for name, value, slope in zip(names, values, gradient, strict=True):
             variance = float(slope @ curvature.covariance @ slope)
-            touched = bool(np.any(np.abs(slope[curvature.unconstrained]) * _scales(problem)[curvature.unconstrained] > 1e-9))
-            bad = touched or not math.isfinite(variance)
+            touched = curvature.leaves_loose(slope)
+            bad = touched or bool(ranged) or not math.isfinite(variance)
             error = None if bad else math.sqrt(max(variance, 0.0))
-            derived[name] = _estimate(name, value, error, problem.unit_of(name), intervals, bad)
+            derived[name] = _estimate(name, value, error, problem.unit_of(name), intervals, touched)
     return parameters, derived
-
-
-def _scales(problem: Any) -> np.ndarray:
-    return np.array([p.scale for p in problem.parameters])
 
 
 def _estimate(
@@ -293,6 +347,10 @@ def _profile(
         return {}
     found = profile_intervals(problem, theta, wanted, delta_chi2=LEVELS)
     result = {}
+    if found.better_minimum is not None:
+        notes.add("better-minimum", f"the profiles met a lower minimum, chi2 = {found.minimum:.6g}: fit again from there")
+    for name in dict.fromkeys(name for name, *_ in found.flagged):
+        notes.add("profile-failed", f"an end of the interval of {name} could not be found: it reaches at least that far")
     for name, pair in found.items():
         if any(not (lo <= hi) for lo, hi, *_ in pair):
             notes.add("profile-failed", f"the profile of {name} could not be followed to its crossing")

@@ -21,7 +21,7 @@ RIDGE = 1e-15
 SINGULAR_RIDGE = 1e-6
 FIRST_DAMPING = 1e-3
 LAST_DAMPING = 1e15
-HOPELESS_DAMPING = 1e8
+IDLE_STEPS = 8
 ROUNDING = 1e-13
 LOOSE_ROUNDING = 1e-10
 
@@ -43,6 +43,8 @@ class Rows:
     ridge: np.ndarray
     relax: np.ndarray  # share of the violation that a step should remove
     price: np.ndarray  # weight of |violation| in the merit function (k, A)
+    nearest: np.ndarray  # smallest violation so far (k, A)
+    idle: np.ndarray  # linearisations since it last shrank by a tenth
     undamped_failed: np.ndarray
     expected: np.ndarray  # decrease predicted by the undamped model at the accepted point
     active: np.ndarray
@@ -138,6 +140,8 @@ class DampedRun:
             ridge=np.full(size, self.first_ridge),
             relax=np.ones(size),
             price=np.zeros((k, size)),
+            nearest=np.full((k, size), np.inf),
+            idle=np.zeros(size, dtype=int),
             undamped_failed=np.zeros(size, dtype=bool),
             expected=np.full(size, np.inf),
             active=np.zeros((n, size), dtype=np.int8),
@@ -244,6 +248,7 @@ class DampedRun:
             rows.undamped_failed[pick] = True
             self._again(rows, step, pick, damping=0.0)
             predicted = self._predict(rows, step)
+        self._watch(rows)
         met = self.constraints.met(rows.violation, step.reach, rows.index)
         undamped = (rows.damping == 0.0) & (rows.relax == 1.0)
         converged = (predicted < self.tolerance) & met & undamped & step.settled
@@ -251,10 +256,10 @@ class DampedRun:
         # no step helps and none was expected to: as good as rounding allows
         rejected = rows.growth > 2.0
         lost = rejected & met & (rows.expected <= ROUNDING * np.abs(rows.chi2))
-        stuck = rows.damping > np.where(met, LAST_DAMPING, HOPELESS_DAMPING)
+        stuck = rows.damping > LAST_DAMPING
         lost |= stuck & met & (rows.expected <= LOOSE_ROUNDING * np.abs(rows.chi2))
-        # a constraint that short, strongly damped steps do not bring nearer is out of reach
-        stalled = stuck & ~lost
+        # a constraint that several steps have brought no nearer is out of reach
+        stalled = (stuck & ~lost) | (~met & (rows.idle > IDLE_STEPS))
         exhausted = rows.used >= self.max_iterations
         done = converged | lost | stalled | exhausted
         if done.any():
@@ -283,6 +288,14 @@ class DampedRun:
         repeated = solve_step(self._quadratic(rows).rows(pick), step.active[:, pick])
         repeated.singular |= step.singular[pick]
         step.put(pick, repeated)
+
+    def _watch(self, rows: Rows) -> None:
+        """Count the linearisations since any violation shrank visibly."""
+        if self.k:
+            size = np.abs(rows.violation)
+            nearer = size < 0.9 * rows.nearest
+            rows.nearest = np.where(nearer, size, rows.nearest)
+            rows.idle = np.where(nearer.any(axis=0), 0, rows.idle + 1)
 
     def _predict(self, rows: Rows, step: QuadraticStep) -> np.ndarray:
         """Predicted decrease of chi2 + price x |violation|, which decides on acceptance only (exact penalty)."""

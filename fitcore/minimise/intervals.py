@@ -182,7 +182,8 @@ class _Walk:
         """Parameters for new points: the straight line from the origin through the outermost point inside."""
         run = self.near - self.origin
         share = np.divide(x - self.near, run, out=np.zeros_like(x), where=run != 0.0)
-        return self.near_theta + np.clip(share, -2.0, 2.0)[:, None] * (self.near_theta - self.origin_theta)
+        onwards = np.clip(share, -2.0, 2.0)[:, None] * (self.near_theta - self.origin_theta)
+        return np.asarray(self.near_theta + onwards)
 
 
 def _solve(

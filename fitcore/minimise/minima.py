@@ -132,6 +132,8 @@ def distinct_minima(
     order = order[chi2[order] <= chi2[order[0]] + WORTH_LISTING]
     periods = np.array([p.period or 0.0 for p in problem.parameters])
     turning = periods > 0
+    # Where a flat range ends up is a matter of taste, not another minimum.
+    ranges = np.array([getattr(p, "is_range", False) for p in problem.parameters])
     listed: list[Minimum] = []
     while order.size:
         best = order[0]
@@ -139,6 +141,7 @@ def distinct_minima(
         difference = theta[order] - theta[best]
         turns = np.rint(difference[:, turning] / periods[turning])
         difference[:, turning] -= turns * periods[turning]
+        difference[:, ranges] = 0.0
         distance = np.sqrt(np.clip(np.einsum("bi,ij,bj->b", difference, normal, difference), 0.0, None))
         # Along an unconstrained direction the normal matrix sees no distance: such rows are one minimum.
         same = distance < SAME_MINIMUM

@@ -295,15 +295,17 @@ def _fill(
         theta = np.moveaxis(np.tensordot(_local_cubic(nodes[1], grids[1]), theta, axes=(1, 1)), 0, 1)
     theta = theta.reshape(-1, theta.shape[-1])
     at_nodes = np.ravel_multi_index(np.meshgrid(*picks, indexing="ij"), shape).ravel()
-    rest = np.setdiff1d(np.arange(theta.shape[0]), at_nodes)
     points = _points(grids)
-    solved = held.solve(points[rest], theta[rest], tolerance=tolerance, distance=distance)
     count = len(points)
+    hopeful = _near_finite_nodes(points, nodes, np.isfinite(coarse.chi2).reshape(small), held.values(minima))
+    hopeful[at_nodes] = False
+    rest = np.flatnonzero(hopeful)
+    solved = held.solve(points[rest], theta[rest], tolerance=tolerance, distance=distance)
     fine = HeldPoints(
         theta,
-        np.empty(count),
-        np.empty((count, len(grids))),
-        np.empty(count, dtype=bool),
+        np.full(count, np.inf),
+        np.zeros((count, len(grids))),
+        np.zeros(count, dtype=bool),
         coarse.linearisations + solved.linearisations,
     )
     fine.put(at_nodes, coarse)
@@ -429,6 +431,26 @@ def _neighbours(shape: tuple[int, ...]) -> list[tuple[np.ndarray, np.ndarray]]:
         low, high = np.delete(index, -1, axis).ravel(), np.delete(index, 0, axis).ravel()
         pairs += [(low, high), (high, low)]
     return pairs
+
+
+def _near_finite_nodes(
+    points: np.ndarray, nodes: tuple[np.ndarray, ...], finite: np.ndarray, minima: np.ndarray
+) -> np.ndarray:
+    """Points in cells of the coarse grid with a possible corner or a known minimum inside; the others are left to be
+    reached from their neighbours."""
+
+    def cells(at: np.ndarray) -> tuple[np.ndarray, ...]:
+        return tuple(
+            np.clip(np.searchsorted(node, at[:, k], side="right") - 1, 0, max(node.size - 2, 0))
+            for k, node in enumerate(nodes)
+        )
+
+    for axis, node in enumerate(nodes):
+        if node.size > 1:
+            finite = np.delete(finite, 0, axis) | np.delete(finite, -1, axis)
+    finite = finite.copy()
+    finite[cells(minima)] = True
+    return np.asarray(finite[cells(points)])
 
 
 def _local_cubic(nodes: np.ndarray, x: np.ndarray) -> np.ndarray:

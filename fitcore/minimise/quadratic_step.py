@@ -16,7 +16,7 @@ import numpy as np
 
 from fitcore.minimise.sparse_cholesky import FROZEN, Pattern, analyse
 
-ACTIVE_SET_ROUNDS = 80
+ACTIVE_SET_ROUNDS = 30
 PATIENCE = 3
 """Rounds without fewer wrong components before they are exchanged one at a time (last index first)."""
 

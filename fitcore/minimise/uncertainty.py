@@ -22,13 +22,15 @@ class Curvature:
     hessian : ndarray, shape (n, n)
         Second derivatives of chi-square.
     covariance : ndarray, shape (n, n)
-        2 H^-1 on the constrained directions, 0 on the others.
+        2 H^-1 on the constrained directions, 0 on the others and for flat ranges.
     rank : int
         Rank of the Jacobian over the counted parameters (flat ranges are not counted).
     unconstrained : ndarray of bool, shape (n,)
         Parameters with a share in a direction along which nothing changes.
     positive : bool
         Whether the Hessian is positive definite on the constrained directions.
+    loose : ndarray, shape (k, n)
+        The directions along which nothing changes, in the parameters' units.
     """
 
     hessian: np.ndarray
@@ -36,6 +38,12 @@ class Curvature:
     rank: int
     unconstrained: np.ndarray
     positive: bool
+    loose: np.ndarray
+
+    def leaves_loose(self, slope: np.ndarray) -> bool:
+        """Whether a quantity with this gradient, shape (n,), changes along an unconstrained direction."""
+        # The directions are known to about the tolerance of the rank.
+        return bool(np.any(np.abs(self.loose @ slope) > 1e-5 * (np.abs(self.loose) @ np.abs(slope))))
 
 
 def hessian(problem: Any, theta: np.ndarray, steps: np.ndarray) -> np.ndarray:
@@ -70,34 +78,38 @@ def curvature_at(problem: Any, theta: np.ndarray) -> Curvature:
     Notes
     -----
     Directions are unconstrained when the Jacobian of the residuals does not see them; a chi-square that is flat
-    only to second order is not called unconstrained.
+    only to second order is not called unconstrained. Flat ranges are held where they are: they bound what they touch,
+    and have no curvature of their own.
     """
     theta = np.asarray(theta, dtype=float)
-    jacobian = problem.jacobian(theta)
+    n = len(theta)
+    counted = np.array([not getattr(p, "is_range", False) for p in problem.parameters], dtype=bool)
+    scales = np.array([p.scale for p in problem.parameters])[counted]
+    jacobian = problem.jacobian(theta)[:, counted]
     jacobian = np.where(np.isfinite(jacobian), jacobian, 0.0)
     norms = np.linalg.norm(jacobian, axis=0)
-    scales = np.array([p.scale for p in problem.parameters])
     unit = np.where(norms > 0, 1.0 / np.where(norms > 0, norms, 1.0), scales)
     _, singular, right = np.linalg.svd(jacobian * unit, full_matrices=True)
-    strong = np.zeros(len(theta), dtype=bool)
-    strong[: len(singular)] = singular > RANK_TOLERANCE * max(singular[0], 1e-300)
-    weak_directions = right[~strong]
-    unconstrained = (np.abs(weak_directions) > 1e-3).any(axis=0) | (norms == 0)
-
-    counted = np.array([not getattr(p, "is_range", False) for p in problem.parameters])
-    rank = int(strong.sum())
-    if not counted.all():
-        part = np.linalg.svd(jacobian[:, counted] * unit[counted], compute_uv=False)
-        rank = int((part > RANK_TOLERANCE * max(part[0], 1e-300)).sum()) if part.size else 0
+    strong = np.zeros(len(norms), dtype=bool)
+    strong[: len(singular)] = singular > RANK_TOLERANCE * singular.max(initial=1e-300)
+    weak = right[~strong]
+    loose = (np.abs(weak) > 1e-3).any(axis=0) | (norms == 0)
 
     basis = right[strong]  # rows span what the data constrain, in normalised coordinates
     gauss_newton = basis @ ((jacobian * unit).T @ (jacobian * unit)) @ basis.T
     guess = np.sqrt(np.clip(np.diagonal(basis.T @ np.linalg.inv(gauss_newton) @ basis), 0.0, None)) * unit
-    steps = np.where(guess > 0, 0.02 * guess, 0.01 * scales)
+    steps = np.array([0.01 * p.scale for p in problem.parameters])
+    steps[counted] = np.where(guess > 0, 0.02 * guess, 0.01 * scales)
     full = hessian(problem, theta, steps)
-    reduced = basis @ (full * np.outer(unit, unit)) @ basis.T
+    reduced = basis @ (full[np.ix_(counted, counted)] * np.outer(unit, unit)) @ basis.T
     eigenvalues = np.linalg.eigvalsh(reduced)
     positive = bool(eigenvalues.size == 0 or eigenvalues[0] > 0)
     core = reduced if positive else 2.0 * gauss_newton
-    covariance = (basis.T @ (2.0 * np.linalg.inv(core)) @ basis) * np.outer(unit, unit)
-    return Curvature(full, 0.5 * (covariance + covariance.T), rank, unconstrained, positive)
+    part = (basis.T @ (2.0 * np.linalg.inv(core)) @ basis) * np.outer(unit, unit)
+    covariance = np.zeros((n, n))
+    covariance[np.ix_(counted, counted)] = 0.5 * (part + part.T)
+    unconstrained = np.zeros(n, dtype=bool)
+    unconstrained[counted] = loose
+    directions = np.zeros((len(weak), n))
+    directions[:, counted] = weak * unit
+    return Curvature(full, covariance, int(strong.sum()), unconstrained, positive, directions)

@@ -14,15 +14,11 @@ import time
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 
 from fitcore.sampling.chain_format import (
-    FORMAT_NAME,
-    FORMAT_VERSION,
-    MAIN_DATASETS,
-    STATE_WORDS,
     ChainHeader,
     block_checksum,
     differences,
@@ -30,6 +26,7 @@ from fitcore.sampling.chain_format import (
     store_errors,
     unpack_state,
 )
+from fitcore.sampling.chain_layout import dataset, describe, give_back, lay_out, open_checked, publish
 from fitcore.sampling.lock import WriterLock
 from observables.errors import StoreError, UnknownNameError
 
@@ -38,7 +35,6 @@ __all__ = ["Block", "ChainFile"]
 _COMMIT_SECONDS = 30.0
 _RESERVE_MARGIN = 1 << 20
 _READ_ATTEMPTS = 4
-_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 @dataclass(frozen=True)
@@ -76,7 +72,7 @@ class ChainFile:
         self.header = header
         self.notices = notices
         # A reader keeps no file open: it would hinder a writer in the same process.
-        self._file = None if lock is None else file
+        self._file: Any = None if lock is None else file
         self._lock = lock
         self._buffer: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
         self._buffer_state: Any = None
@@ -91,7 +87,9 @@ class ChainFile:
     # -- making and opening ----------------------------------------------------------------------------
 
     @classmethod
-    def create(cls, path: str | os.PathLike[str], header: ChainHeader, *, block_steps: int = 128) -> ChainFile:
+    def create(
+        cls, path: str | os.PathLike[str], header: ChainHeader, *, block_steps: int = 128
+    ) -> ChainFile:
         """Start a new file; never overwrites an existing one.
 
         Parameters
@@ -120,10 +118,10 @@ class ChainFile:
                 partial.unlink(missing_ok=True)
                 # The complete empty file appears under its name in one step: no reader meets half of it.
                 with h5py.File(partial, "x", libver="earliest", locking=False) as file:
-                    _lay_out(file, header, block_steps)
+                    lay_out(file, header, block_steps)
                     file.flush()
                     os.fsync(file.id.get_vfd_handle())
-                _publish(partial, path)
+                publish(partial, path)
             return cls._open_writer(path, lock)
         except BaseException:
             with contextlib.suppress(OSError):
@@ -165,7 +163,7 @@ class ChainFile:
 
     @classmethod
     def _open_writer(cls, path: Path, lock: WriterLock) -> ChainFile:
-        file, header, notices = _open_checked(path, "r+")
+        file, header, notices = open_checked(path, "r+")
         with store_errors(path, "open the file for writing"):
             file["bookkeeping/closed_at"][()] = -1
             file.flush()
@@ -185,7 +183,7 @@ class ChainFile:
         path = Path(path)
         for attempt in range(_READ_ATTEMPTS):
             try:
-                file, header, notices = _open_checked(path, "r")
+                file, header, notices = open_checked(path, "r")
                 with file, store_errors(path, "read the file"):
                     return cls(path, file, header, None, notices)
             except StoreError:
@@ -206,7 +204,7 @@ class ChainFile:
                     self._file["bookkeeping/closed_at"][()] = self.committed_steps
                     self._file.flush()
                     descriptor = self._file.id.get_vfd_handle()
-                    _give_back(descriptor, self._file.id.get_filesize())
+                    give_back(descriptor, self._file.id.get_filesize())
                     os.fsync(descriptor)
         finally:
             file, self._file = self._file, None
@@ -362,7 +360,7 @@ class ChainFile:
             for name in list(group):
                 del group[name]
             for name, array in arrays.items():
-                _dataset(group, name, np.asarray(array, dtype=np.float64), "1", "tuned proposal: " + name)
+                dataset(group, name, np.asarray(array, dtype=np.float64), "1", "tuned proposal: " + name)
             self._file.flush()
 
     def read_proposal(self) -> dict[str, np.ndarray]:
@@ -377,7 +375,9 @@ class ChainFile:
                 return 0
             return int(file[f"derived/{name}"].attrs["committed_steps"])
 
-    def write_derived(self, name: str, block: int, values: np.ndarray, *, unit: str = "1", title: str = "") -> None:
+    def write_derived(
+        self, name: str, block: int, values: np.ndarray, *, unit: str = "1", title: str = ""
+    ) -> None:
         """Store a derived quantity for committed block number ``block`` (blocks in order)."""
         end = int(self._block_ends[block])
         begin = int(self._block_ends[block - 1]) if block else 0
@@ -390,12 +390,12 @@ class ChainFile:
                 data = self._file["derived"].create_dataset(
                     name, (0, walkers), dtype, maxshape=(None, walkers), chunks=(self.block_steps, walkers)
                 )
-                _describe(data, unit, title or name)
+                describe(data, unit, title or name)
                 data.attrs["committed_steps"] = np.int64(0)
                 sums = self._file["bookkeeping/derived"].create_dataset(
                     name, (0,), np.uint32, maxshape=(None,), chunks=(1024,)
                 )
-                _describe(sums, "1", "CRC-32 per block")
+                describe(sums, "1", "CRC-32 per block")
             data = self._file[f"derived/{name}"]
             sums = self._file[f"bookkeeping/derived/{name}"]
             if int(data.attrs["committed_steps"]) != begin:
@@ -504,19 +504,23 @@ class ChainFile:
             with store_errors(self.path, f"write steps {begin} to {end - 1}"):
                 self._reserve(chain.nbytes + log_posterior.nbytes + accepted.nbytes + words.nbytes)
                 rows = slice(begin, end)
-                for name, value in (("chain", chain), ("log_posterior", log_posterior), ("accepted", accepted)):
+                for name, value in (
+                    ("chain", chain),
+                    ("log_posterior", log_posterior),
+                    ("accepted", accepted),
+                ):
                     if len(file[name]) < end:
                         file[name].resize(end, axis=0)
                     file[name][rows] = value
                 checksum = block_checksum(begin, chain, log_posterior, accepted, words)
-                for name, value in (
+                for name, entry in (
                     ("random_state", words),
-                    ("bookkeeping/block_end", end),
-                    ("bookkeeping/block_checksum", checksum),
+                    ("bookkeeping/block_end", np.int64(end)),
+                    ("bookkeeping/block_checksum", np.uint32(checksum)),
                 ):
                     if len(file[name]) <= number:
                         file[name].resize(number + 1, axis=0)
-                    file[name][number] = value
+                    file[name][number] = entry
                 file.flush()
                 file["committed_steps"][()] = end
                 file.flush()
@@ -571,7 +575,8 @@ class ChainFile:
             raise AttributeError("the chain has no steps yet: run the sampler first")
         last = self.steps - 1
         coords, log_prob = self.get_chain(discard=last), self.get_log_prob(discard=last)
-        assert coords is not None and log_prob is not None
+        assert coords is not None
+        assert log_prob is not None
         return State(coords[0], log_prob=log_prob[0], random_state=self.random_state)
 
     # -- inside ----------------------------------------------------------------------------------------
@@ -608,144 +613,3 @@ class ChainFile:
                 f"{self.path}: no room for {need} more bytes ({error.strerror or error}); "
                 f"{self.committed_steps} steps are safe in the file. Make room and resume"
             ) from error
-
-
-def _give_back(descriptor: int, size: int) -> None:
-    """Cut reserved room that was not needed, never below what the HDF5 superblock calls the end of file."""
-    # Superblock of the earliest format: the end-of-file address is the 8 bytes at offset 40.
-    end = int.from_bytes(os.pread(descriptor, 8, 40), "little")
-    if size >= end and os.fstat(descriptor).st_size > size:
-        os.ftruncate(descriptor, size)
-
-
-def _describe(data: Any, unit: str, long_name: str) -> None:
-    data.attrs["units"] = unit
-    data.attrs["long_name"] = long_name
-
-
-def _dataset(group: Any, name: str, value: np.ndarray, unit: str, long_name: str) -> None:
-    _describe(group.create_dataset(name, data=value), unit, long_name)
-
-
-def _lay_out(file: Any, header: ChainHeader, block_steps: int) -> None:
-    walkers, n = len(header.ensembles), len(header.parameter_names)
-    file.attrs["format_name"] = FORMAT_NAME
-    file.attrs["format_version"] = np.int64(FORMAT_VERSION)
-    file.attrs["header_checksum"] = np.int64(header.checksum())
-    for name, text in header.as_attributes().items():
-        file.attrs[name] = text
-    chain = file.create_dataset(
-        "chain", (0, walkers, n), np.float64, maxshape=(None, walkers, n), chunks=(block_steps, walkers, n)
-    )
-    _describe(chain, "as listed in parameter_units", "free parameters")
-    chain.attrs["ensembles"] = np.array(header.ensembles, dtype=np.int64)
-    chain.attrs["block_steps"] = np.int64(block_steps)
-    for name, dtype, long_name in (
-        ("log_posterior", np.float64, "log posterior density, normalisation of the likelihood omitted"),
-        ("accepted", np.uint8, "1 where the proposal was accepted"),
-    ):
-        data = file.create_dataset(
-            name, (0, walkers), dtype, maxshape=(None, walkers), chunks=(block_steps, walkers)
-        )
-        _describe(data, "1", long_name)
-    states = file.create_dataset(
-        "random_state", (0, STATE_WORDS), np.uint32, maxshape=(None, STATE_WORDS), chunks=(8, STATE_WORDS)
-    )
-    _describe(states, "1", "generator state after each block")
-    _dataset(file, "committed_steps", np.int64(0), "1", "rows beyond this number do not exist")
-    file.create_group("derived")
-    file.create_group("proposal")
-    book = file.create_group("bookkeeping")
-    book.create_group("derived")
-    for name, dtype, long_name in (
-        ("block_end", np.int64, "number of steps after each block"),
-        ("block_checksum", np.uint32, "CRC-32 of each block"),
-    ):
-        _describe(
-            book.create_dataset(name, (0,), dtype, maxshape=(None,), chunks=(1024,)), "1", long_name
-        )
-    _dataset(book, "closed_at", np.int64(0), "1", "committed_steps at the last orderly close, -1 while open")
-
-
-def _publish(partial: Path, path: Path) -> None:
-    """Give the finished file its name, failing when that name is taken."""
-    try:
-        os.link(partial, path)
-    except FileExistsError as error:
-        raise StoreError(f"{path}: exists already; resume it, or choose another name") from error
-    except OSError:  # a file system without hard links; the lock keeps other writers of ours away
-        partial.rename(path)
-    else:
-        partial.unlink()
-
-
-def _open_checked(path: Path, mode: Literal["r", "r+"]) -> tuple[Any, ChainHeader, tuple[str, ...]]:
-    """Open and check everything but the blocks' checksums."""
-    import h5py
-
-    if not path.exists():
-        raise StoreError(f"{path}: does not exist")
-    with store_errors(path, "open the file (damaged, truncated, or not HDF5)"):
-        # The library itself takes an empty file for an HDF5 file without content.
-        with path.open("rb") as stream:
-            if stream.read(len(_SIGNATURE)) != _SIGNATURE:
-                raise OSError("the HDF5 signature is missing")
-        file = h5py.File(path, mode, locking=False)
-    try:
-        with store_errors(path, "read the header (the file is damaged)"):
-            return file, *_check(path, file)
-    except BaseException:
-        with contextlib.suppress(Exception):
-            file.close()
-        raise
-
-
-def _check(path: Path, file: Any) -> tuple[ChainHeader, tuple[str, ...]]:
-    if file.attrs.get("format_name") != FORMAT_NAME:
-        groups = ", ".join(f"{k} {getattr(v, 'shape', '')}".strip() for k, v in file.items()) or "nothing"
-        raise StoreError(f"{path}: is an HDF5 file but not a chain file; it holds {groups}")
-    version = int(file.attrs["format_version"])
-    if version > FORMAT_VERSION:
-        raise StoreError(
-            f"{path}: format version {version} is newer than {FORMAT_VERSION}, the newest this program reads; "
-            "update weakmix"
-        )
-    missing = [name for name in MAIN_DATASETS if name not in file]
-    if version < 1 or missing:
-        raise StoreError(f"{path}: damaged: format version {version}, missing: {', '.join(missing) or 'none'}")
-    chain = file["chain"]
-    header = ChainHeader.from_attributes(
-        {k: v for k, v in file.attrs.items() if k in ChainHeader.__dataclass_fields__},
-        tuple(int(e) for e in chain.attrs["ensembles"]),
-    )
-    if header.checksum() != int(file.attrs["header_checksum"]):
-        raise StoreError(f"{path}: damaged: the header does not match its checksum")
-    walkers, n = len(header.ensembles), len(header.parameter_names)
-    committed = int(file["committed_steps"][()])
-    ends = file["bookkeeping/block_end"][:]
-    blocks = int(np.searchsorted(ends, committed, side="right")) if committed > 0 else 0
-    closed_at = int(file["bookkeeping/closed_at"][()])
-    consistent = (
-        chain.shape[1:] == (walkers, n)
-        and chain.dtype == np.float64
-        and file["log_posterior"].shape[1:] == (walkers,)
-        and file["accepted"].shape[1:] == (walkers,)
-        and committed >= 0
-        and all(len(file[name]) >= committed for name in ("chain", "log_posterior", "accepted"))
-        and np.all(np.diff(ends[:blocks], prepend=0) > 0)
-        and (ends[blocks - 1] if blocks else 0) == committed
-        and min(len(file["random_state"]), len(file["bookkeeping/block_checksum"])) >= blocks
-        and closed_at in (-1, committed)
-    )
-    if not consistent:
-        raise StoreError(
-            f"{path}: damaged: {committed} committed steps ({closed_at} at the last close) do not fit its tables "
-            f"({len(ends)} blocks, {len(chain)} rows of {chain.shape[1:]}, expected {(walkers, n)})"
-        )
-    notices: tuple[str, ...] = ()
-    if len(chain) > committed:
-        notices = (
-            f"{len(chain) - committed} steps after step {committed} were being written when the run stopped; "
-            "they are ignored",
-        )
-    return header, notices

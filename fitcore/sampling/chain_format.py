@@ -119,12 +119,11 @@ class ChainHeader:
     def as_attributes(self) -> dict[str, str]:
         """The header as text attributes of the file's root."""
         values = asdict(self)
-        attributes = {
+        return {
             key: value if isinstance(value, str) else json.dumps(value, sort_keys=True)
             for key, value in values.items()
             if key != "ensembles"
         }
-        return attributes
 
     @classmethod
     def from_attributes(cls, attributes: Mapping[str, str], ensembles: tuple[int, ...]) -> ChainHeader:
@@ -189,14 +188,18 @@ def differences(header: ChainHeader, problem: Any) -> list[str]:
         found.append("parameters only in the file: " + ", ".join(gone))
     if new:
         found.append("parameters only in the present problem: " + ", ".join(new))
-    for key in ("hypothesis", "theory errors"):
-        if header.description.get(key) != now[key]:
-            found.append(f"{key}: {header.description.get(key)} in the file, {now[key]} now")
+    found.extend(
+        f"{key}: {header.description.get(key)} in the file, {now[key]} now"
+        for key in ("hypothesis", "theory errors")
+        if header.description.get(key) != now[key]
+    )
     for key in ("parameters", "fixed"):
         then_values = header.description.get(key, {})
-        for name in sorted(set(then_values) & set(now[key])):
-            if then_values[name] != now[key][name]:
-                found.append(f"{key} {name}: {then_values[name]} in the file, {now[key][name]} now")
+        found.extend(
+            f"{key} {name}: {then_values[name]} in the file, {now[key][name]} now"
+            for name in sorted(set(then_values) & set(now[key]))
+            if then_values[name] != now[key][name]
+        )
     if header.inputs_toml != now["inputs"]:
         lines = difflib.unified_diff(
             header.inputs_toml.splitlines(), now["inputs"].splitlines(), "file", "now", n=0, lineterm=""
@@ -215,7 +218,7 @@ def block_checksum(start: int, *arrays: np.ndarray) -> int:
     """CRC-32 of a block: its first step's number, then the arrays' bytes."""
     checksum = zlib.crc32(int(start).to_bytes(8, "little"))
     for array in arrays:
-        checksum = zlib.crc32(np.ascontiguousarray(array), checksum)
+        checksum = zlib.crc32(memoryview(np.ascontiguousarray(array)).cast("B"), checksum)
     return checksum
 
 

@@ -128,9 +128,10 @@ def _diffusion_time(transform: np.ndarray, count: float) -> float:
         usable = np.isfinite(values)
         crossing = np.flatnonzero(usable[:-1] & usable[1:] & (values[:-1] < 0) & (values[1:] >= 0))
         if not len(crossing):
-            return 0.28 * max(count, 2.0) ** -0.4 * 0.05
+            return float(0.014 * max(count, 2.0) ** -0.4)
         first = crossing[0]
-        return float(brentq(difference, times[first], times[first + 1], rtol=1e-6))
+        root = brentq(difference, times[first], times[first + 1], rtol=1e-6)
+        return float(root)
 
 
 def highest_density(density: Density1D, cl: float) -> tuple[tuple[float, float], ...]:
@@ -163,16 +164,14 @@ def highest_density(density: Density1D, cl: float) -> tuple[tuple[float, float],
     # Variance of a Gaussian kernel estimate: f / (2 sqrt(pi) n h).
     noise = np.sqrt(level / (2.0 * np.sqrt(np.pi) * density.effective * density.bandwidth))
     real = [
-        i
-        for i in range(len(starts) - 1)
-        if height[ends[i] + 1 : starts[i + 1]].min() < level - 3.0 * noise
+        i for i in range(len(starts) - 1) if height[ends[i] + 1 : starts[i + 1]].min() < level - 3.0 * noise
     ]
     if len(starts) > 1 and not real:
         return (_shortest(density, cl),)
     starts = starts[[0, *(i + 1 for i in real)]]
     ends = ends[[*real, len(ends) - 1]]
     regions = []
-    for start, end in zip(starts, ends, strict=True):
+    for start, end in zip(starts.tolist(), ends.tolist(), strict=True):
         low = grid[start] - 0.5 * step
         high = grid[end] + 0.5 * step
         if start > 0:

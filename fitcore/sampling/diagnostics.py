@@ -174,7 +174,7 @@ def effective_sample_size(draws: np.ndarray) -> float:
     extra = max(float(rho[2 * last]), 0.0) if last < len(pairs) else 0.0
     tau = -1.0 + 2.0 * float(np.minimum.accumulate(pairs[:last]).sum()) + extra
     tau = max(tau, 1.0 / np.log10(chains * n))
-    return chains * n / tau
+    return float(chains * n / tau)
 
 
 def rank_normalised_rhat(draws: np.ndarray) -> float:
@@ -340,7 +340,11 @@ def _judge(
     else:
         status = "reliable" if steps >= RELIABLE_TAUS * longest else "tentative"
     if status != "reliable":
-        need = f"at least {int(np.ceil(RELIABLE_TAUS * longest))} steps" if np.isfinite(longest) else "more steps"
+        need = (
+            f"at least {int(np.ceil(RELIABLE_TAUS * longest))} steps"
+            if np.isfinite(longest)
+            else "more steps"
+        )
         advice.append(
             f"run longer: {steps} steps are {steps / longest:.1f} autocorrelation times of {names[worst]}; "
             f"{need} are needed"

@@ -48,7 +48,9 @@ class Evidence:
     message: str
 
 
-def evidence(problem: Any, chain: Any, *, draws: int = 40_000, rng: Any = None, density: Any = None) -> Evidence:
+def evidence(
+    problem: Any, chain: Any, *, draws: int = 40_000, rng: Any = None, density: Any = None
+) -> Evidence:
     """Estimate the evidence of a problem from its chain.
 
     Parameters
@@ -84,7 +86,10 @@ def evidence(problem: Any, chain: Any, *, draws: int = 40_000, rng: Any = None, 
     ]
     if improper:
         raise InputError(
-            [f"{name}: no proper prior; set finite bounds or a prior before asking for the evidence" for name in improper]
+            [
+                f"{name}: no proper prior; set finite bounds or a prior before asking for the evidence"
+                for name in improper
+            ]
         )
     random = np.random.default_rng(rng)
     target = Target(problem)
@@ -93,9 +98,8 @@ def evidence(problem: Any, chain: Any, *, draws: int = 40_000, rng: Any = None, 
     log_posterior = thinned.log_posterior.reshape(-1)
     lower = np.array([p.lower for p in problem.parameters], dtype=np.float64)
     upper = np.array([p.upper for p in problem.parameters], dtype=np.float64)
-    spread = np.array([abs(getattr(p, "scale", 0.0) or 1.0) for p in problem.parameters])
     labels = np.zeros(len(samples), dtype=np.int64) if density is None else density.nearest(samples)
-    fitted = StudentMixture.from_draws(samples, labels, lower, upper, spread)
+    fitted = StudentMixture.from_draws(samples, labels, lower, upper)
     pick = random.integers(len(samples), size=min(4000, len(samples)))
     fitted, _ = best_degrees(target, fitted, samples[pick], log_posterior[pick], random)
     # Heavier tails than a chain's proposal needs: the weights then have their maximum inside the posterior.

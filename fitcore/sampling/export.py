@@ -19,7 +19,13 @@ Format = Literal["netcdf", "csv", "npz"]
 
 
 def export(
-    chain: Any, path: str | os.PathLike[str], *, format: Format, thin: int = 1, start: int = 0, overwrite: bool = False
+    chain: Any,
+    path: str | os.PathLike[str],
+    *,
+    format: Format,
+    thin: int = 1,
+    start: int = 0,
+    overwrite: bool = False,
 ) -> Path:
     """Write a chain, with its real derived quantities, for other programs.
 
@@ -131,8 +137,8 @@ def _npz(chain: Any, path: Path, thin: int, start: int) -> None:
                     member.write(np.ascontiguousarray(part[index[name]], dtype=dtype).tobytes())
         for name in derived:
             with archive.open(f"derived_{name}.npy", "w", force_zip64=True) as member:
-                dtype = next(iter(_parts(chain, thin, start, (name,))))[4][name].dtype
-                _npy_header(member, (kept, walkers), dtype)
+                first = next(iter(_parts(chain, thin, start, (name,))))[4][name]
+                _npy_header(member, (kept, walkers), first.dtype)
                 for part in _parts(chain, thin, start, (name,)):
                     member.write(np.ascontiguousarray(part[4][name]).tobytes())
         for name, array in (

@@ -53,7 +53,7 @@ class WriterLock:
             if not _exclusive(descriptor):
                 raise StoreError(self._refusal(self._owner(descriptor)))
             try:
-                if os.fstat(descriptor).st_ino != os.stat(self.path).st_ino:
+                if os.fstat(descriptor).st_ino != self.path.stat().st_ino:
                     os.close(descriptor)
                     return False
             except FileNotFoundError:

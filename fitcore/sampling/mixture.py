@@ -7,35 +7,27 @@ from typing import Any
 
 import numpy as np
 
+from fitcore.sampling.scales import Scales, chosen_scales
 from observables.errors import InputError
 
-__all__ = ["StudentMixture", "boxed_parameters", "regularised"]
-
-# A parameter whose width is more than this share of its range is drawn on the probit scale.
-_BOXED_SHARE = 0.1
-_EDGE = 1e-15
+__all__ = ["StudentMixture", "regularised"]
 
 
 class StudentMixture:
-    """Mixture of Student-t densities, on the probit scale for parameters that fill their range.
-
-    For a *boxed* parameter with range [lower, upper] the mixture lives in y = Phi^-1((x - lower)/(upper -
-    lower)): a uniform parameter becomes a unit Gaussian, and no draw falls outside the range.
+    """Mixture of Student-t densities in suitably scaled parameters.
 
     Parameters
     ----------
     weights : array_like (K,)
         Non-negative, normalised here.
     means : array_like (K, n)
-        Centres, on the probit scale for boxed parameters.
-    scales : array_like (K, n, n)
-        Scale matrices (the covariance is degrees/(degrees - 2) times as large).
+        Centres, in scaled parameters.
+    covariances : array_like (K, n, n)
+        Scale matrices (the covariance is degrees/(degrees - 2) times as large), in scaled parameters.
     degrees : float
         Degrees of freedom, > 0.
-    lower, upper : array_like (n,)
-        Bounds, may be infinite.
-    boxed : array_like of bool (n,)
-        Which parameters use the probit scale; they need finite bounds.
+    scales : Scales
+        How each parameter is scaled: as it is, logarithmically, or by its share of its range.
 
     Raises
     ------
@@ -43,21 +35,17 @@ class StudentMixture:
         When a scale matrix is not positive definite or shapes disagree.
     """
 
-    def __init__(
-        self, weights: Any, means: Any, scales: Any, degrees: float, lower: Any, upper: Any, boxed: Any
-    ) -> None:
+    def __init__(self, weights: Any, means: Any, covariances: Any, degrees: float, scales: Scales) -> None:
         self.weights = np.atleast_1d(np.asarray(weights, dtype=np.float64))
         self.means = np.atleast_2d(np.asarray(means, dtype=np.float64))
-        self.scales = np.asarray(scales, dtype=np.float64).reshape(*self.means.shape, -1)
+        self.covariances = np.asarray(covariances, dtype=np.float64).reshape(*self.means.shape, -1)
         self.degrees = float(degrees)
-        self.lower = np.asarray(lower, dtype=np.float64)
-        self.upper = np.asarray(upper, dtype=np.float64)
-        self.boxed = np.asarray(boxed, dtype=bool)
+        self.scales = scales
         if np.any(self.weights < 0) or not self.weights.sum() > 0 or self.degrees <= 0:
             raise InputError("mixture: weights must be non-negative with a positive sum, degrees positive")
         self.weights = self.weights / self.weights.sum()
         try:
-            self._roots = np.linalg.cholesky(self.scales)
+            self._roots = np.linalg.cholesky(self.covariances)
         except np.linalg.LinAlgError as error:
             raise InputError("mixture: a scale matrix is not positive definite") from error
         self._inverse_roots = np.linalg.inv(self._roots)
@@ -73,8 +61,13 @@ class StudentMixture:
 
     def with_degrees(self, degrees: float) -> StudentMixture:
         """The same mixture with other degrees of freedom."""
+        return StudentMixture(self.weights, self.means, self.covariances, degrees, self.scales)
+
+    def component(self, k: int, *, shrink: float = 1.0, degrees: float | None = None) -> StudentMixture:
+        """One component alone, ``shrink`` times as wide."""
+        degrees = self.degrees if degrees is None else degrees
         return StudentMixture(
-            self.weights, self.means, self.scales, degrees, self.lower, self.upper, self.boxed
+            [1.0], self.means[k], shrink**2 * self.covariances[k][None], degrees, self.scales
         )
 
     def draw(self, size: int, random: Any) -> np.ndarray:
@@ -88,11 +81,11 @@ class StudentMixture:
         for k in range(len(self.weights)):
             rows = component == k
             y[rows] = self.means[k] + stretch[rows] * (normal[rows] @ self._roots[k].T)
-        return from_probit(y, self.lower, self.upper, self.boxed)
+        return self.scales.unscaled(y)
 
     def log_density(self, theta: np.ndarray) -> np.ndarray:
         """Logarithm of the normalised density at ``theta`` (B, n), shape (B,)."""
-        y, log_jacobian = to_probit(theta, self.lower, self.upper, self.boxed)
+        y, log_jacobian = self.scales.scaled(theta)
         nu, n = self.degrees, y.shape[1]
         terms = np.empty((len(self.weights), len(y)))
         with np.errstate(divide="ignore"):
@@ -108,7 +101,7 @@ class StudentMixture:
 
     def nearest(self, theta: np.ndarray) -> np.ndarray:
         """Component whose centre is nearest in its own metric, (B,) of int."""
-        y, _ = to_probit(theta, self.lower, self.upper, self.boxed)
+        y, _ = self.scales.scaled(theta)
         distances = np.empty((len(self.weights), len(y)))
         for k in range(len(self.weights)):
             whitened = (y - self.means[k]) @ self._inverse_roots[k].T
@@ -120,19 +113,19 @@ class StudentMixture:
         return {
             "weights": self.weights,
             "means": self.means,
-            "scales": self.scales,
+            "covariances": self.covariances,
             "degrees": np.array(self.degrees),
-            "lower": self.lower,
-            "upper": self.upper,
-            "boxed": self.boxed.astype(np.float64),
+            "lower": self.scales.lower,
+            "upper": self.scales.upper,
+            "kinds": self.scales.kinds.astype(np.float64),
         }
 
     @classmethod
     def from_arrays(cls, arrays: Mapping[str, np.ndarray]) -> StudentMixture:
         """The mixture back from :meth:`arrays`."""
-        a = arrays
+        scales = Scales(arrays["kinds"].astype(np.int64), arrays["lower"], arrays["upper"])
         return cls(
-            a["weights"], a["means"], a["scales"], float(a["degrees"]), a["lower"], a["upper"], a["boxed"] > 0.5
+            arrays["weights"], arrays["means"], arrays["covariances"], float(arrays["degrees"]), scales
         )
 
     @classmethod
@@ -147,23 +140,27 @@ class StudentMixture:
     ) -> StudentMixture:
         """Mixture from (point, covariance, weight) of each mode.
 
-        Boxed parameters of a fit's covariance get a uniform marginal instead: near a bound the covariance
-        says nothing about them.
+        Parameters that fill their range get a uniform marginal instead of the fit's: near a bound the
+        covariance says nothing about them.
         """
+        points = np.array([p for p, _, _ in modes], dtype=np.float64)
         covariances = [regularised(np.asarray(c, dtype=np.float64), spread) for _, c, _ in modes]
         widths = np.sqrt(np.max([np.diagonal(c) for c in covariances], axis=0))
-        boxed = boxed_parameters(widths, lower, upper)
-        means, scales = [], []
-        for (point, _, _), covariance in zip(modes, covariances, strict=True):
-            mean, scale = np.array(point, dtype=np.float64), covariance.copy()
+        scales = chosen_scales(points.min(axis=0), widths, lower, upper)
+        boxed, logarithmic = scales.boxed, scales.logarithmic
+        means, scaled = [], []
+        for point, covariance in zip(points, covariances, strict=True):
+            mean, covariance = point.copy(), covariance.copy()
+            mean[logarithmic] = np.log(point[logarithmic])
+            slope = np.where(logarithmic, 1.0 / np.where(logarithmic, point, 1.0), 1.0)
+            covariance *= np.outer(slope, slope)
             mean[boxed] = 0.0
-            scale[boxed, :] = 0.0
-            scale[:, boxed] = 0.0
-            scale[boxed, boxed] = 1.0
+            covariance[boxed, :] = 0.0
+            covariance[:, boxed] = 0.0
+            covariance[boxed, boxed] = 1.0
             means.append(mean)
-            scales.append(scale)
-        weights = [w for _, _, w in modes]
-        return cls(weights, means, scales, degrees, lower, upper, boxed)
+            scaled.append(covariance)
+        return cls([w for _, _, w in modes], means, scaled, degrees, scales)
 
     @classmethod
     def from_draws(
@@ -172,15 +169,18 @@ class StudentMixture:
         labels: np.ndarray,
         lower: np.ndarray,
         upper: np.ndarray,
-        spread: np.ndarray,
         *,
         degrees: float = 5.0,
     ) -> StudentMixture:
         """Mixture with one component per label, from draws (B, n) of the density to be imitated."""
-        boxed = boxed_parameters(draws.std(axis=0), lower, upper)
-        y, _ = to_probit(draws, lower, upper, boxed)
-        spread = np.where(boxed, 1.0, spread)
-        weights, means, scales = [], [], []
+        width = draws.std(axis=0)
+        # As if every parameter could come this low: a logarithm must not meet zero.
+        scales = chosen_scales(
+            np.minimum(draws.mean(axis=0), draws.min(axis=0) + 4.0 * width), width, lower, upper
+        )
+        y, _ = scales.scaled(draws)
+        spread = np.maximum(y.std(axis=0), 1e-300)
+        weights, means, covariances = [], [], []
         for label in np.unique(labels):
             members = y[labels == label]
             # Fewer draws than this give a covariance matrix that is mostly noise.
@@ -188,46 +188,11 @@ class StudentMixture:
                 continue
             weights.append(len(members))
             means.append(members.mean(axis=0))
-            scales.append(regularised(np.atleast_2d(np.cov(members, rowvar=False)), spread))
+            covariances.append(regularised(np.atleast_2d(np.cov(members, rowvar=False)), spread))
         if not weights:
             weights, means = [1], [y.mean(axis=0)]
-            scales = [regularised(np.atleast_2d(np.cov(y, rowvar=False)), spread)]
-        return cls(weights, means, scales, degrees, lower, upper, boxed)
-
-
-def boxed_parameters(widths: np.ndarray, lower: np.ndarray, upper: np.ndarray) -> np.ndarray:
-    """Parameters whose width is a sizeable share of a finite range, (n,) of bool."""
-    size = np.asarray(upper, dtype=np.float64) - np.asarray(lower, dtype=np.float64)
-    return np.asarray(np.isfinite(size) & ~(np.asarray(widths) <= _BOXED_SHARE * size))
-
-
-def to_probit(
-    theta: np.ndarray, lower: np.ndarray, upper: np.ndarray, boxed: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    """Boxed columns on the probit scale, and log |dy/dx| summed over them."""
-    y = np.array(theta, dtype=np.float64)
-    log_jacobian = np.zeros(len(y))
-    if not boxed.any():
-        return y, log_jacobian
-    from scipy.special import ndtri
-
-    size = (upper - lower)[boxed]
-    share = np.clip((y[:, boxed] - lower[boxed]) / size, _EDGE, 1.0 - _EDGE)
-    z = ndtri(share)
-    y[:, boxed] = z
-    log_jacobian += (0.5 * z**2 + 0.5 * np.log(2.0 * np.pi) - np.log(size)).sum(axis=1)
-    return y, log_jacobian
-
-
-def from_probit(y: np.ndarray, lower: np.ndarray, upper: np.ndarray, boxed: np.ndarray) -> np.ndarray:
-    """Inverse of :func:`to_probit`."""
-    theta = np.array(y, dtype=np.float64)
-    if boxed.any():
-        from scipy.special import ndtr
-
-        share = np.clip(ndtr(theta[:, boxed]), _EDGE, 1.0 - _EDGE)
-        theta[:, boxed] = lower[boxed] + (upper - lower)[boxed] * share
-    return theta
+            covariances = [regularised(np.atleast_2d(np.cov(y, rowvar=False)), spread)]
+        return cls(weights, means, covariances, degrees, scales)
 
 
 def regularised(covariance: np.ndarray, spread: np.ndarray) -> np.ndarray:

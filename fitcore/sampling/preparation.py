@@ -17,6 +17,7 @@ Mode = tuple[np.ndarray, np.ndarray, float]
 
 _DEGREES = (4.0, 8.0, 16.0, 32.0, 100.0)
 _NAN_SHARE = 0.1
+PILOT_STEPS = 150
 
 
 class Target:
@@ -114,14 +115,14 @@ def checked_modes(problem: Any, target: Target, modes: Sequence[Any]) -> list[Mo
     return checked
 
 
-def shares(weights: Sequence[float], walkers: int) -> np.ndarray:
+def shares(weights: Any, walkers: int) -> np.ndarray:
     """Walkers per mode by largest remainder, (K,) of int."""
     ideal = np.asarray(weights, dtype=np.float64)
     ideal = ideal / ideal.sum() * walkers
     counts = np.floor(ideal).astype(np.int64)
     order = np.argsort(counts - ideal, kind="stable")
     counts[order[: walkers - counts.sum()]] += 1
-    return counts
+    return np.asarray(counts)
 
 
 def start_points(
@@ -149,10 +150,7 @@ def start_points(
             return coords, log_prob
         for k in np.unique(component[open_]):
             rows = open_[component[open_] == k]
-            single = StudentMixture(
-                [1.0], density.means[k], shrink**2 * density.scales[k][None], 50.0,
-                density.lower, density.upper, density.boxed,
-            )  # fmt: skip
+            single = density.component(int(k), shrink=shrink, degrees=50.0)
             coords[rows] = single.draw(len(rows), random)
         log_prob[open_] = target(coords[open_])
         shrink *= 0.85

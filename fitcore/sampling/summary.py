@@ -135,7 +135,9 @@ def summarise(
     wanted = list(names) if names is not None else parameters + list(chain.derived_names)
     unknown = [n for n in wanted if n not in parameters and n not in chain.derived_names]
     if unknown:
-        raise UnknownNameError(unknown[0], "parameter or derived quantity", parameters + list(chain.derived_names))
+        raise UnknownNameError(
+            unknown[0], "parameter or derived quantity", parameters + list(chain.derived_names)
+        )
     derived = tuple(n for n in wanted if n not in parameters)
     thinned = ThinnedChain.read(chain, start=start, derived=derived)
     limits = stored_bounds(chain) | (bounds or {})

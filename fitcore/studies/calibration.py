@@ -40,7 +40,7 @@ from observables.errors import ConvergenceError, InputError, UnknownNameError
 __all__ = ["BLOCK", "calibrate"]
 
 #: Pseudo-experiments per task.
-BLOCK = 500
+BLOCK = 1000
 #: A result with a larger share of failed pseudo-experiments is not valid.
 TOLERATED_FAILURES = 0.01
 ALL = "all"
@@ -291,7 +291,8 @@ class _Plan:
         if good[0]:
             theta = polished[0]
         delta = max(float(chi2[0]) - self.minima[0].chi2, 0.0)
-        truth = Truth(label, theta, held, (), (self.best, *self.others), self._other_held(held, theta))
+        starts = (self.best, *self.others) if self.others else ()
+        truth = Truth(label, theta, held, (), starts, self._other_held(held, theta))
         self.truths.setdefault(label, truth)
         return delta, [label, *self._edges(truth)]
 

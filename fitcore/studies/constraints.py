@@ -19,7 +19,6 @@ from typing import Any
 import numpy as np
 
 from fitcore.minimise.batch_solver import minimise_batch
-from fitcore.minimise.minima import find_minima
 from fitcore.minimise.profile import Profile, profile
 from fitcore.minimise.uncertainty import curvature_at
 
@@ -156,26 +155,40 @@ def divide(problem: Any, theta: np.ndarray, names: Sequence[str], half_widths: S
 
 
 def profile_constraint(
-    problem: Any, constraint: Constraint, names: Sequence[str], grids: Sequence[np.ndarray], theta: np.ndarray
-) -> Profile | None:
-    """Profile one constraint alone, with its company, on a grid.
+    problem: Any,
+    constraint: Constraint,
+    names: Sequence[str],
+    frames: Sequence[Sequence[np.ndarray]],
+    theta: np.ndarray,
+) -> list[Profile]:
+    """Profile one constraint alone, with its company, on one or more grids.
+
+    Parameters
+    ----------
+    problem : Problem
+        The one that was divided.
+    constraint : Constraint
+    names : sequence of str
+    frames : sequence of grids
+        Each as `profile` takes them.
+    theta : array, shape (n,)
+        Best fit of everything: where the search starts.
 
     Returns
     -------
-    Profile or None
-        None when these entries alone do not determine the quantities of the grid. Its minimum is the lowest
-        chi-square anywhere, also outside the grid.
+    list of Profile
+        One per frame; empty when these entries alone do not determine the quantities. Their `minimum` is the lowest
+        chi-square known anywhere, also outside the frame.
     """
     alone = problem.only(*constraint.entries, *constraint.company)
     if not all(alone.determines(name) for name in names):
-        return None
+        return []
     start = np.array(alone.start)
     known = dict(zip(problem.parameter_names, np.asarray(theta, dtype=float), strict=True))
     for k, parameter in enumerate(alone.parameter_names):
         start[k] = known.get(parameter, start[k])
     near = minimise_batch(alone, start[None])
-    elsewhere = [m.theta for m in find_minima(alone, size=16)][:3]
-    return profile(alone, names, grids, start=near.theta[0], minima=elsewhere)
+    return [profile(alone, names, grids, start=near.theta[0]) for grids in frames]
 
 
 def _moves(axes: np.ndarray, parameter: int) -> bool:

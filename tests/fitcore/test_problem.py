@@ -81,7 +81,7 @@ def test_a_shift_that_is_fixed_by_default(make, tables):
     measured = make(*entries, m("h", "hidden_shift", 0.1, 0.05))
     assert measured.parameter_names == ("offset", "hidden_shift")
     assert measured.fixed == {}
-    assert measured.parameters[1].start == 0.1
+    assert measured.parameters[1].start == pytest.approx(0.1)
     freed = make(*entries, tables.table("[parameters.hidden_shift]", fixed=False))
     assert freed.parameter_names == ("offset", "hidden_shift")
     elsewhere = make(*entries, tables.table("[parameters.hidden_shift]", fixed=True, start=0.3))
@@ -496,12 +496,12 @@ def curved(tables):
 
 def test_a_measurement_split_into_two_independent_halves(make, tables, curved):
     whole = newton_minimum(make(*curved))
-    halves = [tables.measurement(f"three-{i}", "at_three", 3.4, 0.3 * math.sqrt(2.0)) for i in (1, 2)]
-    once = newton_minimum(make(*curved, tables.measurement("three", "at_three", 3.4, 0.3)))
+    halves = [tables.measurement(f"three-{i}", "at_three", 3.9, 0.3 * math.sqrt(2.0)) for i in (1, 2)]
+    once = newton_minimum(make(*curved, tables.measurement("three", "at_three", 3.9, 0.3)))
     twice = newton_minimum(make(*curved, *halves))
     for left, right in zip(once, twice, strict=True):
         np.testing.assert_allclose(left, right, rtol=1e-9)
-    assert abs(once[0][0] - whole[0][0]) > 1e-3, "the measurement matters"
+    assert once[2] > whole[2] + 0.01, "the measurement matters"
 
 
 def test_a_fully_shared_error_is_a_common_shift(make, tables):

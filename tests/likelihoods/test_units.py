@@ -11,6 +11,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from likelihoods import units
 from likelihoods.units import UnitError, factor
 
 
@@ -109,3 +110,19 @@ def test_equal_strings_and_plain_scales_need_no_unit_library() -> None:
         "sys.exit('pint' in sys.modules)"
     )
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_common_units_agree_with_the_registry() -> None:
+    for unit in units._COMMON:
+        for target in units._COMMON:
+            have, want = units._parse(unit), units._parse(target)
+            if have.dimensionality != want.dimensionality:
+                with pytest.raises(UnitError, match="cannot be converted to"):
+                    factor(unit, target)
+            else:
+                assert math.isclose(factor(unit, target), have.magnitude / want.magnitude, rel_tol=1e-15)
+
+
+def test_published_inputs_do_not_wait_for_pint() -> None:
+    code = "import sys, likelihoods; likelihoods.load_inputs('averages-2026'); sys.exit('pint' in sys.modules)"
+    subprocess.run([sys.executable, "-c", code], check=True)

@@ -15,7 +15,7 @@ MIXING = [
     name
     for name in catalogue.names("quantity")
     if isinstance(node := catalogue[name], Quantity)
-    and node.function.__module__ == "observables.neutral_mixing"
+    and node.function.__module__ in ("observables.neutral_mixing", "observables.kaon_mixing")
 ]
 ELEMENTS = [f"V_{up}{down}" for up in "uct" for down in "dsb"]
 START = {name: catalogue[name].start for name in catalogue.names("parameter")}

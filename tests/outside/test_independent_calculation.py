@@ -32,6 +32,7 @@ MODULES = (
     "leptonic_decays",
     "mixing_matrix",
     "neutral_mixing",
+    "kaon_mixing",
     "scale_evolution",
     "semileptonic_decays",
 )

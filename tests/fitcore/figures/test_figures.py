@@ -205,6 +205,10 @@ def test_every_symbol_of_the_catalogue_can_be_set() -> None:
 
 def test_families() -> None:
     assert style.family_of(("tree", "kaon")).label == "tree-level magnitudes and phase"
+    assert style.family_of(("lifetime", "tree", "kaon")).label == "lifetimes and form-factor shapes"
+    assert style.family_of(("form-factor-shape", "tree")).label == "lifetimes and form-factor shapes"
+    assert style.family_of(("magnitude", "tree", "beauty")) is style.TREE
+    assert style.family_of(("radiative", "tree")) is style.THEORY
     assert style.family_of(("cp-asymmetry", "loop")).colour == style.PURPLE
     assert style.family_of(("tree",), "theory") is style.THEORY
     assert style.family_of(()) is style.OTHER

@@ -13,7 +13,9 @@ class AnalyticProblem:
     hypothesis = "standard"
     theory_errors = "as-given"
 
-    def __init__(self, log_density, n, *, lower=None, upper=None, start=None, scale=1.0, period=None, fingerprint="f"):
+    def __init__(
+        self, log_density, n, *, lower=None, upper=None, start=None, scale=1.0, period=None, fingerprint="f"
+    ):
         self.lower = np.full(n, -np.inf) if lower is None else np.asarray(lower, dtype=float)
         self.upper = np.full(n, np.inf) if upper is None else np.asarray(upper, dtype=float)
         start = np.zeros(n) if start is None else np.asarray(start, dtype=float)
@@ -36,7 +38,11 @@ class AnalyticProblem:
         return np.where(inside, self.log_density(theta), -np.inf)
 
     def values(self, theta, names):
-        known = {"sum": theta.sum(axis=1), "first_squared": theta[:, 0] ** 2, "phase": np.exp(1j * theta[:, 0])}
+        known = {
+            "sum": theta.sum(axis=1),
+            "first_squared": theta[:, 0] ** 2,
+            "phase": np.exp(1j * theta[:, 0]),
+        }
         return {name: known[name] for name in names}
 
     def unit_of(self, name):

@@ -81,7 +81,9 @@ class TestBackendConformance:
             for thin, discard in ((1, 0), (2, 0), (3, 4), (1, steps - 1)):
                 options = {"flat": flat, "thin": thin, "discard": discard}
                 np.testing.assert_array_equal(backend.get_chain(**options), reference.get_chain(**options))
-                np.testing.assert_array_equal(backend.get_log_prob(**options), reference.get_log_prob(**options))
+                np.testing.assert_array_equal(
+                    backend.get_log_prob(**options), reference.get_log_prob(**options)
+                )
         assert backend.get_blobs() is None
         np.testing.assert_array_equal(backend.accepted, reference.backend.accepted)
 
@@ -118,9 +120,7 @@ def test_blocks_give_the_whole_chain(kind, tmp_path):
         np.testing.assert_array_equal(
             np.concatenate([b.chain for b in blocks]), chain.get_chain(discard=start)
         )
-    np.testing.assert_array_equal(
-        sum(b.accepted.sum(axis=0) for b in chain.blocks()), chain.accepted
-    )
+    np.testing.assert_array_equal(sum(b.accepted.sum(axis=0) for b in chain.blocks()), chain.accepted)
     chain.close()
 
 
@@ -346,7 +346,7 @@ class TestTrouble:
             raise PermissionError(13, "Permission denied")
 
         monkeypatch.setattr(os, "open", refuse)
-        with pytest.raises(StoreError, match="cannot write here .Permission denied"):
+        with pytest.raises(StoreError, match=r"cannot write here .Permission denied"):
             ChainFile.create(tmp_path / "c.h5", header())
 
     @pytest.mark.skipif(os.geteuid() == 0, reason="root writes everywhere")

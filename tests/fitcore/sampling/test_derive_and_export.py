@@ -6,13 +6,13 @@ import pytest
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.chain_file import ChainFile  # noqa: E402
-from fitcore.sampling.derive import derive  # noqa: E402
-from fitcore.sampling.export import export  # noqa: E402
-from fitcore.sampling.posterior import sample  # noqa: E402
-from fitcore.sampling.summary import summarise  # noqa: E402
-from fitcore.sampling.verify import verify  # noqa: E402
-from observables.errors import InputError, StoreError, UnknownNameError  # noqa: E402
+from fitcore.sampling.chain_file import ChainFile
+from fitcore.sampling.derive import derive
+from fitcore.sampling.export import export
+from fitcore.sampling.posterior import sample
+from fitcore.sampling.summary import summarise
+from fitcore.sampling.verify import verify
+from observables.errors import InputError, StoreError, UnknownNameError
 
 OPTIONS = {"walkers": 16, "ensembles": 2, "rng": 1, "check_widths": False, "block_steps": 16}
 

@@ -3,16 +3,16 @@ import pytest
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.chain_format import ChainHeader  # noqa: E402
-from fitcore.sampling.diagnostics import (  # noqa: E402
+from fitcore.sampling.chain_format import ChainHeader
+from fitcore.sampling.diagnostics import (
     WidthCheck,
     diagnose,
     effective_sample_size,
     longest_stay,
     rank_normalised_rhat,
 )
-from fitcore.sampling.memory_chain import MemoryChain  # noqa: E402
-from fitcore.sampling.thinned import ThinnedChain  # noqa: E402
+from fitcore.sampling.memory_chain import MemoryChain
+from fitcore.sampling.thinned import ThinnedChain
 
 
 def autoregressive(rho, chains, n, seed=0):

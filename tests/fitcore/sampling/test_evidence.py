@@ -3,9 +3,9 @@ import pytest
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.evidence import _estimate, evidence, pareto_k  # noqa: E402
-from fitcore.sampling.posterior import sample  # noqa: E402
-from observables.errors import InputError  # noqa: E402
+from fitcore.sampling.evidence import _estimate, evidence, pareto_k
+from fitcore.sampling.posterior import sample
+from observables.errors import InputError
 
 
 def boxed_gaussian(problems, n, half=20.0):

@@ -11,8 +11,8 @@ import pytest
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.chain_file import ChainFile  # noqa: E402
-from fitcore.sampling.verify import verify  # noqa: E402
+from fitcore.sampling.chain_file import ChainFile
+from fitcore.sampling.verify import verify
 
 UNTIL = 240
 
@@ -68,7 +68,10 @@ def test_full_disk_stops_the_run_and_loses_nothing(writer_script, uninterrupted,
 def test_interrupt_from_the_keyboard_commits_and_ends_in_good_order(writer_script, uninterrupted, tmp_path):
     path = tmp_path / "chain.h5"
     with subprocess.Popen(
-        [*writer_script, str(path), str(UNTIL), "0.002"], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+        [*writer_script, str(path), str(UNTIL), "0.002"],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
     ) as process:
         deadline = time.monotonic() + 60
         while time.monotonic() < deadline:

@@ -7,9 +7,9 @@ import pytest
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.diagnostics import effective_sample_size  # noqa: E402
-from fitcore.sampling.posterior import sample  # noqa: E402
-from observables.errors import ConvergenceError, InputError, StoreError  # noqa: E402
+from fitcore.sampling.diagnostics import effective_sample_size
+from fitcore.sampling.posterior import sample
+from observables.errors import ConvergenceError, InputError, StoreError
 
 SIGMAS = 5.0
 
@@ -24,7 +24,10 @@ def distance(result, function, expected):
 def assert_moments(result, means, variances):
     for k, (mean, variance) in enumerate(zip(means, variances, strict=True)):
         assert abs(distance(result, lambda c, k=k: c[..., k], mean)) < SIGMAS, (k, "mean")
-        assert abs(distance(result, lambda c, k=k, m=mean: (c[..., k] - m) ** 2, variance)) < SIGMAS, (k, "variance")
+        assert abs(distance(result, lambda c, k=k, m=mean: (c[..., k] - m) ** 2, variance)) < SIGMAS, (
+            k,
+            "variance",
+        )
 
 
 @pytest.mark.stat
@@ -160,12 +163,13 @@ def test_progress_is_reported(problems):
 
 def test_width_comparison_finds_a_lying_proposal(problems):
     """A chain that is too narrow is caught by the short run without the independence move."""
-    from fitcore.sampling import posterior
+    from fitcore.sampling.preparation import Target
+    from fitcore.sampling.run import Run
 
     problem = problems.gaussian(np.eye(2))
     result = sample(problem, until=400, rng=1)
     assert result.diagnostics.width_check.ratio == pytest.approx(1.0, abs=0.1)
-    run = posterior._Run(problem, posterior.Target(problem), result.chain, None)
+    run = Run(problem, Target(problem), result.chain, None)
     run.prepare(None, None)
     result.chain.chain *= 0.85
     assert run.compare_widths(lambda: False).suspicious.all()
@@ -234,6 +238,8 @@ class TestRefusals:
         """Without the second mode, ensembles started in both cannot agree."""
         n = 8
         problem = problems.two_modes(n, distance=60.0)
-        result = sample(problem, modes=[(np.full(n, 0.0), 400.0 * np.eye(n), 1.0)], until=200, rng=5, walkers=48)
+        result = sample(
+            problem, modes=[(np.full(n, 0.0), 400.0 * np.eye(n), 1.0)], until=200, rng=5, walkers=48
+        )
         shares = [(result.chain.get_chain()[:, result.chain.ensembles == e, 0] < 30).mean() for e in range(4)]
         assert not result.valid or np.ptp(shares) < 0.1

@@ -9,10 +9,10 @@ from scipy import stats
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.density import density_1d, density_2d, highest_density, shortest_interval  # noqa: E402
-from fitcore.sampling.posterior import sample  # noqa: E402
-from fitcore.sampling.summary import summarise  # noqa: E402
-from observables.errors import InputError, UnknownNameError  # noqa: E402
+from fitcore.sampling.density import density_1d, density_2d, highest_density, shortest_interval
+from fitcore.sampling.posterior import sample
+from fitcore.sampling.summary import summarise
+from observables.errors import InputError, UnknownNameError
 
 
 @pytest.fixture(scope="module")

@@ -1,0 +1,129 @@
+"""Figures of `weakmix profile`, put together from a scan."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from fitcore.figures import style
+from fitcore.minimise.profile import threshold
+
+if TYPE_CHECKING:
+    from fitcore.commands.scan import ConstraintProfile, Scan
+    from fitcore.figures.plane import Band
+
+APEX = ("wolfenstein_rhobar", "wolfenstein_etabar")
+
+
+def drawings(scan: Scan) -> dict[str, style.Drawing]:
+    """Name of the file -> drawing."""
+    if scan.dof == 1:
+        return {"profile": _one(scan)}
+    return {"plane": _plane(scan)}
+
+
+def footer(scan: Scan) -> str:
+    """What the figure was made from."""
+    inputs = scan.problem.inputs
+    revision = f" revision {inputs.revision}" if inputs.revision else ""
+    parts = [f"{inputs.name}{revision}", inputs.sha256[:8]]
+    if scan.problem.hypothesis != "standard":
+        parts.append(f"hypothesis {scan.problem.hypothesis}")
+    if not scan.others:
+        parts.append(f"theory errors {scan.problem.theory_errors}")
+    return " - ".join(parts)
+
+
+def guides(scan: Scan) -> list[np.ndarray]:
+    """Sides of the unitarity triangle, where the plane is that of its apex."""
+    if tuple(scan.profile.names) != APEX:
+        return []
+    return [np.array([[0.0, 0.0], [1.0, 0.0], list(scan.best), [0.0, 0.0]])]
+
+
+def _levels(scan: Scan) -> list[tuple[str, float]]:
+    return [(f"{100 * level:.1f} %", threshold(level, scan.dof)) for level in scan.levels]
+
+
+def _one(scan: Scan) -> style.Drawing:
+    from fitcore.figures.one_parameter import Curve, draw
+
+    name = scan.profile.names[0]
+    curves = []
+    every: dict[str, Any] = {scan.problem.theory_errors: (scan.profile, scan.regions)}
+    every |= {way: (other, scan.other_intervals[way]) for way, other in scan.others.items()}
+    for way, (found, intervals) in every.items():
+        place = int(np.argmin(found.delta_chi2))
+        best = scan.best[0] if found is scan.profile else float(found.grids[0][place])
+        curves.append(Curve(way if scan.others else "", found.grids[0], found.delta_chi2, intervals, best))
+    return draw(
+        name,
+        curves,
+        levels=_levels(scan),
+        latex=scan.problem.latex_of(name),
+        unit=scan.problem.unit_of(name),
+        footer=footer(scan),
+    )
+
+
+def _plane(scan: Scan) -> style.Drawing:
+    from fitcore.commands.scan import same_scale
+    from fitcore.figures.plane import Band, PlaneAxis, draw
+
+    problem, found = scan.problem, scan.profile
+    first, second = (PlaneAxis(n, problem.latex_of(n), problem.unit_of(n)) for n in found.names)
+    levels = _levels(scan)
+    outlines = {
+        level: [part.vertices for part in parts] for (_, level), parts in zip(levels, scan.regions, strict=True)
+    }
+    together = Band(
+        "everything",
+        "",
+        style.OTHER,
+        *found.grids,
+        found.delta_chi2,
+        outlines=outlines,
+        overview=None if scan.overview is None else (*scan.overview.grids, scan.overview.chi2 - found.minimum),
+    )
+    caption = ""
+    if scan.division is not None:
+        fixing = ", ".join(scan.division.fixing)
+        caption = (
+            "Each band: the 68.3 % region, two parameters, of one measured quantity alone, refitted with the theory "
+            f"inputs it needs and with {fixing} (which fix the other directions), counted from its lowest point in "
+            "the frame. Two symbols: both together, so that common theory inputs cancel; the first alone goes without "
+            "the second."
+        )
+    return draw(
+        (first, second),
+        together,
+        [_band(scan, part) for part in scan.each],
+        levels=levels,
+        best=(scan.best[0], scan.best[1]),
+        chi2=found.minimum,
+        guides=guides(scan),
+        equal=same_scale(problem, found.names) and bool(scan.each),
+        title=problem.inputs.title,
+        footer=footer(scan),
+        caption=caption,
+    )
+
+
+def _band(scan: Scan, part: ConstraintProfile) -> Band:
+    from fitcore.figures.plane import Band
+
+    problem, constraint = scan.problem, part.constraint
+    latex = [problem.latex_of(quantity) for quantity in constraint.quantities]
+    around = part.overview
+    delta = around.chi2 - part.lowest
+    delta[around.flagged] = np.inf
+    return Band(
+        constraint.name,
+        r"\,{+}\,".join(latex) if all(latex) else "",
+        style.family_of(constraint.groups),
+        *part.profile.grids,
+        part.profile.chi2 - part.lowest,
+        share=constraint.chi2,
+        overview=(*around.grids, delta),
+    )
