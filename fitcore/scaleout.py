@@ -11,7 +11,9 @@ import importlib
 import importlib.util
 import multiprocessing
 import os
+import re
 import signal
+import socket
 import sys
 import tempfile
 from collections.abc import Callable, Hashable, Iterator, Mapping
@@ -43,6 +45,7 @@ __all__ = [
 
 #: Seconds after which an address without a scheduler is given up.
 CONNECTION_TIMEOUT = 5.0
+HINT = "start one with `dask scheduler` and `dask worker ADDRESS`, check the address, or leave the cluster out"
 #: How often a task may be lost with its worker before it is blamed.
 ATTEMPTS = 4
 #: Problems kept per worker process.
@@ -264,11 +267,13 @@ class ClusterExecutor(Executor):
                 "--cluster needs dask: install weakmix with the extra 'cluster' (weakmix[cluster])"
             ) from error
         self.address = address
-        hint = "start one with `dask scheduler` and `dask worker ADDRESS`, check the address, or leave the cluster out"
+        _knock(address, timeout)
         try:
             self._client = Client(address, timeout=timeout, set_as_default=False)
-        except (OSError, ValueError, TypeError, ImportError) as error:
-            raise InputError(f"cluster {address!r}: no scheduler answered within {timeout:g} s; {hint}") from error
+        except (OSError, ValueError, TypeError) as error:
+            raise InputError(
+                f"cluster {address!r}: what answers there within {timeout:g} s is no dask scheduler; {HINT}"
+            ) from error
         try:
             self._client.wait_for_workers(1, timeout=timeout)
         except (OSError, TimeoutError) as error:
@@ -294,6 +299,19 @@ class ClusterExecutor(Executor):
         # the view's own shutdown would wait for everything that was sent
         with contextlib.suppress(OSError, TimeoutError):
             self._client.close()
+
+
+def _knock(address: str, timeout: float) -> None:
+    """Raise InputError unless something listens at the address; cheaper and cleaner than a client that gives up."""
+    found = re.fullmatch(r"(?:(?P<protocol>[a-z]+)://)?\[?(?P<host>[^/\[\]]+)\]?:(?P<port>\d{1,5})/?", address)
+    if found is None:
+        raise InputError(f"cluster {address!r}: no address of a scheduler; write it like tcp://host:8786")
+    if found["protocol"] not in (None, "tcp", "tls", "ws", "wss"):
+        return  # another transport: the client's business
+    try:
+        socket.create_connection((found["host"], int(found["port"])), timeout=timeout).close()
+    except (OSError, OverflowError) as error:
+        raise InputError(f"cluster {address!r}: nobody answers there ({error}); {HINT}") from error
 
 
 def open_executor(*, jobs: int = 1, cluster: str | None = None, spec: Any = None) -> Executor:

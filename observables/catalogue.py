@@ -16,13 +16,22 @@ from __future__ import annotations
 import difflib
 import inspect
 import math
-import typing
 from collections.abc import Callable, Iterable, Iterator, Mapping
-from dataclasses import dataclass, field, replace
-from types import FrameType
-from typing import TYPE_CHECKING, Annotated, Any, TypeAlias, TypeVar
+from typing import TYPE_CHECKING, Any, TypeVar
 
 from observables.errors import CatalogueError, UnknownNameError
+from observables.nodes import (
+    Complex,
+    Constant,
+    Node,
+    Parameter,
+    Quantity,
+    Real,
+    caller_origin,
+    caller_owner,
+    declared_complex,
+    make_parameter,
+)
 
 if TYPE_CHECKING:
     from observables.hypothesis import Hypothesis
@@ -41,111 +50,7 @@ __all__ = [
     "quantity",
 ]
 
-#: Return annotations of quantity functions: what the values are.
-Real: TypeAlias = Annotated[Any, "real"]
-Complex: TypeAlias = Annotated[Any, "complex"]
-
 Function = TypeVar("Function", bound=Callable[..., Any])
-
-
-@dataclass(frozen=True, kw_only=True)
-class Node:
-    """What all entries of a catalogue have.
-
-    Attributes
-    ----------
-    name, unit, title, latex, source : str
-        ``unit`` is ``"1"`` for dimensionless; ``source`` names the published origin.
-    period : float or None
-        For angles: values that differ by it are the same.
-    """
-
-    name: str
-    unit: str
-    title: str = ""
-    latex: str = ""
-    source: str = ""
-    period: float | None = None
-    origin: str = field(default="", compare=False, repr=False)
-    owner: str = field(default="", compare=False, repr=False)
-
-    @property
-    def kind(self) -> str:
-        """``"quantity"``, ``"parameter"`` or ``"constant"``."""
-        return type(self).__name__.lower()
-
-    @property
-    def is_complex(self) -> bool:
-        """Whether the values are complex numbers."""
-        return False
-
-
-@dataclass(frozen=True, kw_only=True)
-class Parameter(Node):
-    """A leaf that a fit may vary.
-
-    Attributes
-    ----------
-    start, lower, upper, scale : float
-        Start value, physical bounds, and a sensible step.
-    cp_odd : bool
-        Whether the CP operation flips its sign (weak phases, eta-bar).
-    fixed : bool
-        Held at ``start`` unless an inputs file measures or frees it.
-    """
-
-    start: float
-    lower: float = -math.inf
-    upper: float = math.inf
-    scale: float = 1.0
-    cp_odd: bool = False
-    fixed: bool = False
-
-
-@dataclass(frozen=True, kw_only=True)
-class Constant(Node):
-    """A leaf that a fit does not vary, unless an inputs file measures it.
-
-    Attributes
-    ----------
-    value, error : float
-    pdg : str or None
-        Identifier in the PDG database.
-    """
-
-    value: float
-    error: float = 0.0
-    pdg: str | None = None
-
-
-@dataclass(frozen=True, kw_only=True)
-class Quantity(Node):
-    """A node computed from its ingredients.
-
-    Attributes
-    ----------
-    function : callable
-        Pure, elementwise over the batch axes.
-    ingredients : mapping
-        Argument name -> name of the node it takes.
-    cp : str
-        ``"even"``, ``"odd"``, ``"conjugate"`` or the name of the CP partner.
-    physical : bool
-        False for what depends on the phase convention of the matrix.
-    recalled : bool
-        The formula is quoted from memory; shown until someone re-reads the source.
-    """
-
-    function: Callable[..., Any] = field(compare=False)
-    ingredients: Mapping[str, str]
-    complex_valued: bool
-    cp: str = "even"
-    physical: bool = True
-    recalled: bool = False
-
-    @property
-    def is_complex(self) -> bool:
-        return self.complex_valued
 
 
 class Catalogue:
@@ -193,8 +98,8 @@ class Catalogue:
             cp_odd=cp_odd,
             period=period,
             fixed=fixed,
-            origin=_caller_origin(),
-            owner=_caller_owner(),
+            origin=caller_origin(),
+            owner=caller_owner(),
         )
         self._add(node)
         return node
@@ -218,7 +123,7 @@ class Catalogue:
         CatalogueError
             The name is taken, or the value or error is not a finite number.
         """
-        origin = _caller_origin()
+        origin = caller_origin()
         if not (math.isfinite(value) and math.isfinite(error) and error >= 0):
             raise CatalogueError(f"{origin}: constant {name!r} needs a finite value and an error >= 0")
         node = Constant(
@@ -231,7 +136,7 @@ class Catalogue:
             error=float(error),
             pdg=pdg,
             origin=origin,
-            owner=_caller_owner(),
+            owner=caller_owner(),
         )
         self._add(node)
         return node
@@ -280,7 +185,7 @@ class Catalogue:
             code = function.__code__
             origin = f"{code.co_filename}:{code.co_firstlineno}"
             label = name or function.__name__
-            is_complex = _declared_complex(function, label, origin)
+            is_complex = declared_complex(function, label, origin)
             arguments = tuple(inspect.signature(function).parameters)
             renamed = dict(ingredients or {})
             if unknown := set(renamed) - set(arguments):
@@ -528,47 +433,6 @@ class Catalogue:
         twin._nodes = dict(self._nodes)
         twin._hypotheses = dict(self._hypotheses)
         return twin
-
-
-def make_parameter(name: str, *, origin: str, owner: str, **settings: Any) -> Parameter:
-    """Build a checked `Parameter`; shared by catalogues and hypotheses."""
-    node = Parameter(name=name, origin=origin, owner=owner, **settings)
-    if not node.lower < node.upper:
-        raise CatalogueError(f"{origin}: parameter {name!r} has reversed bounds {node.lower}, {node.upper}")
-    if not node.lower <= node.start <= node.upper:
-        raise CatalogueError(f"{origin}: parameter {name!r} starts at {node.start}, outside its bounds")
-    if not node.scale > 0:
-        raise CatalogueError(f"{origin}: parameter {name!r} needs a positive scale")
-    return replace(node, start=float(node.start), scale=float(node.scale))
-
-
-def _caller_frame() -> FrameType | None:
-    frame = inspect.currentframe()
-    while frame is not None and frame.f_globals.get("__name__") in (__name__, "observables.hypothesis"):
-        frame = frame.f_back
-    return frame
-
-
-def _caller_origin() -> str:
-    frame = _caller_frame()
-    return f"{frame.f_code.co_filename}:{frame.f_lineno}" if frame is not None else "?"
-
-
-def _caller_owner() -> str:
-    """Who may declare a leaf anew: the same line, or any (edited) cell of an interactive session."""
-    frame = _caller_frame()
-    interactive = frame is not None and frame.f_globals.get("__name__") == "__main__"
-    return "__main__" if interactive else _caller_origin()
-
-
-def _declared_complex(function: Callable[..., Any], label: str, origin: str) -> bool:
-    annotation = function.__annotations__.get("return")
-    if isinstance(annotation, str):
-        annotation = {"Real": Real, "Complex": Complex}.get(annotation.rsplit(".", 1)[-1])
-    marks = typing.get_args(annotation)[1:] if typing.get_origin(annotation) is Annotated else ()
-    if marks not in (("real",), ("complex",)):
-        raise CatalogueError(f"{origin}: {label!r} must say '-> Real' or '-> Complex'")
-    return bool(marks == ("complex",))
 
 
 catalogue = Catalogue()

@@ -12,8 +12,9 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from observables.catalogue import Catalogue, Constant, Parameter, Quantity
+from observables.catalogue import Catalogue
 from observables.errors import CatalogueError, InputError, UnknownNameError
+from observables.nodes import Constant, Parameter, Quantity
 
 if TYPE_CHECKING:
     from observables.hypothesis import Hypothesis

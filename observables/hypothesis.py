@@ -16,8 +16,8 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any, TypeVar
 
-from observables.catalogue import Parameter, _caller_origin, _caller_owner, _declared_complex, make_parameter
 from observables.errors import CatalogueError
+from observables.nodes import Parameter, caller_origin, caller_owner, declared_complex, make_parameter
 
 __all__ = ["STANDARD", "Hypothesis", "Layer"]
 
@@ -76,7 +76,7 @@ class Hypothesis:
         self, name: str, *, unit: str, start: float, scale: float, title: str, **more: Any
     ) -> Parameter:
         """Declare a parameter that exists only under this hypothesis; arguments as `Catalogue.parameter`."""
-        origin, owner = _caller_origin(), _caller_owner()
+        origin, owner = caller_origin(), caller_owner()
         held = self.parameters.get(name)
         if held is not None and held.owner != owner:
             raise CatalogueError(
@@ -106,7 +106,7 @@ class Hypothesis:
                 ingredients={a: renamed.get(a, a) for a in arguments},
                 takes_standard="standard" in arguments,
                 owner=self.name,
-                complex_valued=_declared_complex(function, name, origin),
+                complex_valued=declared_complex(function, name, origin),
             )
             self.layers[name] = (layer,)
             return function

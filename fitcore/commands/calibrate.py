@@ -51,6 +51,11 @@ CAUTION = (
     metavar="NAME",
     help="Report coverage and pulls of this quantity; repeatable; `all` for every parameter.",
 )
+@click.option(
+    "--cluster",
+    metavar="ADDRESS",
+    help="Run on the dask cluster whose scheduler has this address, in place of --jobs.",
+)
 @click.option("--no-figures", is_flag=True, help="Draw nothing.")
 @output_options
 @work_options
@@ -62,6 +67,7 @@ def command(
     toys: int,
     cl: tuple[float, ...],
     coverage: tuple[str, ...],
+    cluster: str | None,
     no_figures: bool,
     output: Output,
     work: Work,
@@ -86,7 +92,7 @@ def command(
     problem = request.load()
     wanted = Wanted.parse(targets, cl, coverage, toys)
     announce(output, "calibration", problem)
-    result, place = calibrate_and_store(problem, request, wanted, output, work, figures=not no_figures)
+    result, place = calibrate_and_store(problem, request, wanted, output, work, cluster, figures=not no_figures)
     show(output, result)
     if place is not None:
         output.show(f"\nWritten to {place}")
@@ -185,13 +191,20 @@ def _grid(target: str, text: str) -> Any:
 
 
 def calibrate_and_store(
-    problem: Problem, request: ProblemRequest, wanted: Wanted, output: Output, work: Work, *, figures: bool
+    problem: Problem,
+    request: ProblemRequest,
+    wanted: Wanted,
+    output: Output,
+    work: Work,
+    cluster: str | None,
+    *,
+    figures: bool,
 ) -> tuple[CalibrationResult, Path | None]:
     """Calibrate, keeping finished blocks, and write the run folder unless only JSON on stdout is wanted."""
     from fitcore.commands import run_folder
 
     if output.json_on_stdout and output.out is None:
-        return run(problem, wanted, output, work, store=None), None
+        return run(problem, wanted, output, work, cluster, store=None), None
     options = {
         **request.describe(),
         "targets": list(wanted.targets),
@@ -204,7 +217,7 @@ def calibrate_and_store(
     with run_folder.writing(
         "calibrate", problem.inputs.name, out=output.out, options=options, seed=work.seed
     ) as folder:
-        result = run(problem, wanted, output, work, store=store)
+        result = run(problem, wanted, output, work, cluster, store=store)
         write_run(folder, problem, result, figures=figures)
         shutil.copyfile(store, folder.building / TOYS_FILE)
     store.unlink(missing_ok=True)
@@ -222,13 +235,12 @@ def store_place(out: Path | None, problem: Problem, options: dict[str, Any], see
 
 
 def run(
-    problem: Problem, wanted: Wanted, output: Output, work: Work, *, store: Path | None
+    problem: Problem, wanted: Wanted, output: Output, work: Work, cluster: str | None, *, store: Path | None
 ) -> CalibrationResult:
     """Calibrate with progress on stderr."""
     from fitcore.scaleout import open_executor
     from fitcore.studies.calibration import calibrate
 
-    cluster = getattr(work, "cluster", None)
     spec = problem.spec if work.jobs > 1 and cluster is None else None
     done = [0, 0]
     try:
@@ -262,7 +274,7 @@ def progress(output: Output) -> Iterator[Callable[[int, int], None]]:
     """A bar on a terminal, a line every ten seconds elsewhere."""
     import sys
 
-    from fitcore.commands.progress import progress_bar
+    from fitcore.commands.progress_bar import progress_bar
 
     if output.quiet or sys.stderr.isatty():
         with progress_bar("pseudo-experiments", quiet=output.quiet) as report:
@@ -311,8 +323,6 @@ def show(output: Output, result: CalibrationResult) -> None:
     """Print a calibration for a person, the goodness of fit first."""
     from rich.text import Text
 
-    from fitcore.commands import tables
-
     found = result.goodness
     if found is not None:
         line = Text("p-value ", style="bold")
@@ -335,7 +345,7 @@ def show(output: Output, result: CalibrationResult) -> None:
             output.show(region.message)
     if result.coverage:
         output.show(_coverage_table(result))
-    output.show(tables.CAUTION if not result.regions and not result.points and not result.coverage else CAUTION)
+    output.show(CAUTION)
 
 
 def _p(value: float, error: float) -> str:

@@ -17,6 +17,9 @@ EXIT_FELL_SHORT = 1
 EXIT_UNUSABLE_INPUT = 2
 EXIT_INTERRUPTED = 130
 
+#: Where the command line keeps its arguments while a command runs.
+ARGUMENTS = "weakmix.arguments"
+
 
 def fail(message: str, code: int) -> NoReturn:
     """Print a message for a person on stderr and leave with the exit code."""
@@ -64,5 +67,7 @@ def input_error(message: str) -> Exception:
 
 
 def command_line() -> tuple[str, ...]:
-    """Return the arguments of this process as typed, without the program's own path."""
-    return ("weakmix", *sys.argv[1:])
+    """Return the arguments as typed, without the program's own path."""
+    context = click.get_current_context(silent=True)
+    arguments = None if context is None else context.meta.get(ARGUMENTS)
+    return ("weakmix", *(sys.argv[1:] if arguments is None else arguments))

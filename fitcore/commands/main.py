@@ -13,7 +13,7 @@ from typing import Any
 
 import click
 
-from fitcore.commands.errors import report_errors
+from fitcore.commands.errors import ARGUMENTS, report_errors
 
 #: Section of `weakmix --help` -> command -> its one line there.
 COMMANDS: dict[str, dict[str, str]] = {
@@ -31,11 +31,13 @@ COMMANDS: dict[str, dict[str, str]] = {
         "profile": "Scan one or two quantities: intervals, regions, each constraint as a band.",
     },
     "Study": {
+        "calibrate": "p-values, intervals and coverage by refitted pseudo-experiments.",
         "indirect": "What everything else says about a quantity, and the tension with its measurement.",
         "budget": "Which input makes which part of an uncertainty.",
         "outlook": "Expected intervals when some uncertainties shrink.",
     },
     "Share": {
+        "rerun": "Compute a run folder again and compare the numbers.",
         "demo": "Fit the invented Tidewater inputs and compare with their known truth.",
     },
 }
@@ -71,6 +73,10 @@ class LazyGroup(click.Group):
         for title, commands in COMMANDS.items():
             with formatter.section(title):
                 formatter.write_dl(list(commands.items()))
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        ctx.meta[ARGUMENTS] = tuple(args)
+        return super().parse_args(ctx, args)
 
     def invoke(self, ctx: click.Context) -> Any:
         with report_errors():

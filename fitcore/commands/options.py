@@ -145,7 +145,8 @@ def problem_options(function: Command) -> Command:
                 "settings",
                 multiple=True,
                 metavar="ID.KEY=NUMBER",
-                help="Change an entry for this run, e.g. frequency-Bd.error=0.001; repeatable.",
+                help="Change an entry for this run, in the unit of its file, e.g. frequency-Bd.error=0.001; "
+                "repeatable.",
             ),
             hypothesis_option,
             click.option(

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from fitcore.commands.errors import EXIT_FELL_SHORT, input_error
-from fitcore.commands.options import ProblemRequest, Work, output_options, problem_options, work_options
+from fitcore.commands.options import ProblemRequest, Work, output_options, problem_options, seed_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -34,7 +34,7 @@ if TYPE_CHECKING:
 )
 @click.option("--no-figures", is_flag=True, help="Draw nothing.")
 @output_options
-@work_options
+@seed_options
 @click.pass_context
 def command(
     ctx: click.Context,
@@ -61,7 +61,7 @@ def command(
 
     from fitcore.commands import run_folder, scan
     from fitcore.commands.fit import announce
-    from fitcore.commands.progress import progress_bar
+    from fitcore.commands.progress_bar import progress_bar
 
     axes = scan.parse_axes(names)
     if each and len(axes) != 2:

@@ -319,7 +319,7 @@ def _overview_grids(scan: Scan) -> list[np.ndarray]:
             every = np.concatenate([line[:, axis] for line in lines])
             margin = 0.12 if axis == 0 else 0.05
             low, high = float(every.min()) - margin, float(every.max()) + 2.0 * margin
-            low, high = min(low, float(grid[0])), max(high, float(grid[-1]))
+            low, high = min(low, float(grid[0]) - 0.05), max(high, float(grid[-1]) + 0.08)
         grids.append(np.linspace(low, high, OVERVIEW_POINTS[axis]))
     return grids
 

@@ -63,6 +63,7 @@ def _one(scan: Scan) -> style.Drawing:
         levels=_levels(scan),
         latex=scan.problem.latex_of(name),
         unit=scan.problem.unit_of(name),
+        title=scan.problem.inputs.title,
         footer=footer(scan),
     )
 
@@ -89,6 +90,8 @@ def _plane(scan: Scan) -> style.Drawing:
     caption = ""
     if scan.division is not None:
         fixing = ", ".join(scan.division.fixing)
+        if len(scan.division.fixing) > 8:
+            fixing = f"the {len(scan.division.fixing)} measurements that hardly change over the frame"
         caption = (
             "Each band: the 68.3 % region, two parameters, of one measured quantity alone, refitted with the theory "
             f"inputs it needs and with {fixing} (which fix the other directions), counted from its lowest point in "
@@ -111,13 +114,13 @@ def _plane(scan: Scan) -> style.Drawing:
 
 
 def _band(scan: Scan, part: ConstraintProfile) -> Band:
+    from fitcore.figures.outlines import refine
     from fitcore.figures.plane import Band
 
     problem, constraint = scan.problem, part.constraint
     latex = [problem.latex_of(quantity) for quantity in constraint.quantities]
     around = part.overview
-    delta = around.chi2 - part.lowest
-    delta[around.flagged] = np.inf
+    delta = np.where(around.flagged, np.inf, around.chi2 - part.lowest)
     return Band(
         constraint.name,
         r"\,{+}\,".join(latex) if all(latex) else "",
@@ -125,5 +128,5 @@ def _band(scan: Scan, part: ConstraintProfile) -> Band:
         *part.profile.grids,
         part.profile.chi2 - part.lowest,
         share=constraint.chi2,
-        overview=(*around.grids, delta),
+        overview=refine(*around.grids, delta, around.slopes),
     )

@@ -229,7 +229,7 @@ def _draw_plane(region: CalibratedRegion, latex: dict[str, str], footer: str) ->
         shading="nearest", alpha=0.35, rasterized=True, zorder=0,
     )  # fmt: skip
     side = figure.add_axes((1 - 1.12 / WIDTH, bottom / height, 0.2 / WIDTH, 1 - (bottom + top) / height))
-    bar = figure.colorbar(shades, cax=side, format="%.2f")
+    bar = figure.colorbar(shades, cax=side, format="%.3g")
     bar.outline.set_visible(False)
     bar.set_label(f"threshold needed / assumed, {_percent(region.cl[0])} %", fontsize=8)
     for c in range(len(region.cl)):

@@ -48,6 +48,7 @@ def draw(
     levels: Sequence[tuple[str, float]],
     latex: str = "",
     unit: str = "1",
+    title: str = "",
     footer: str = "",
 ) -> style.Drawing:
     """Draw profiles of one quantity.
@@ -58,15 +59,15 @@ def draw(
     curves : sequence of Curve
     levels : sequence of (str, float)
         Words such as ``"68.3 %"`` and Delta chi-square, lowest first.
-    latex, unit, footer : str
+    latex, unit, title, footer : str
 
     Returns
     -------
     Drawing
     """
-    bottom = 0.95
+    bottom = 0.82
     rail = ROW * len(curves) + 0.12
-    total = bottom + rail + 0.08 + BOX + 0.62
+    total = bottom + rail + 0.08 + BOX + 0.78
     symbol = symbol_text(latex, name)
     with style.in_style():
         figure = style.new_figure(WIDTH, total)
@@ -92,7 +93,8 @@ def draw(
         _rail(lower, curves, levels, (low, high))
         unit_text = "" if unit == "1" else f"  [{unit}]"
         lower.set_xlabel(symbol + unit_text, fontsize=11)
-        figure.text(0.2 / WIDTH, 1 - 0.33 / total, symbol, fontsize=13, fontweight="bold", va="center")
+        figure.text(0.2 / WIDTH, 1 - 0.33 / total, f"Profile of {symbol}", fontsize=13, fontweight="bold", va="center")
+        figure.text(0.2 / WIDTH, 1 - 0.57 / total, title, fontsize=7.5, color=style.FAINT_INK, va="center")
         words = ", ".join(f"{text} at {level:.4g}" for text, level in levels)
         figure.text(
             1 - 0.2 / WIDTH,

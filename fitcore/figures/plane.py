@@ -15,7 +15,7 @@ import numpy as np
 
 from fitcore.figures import style
 from fitcore.figures.margin_rail import Exit, find_exit, spread
-from fitcore.figures.outlines import contour_lines, draw_edge, height, refine
+from fitcore.figures.outlines import contour_lines, draw_edge, height
 from fitcore.figures.symbols import glyphs, symbol_text
 
 if TYPE_CHECKING:
@@ -31,6 +31,9 @@ LINE_STYLES: tuple[Any, ...] = ("-", (0, (5, 1.6)), (0, (1.2, 1.3)), (0, (5, 1.4
 STRIP = 0.95
 #: Bands wider than their partner's pair, which needs less ink, are drawn thinner.
 FAINT = 0.45
+OVERVIEW_BOTTOM = 0.78
+#: Room for names at the left and below, in inches.
+SIDE_ROOM, BELOW_ROOM = 1.4, 0.55
 
 
 @dataclass(frozen=True)
@@ -133,9 +136,13 @@ def draw(
     Drawing
     """
     with style.in_style():
-        figure = style.new_figure(WIDTH, HEIGHT)
-        width, tall = _box(combined, equal)
-        main = figure.add_axes((LEFT / WIDTH, BOTTOM / HEIGHT, width / WIDTH, tall / HEIGHT))
+        exits: list[Exit | None] = []
+        for band in bands:
+            exits.append(find_exit(*band.grid, levels[0][1], [e for e in exits if e is not None]))
+        sides = {leaving.side for leaving in exits if leaving is not None}
+        sheet = Sheet(SIDE_ROOM if "left" in sides else 0.0, BELOW_ROOM if "bottom" in sides else 0.0)
+        box = _box(combined, equal)
+        main = sheet.axes(box.left, box.bottom, box.width, box.height)
         _frame(main, combined.x, combined.y)
         main.set_xlabel(axes_of[0].label, fontsize=12)
         main.set_ylabel(axes_of[1].label, fontsize=12)
@@ -146,22 +153,56 @@ def draw(
             contained = any(other.name.startswith(f"{band.name}+") for other in bands)
             _band(main, band, dashes, levels, FAINT if contained else 1.0)
         _together(main, combined, levels, best, alone=not bands)
-        exits: list[Exit | None] = []
-        for band in bands:
-            exits.append(find_exit(*band.grid, levels[0][1], [e for e in exits if e is not None]))
-        used = _rails(figure, main, (width, tall), bands, styles, exits, chi2, _overview_size(combined.overview, equal)[1])
-        _summary(figure, axes_of, combined, bands, levels, chi2, used, (width, tall))
-        _overview(figure, combined, bands, levels, guides, equal)
-        _texts(figure, axes_of, title, caption, footer)
-    return style.Drawing(figure, *_data(axes_of, combined, bands))
+        _rails(sheet.page, main, box, bands, styles, exits, chi2, _overview_size(combined.overview, equal)[1])
+        _summary(sheet.page, bands, levels, chi2)
+        _overview(sheet, combined, bands, levels, guides, equal)
+        _texts(sheet, axes_of, title, caption, footer)
+    return style.Drawing(sheet.figure, *_data(axes_of, combined, bands))
 
 
-def _box(combined: Band, equal: bool) -> tuple[float, float]:
-    if not equal:
-        return BOX_WIDTH, BOX_HEIGHT
-    shape = float(np.ptp(combined.x) / np.ptp(combined.y))
-    width = min(BOX_WIDTH, BOX_HEIGHT * shape)
-    return width, width / shape
+class Sheet:
+    """The page in inches. Room that names need at the left or below is added outside: nothing else moves.
+
+    Parameters
+    ----------
+    left, below : float
+        Extra room.
+    """
+
+    def __init__(self, left: float, below: float) -> None:
+        self.left, self.below = left, below
+        self.figure: Figure = style.new_figure(WIDTH + left, HEIGHT + below)
+        self.page = self.axes(-left, -below, WIDTH + left, HEIGHT + below, label="page", zorder=-1)
+        self.page.set_axis_off()
+        self.page.set_xlim(-left, WIDTH)
+        self.page.set_ylim(-below, HEIGHT)
+
+    def axes(self, x: float, y: float, width: float, height: float, **more: Any) -> Axes:
+        """Axes at a place of the page."""
+        wide, tall = WIDTH + self.left, HEIGHT + self.below
+        return self.figure.add_axes(
+            ((x + self.left) / wide, (y + self.below) / tall, width / wide, height / tall), **more
+        )
+
+
+@dataclass(frozen=True)
+class Box:
+    """Where the plane lies on the page, in inches."""
+
+    left: float
+    bottom: float
+    width: float
+    height: float
+
+
+def _box(combined: Band, equal: bool) -> Box:
+    width, tall = BOX_WIDTH, BOX_HEIGHT
+    if equal:
+        shape = float(np.ptp(combined.x) / np.ptp(combined.y))
+        width = min(width, tall * shape)
+        tall = width / shape
+    # what the shape leaves free goes to the bottom, away from the rail at the top
+    return Box(LEFT, BOTTOM + BOX_HEIGHT - tall, width, tall)
 
 
 def _frame(axes: Axes, x: np.ndarray, y: np.ndarray) -> None:
@@ -236,59 +277,51 @@ def _together(
 
 
 def _rails(
-    figure: Figure,
+    page: Axes,
     main: Axes,
-    box: tuple[float, float],
+    box: Box,
     bands: Sequence[Band],
     styles: Sequence[Any],
     exits: Sequence[Exit | None],
     chi2: float | None,
     overview: float,
-) -> dict[str, int]:
-    """Names in the margins; returns how many stand at each side."""
-    width, tall = box
-    page = _page(figure)
-    used: dict[str, int] = {}
+) -> None:
+    """Names in the margins."""
     for side in ("right", "top", "left", "bottom"):
-        chosen = [k for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side]
-        used[side] = len(chosen)
+        chosen = [(k, leaving.at) for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side]
         if not chosen:
             continue
         upright = side in ("right", "left")
         limits = main.get_ylim() if upright else main.get_xlim()
-        length, origin = (tall, BOTTOM) if upright else (width, LEFT)
-        at = [origin + (exits[k].at - limits[0]) / (limits[1] - limits[0]) * length for k in chosen]  # type: ignore[union-attr]
+        length, origin = (box.height, box.bottom) if upright else (box.width, box.left)
+        at = [origin + (where - limits[0]) / (limits[1] - limits[0]) * length for _, where in chosen]
         room = [0.42 if upright else 1.45] * len(chosen)
-        reach = (0.0, 0.1) if upright else (0.5, 0.6)
+        reach = (0.0, 0.1) if upright else (0.5, 0.15)
         low = origin - reach[0]
         if side == "right" and overview:
-            low = max(low, 0.78 + overview + 0.12)
+            low = max(low, OVERVIEW_BOTTOM + overview + 0.12)
         placed = spread(at, room, low, origin + length + reach[1])
-        rail = {
-            "right": LEFT + width + RAIL_GAP,
-            "top": BOTTOM + tall + 0.24,
-            "left": LEFT - 0.62,
-            "bottom": BOTTOM - 0.52,
+        edge, rail = {
+            "right": (box.left + box.width, box.left + box.width + RAIL_GAP),
+            "top": (box.bottom + box.height, box.bottom + box.height + 0.24),
+            "left": (box.left, box.left - 0.82),
+            "bottom": (box.bottom, box.bottom - 0.5),
         }[side]
-        edge = {"right": LEFT + width, "top": BOTTOM + tall, "left": LEFT, "bottom": BOTTOM}[side]
         ends = (min(placed) - 0.14, max(placed) + 0.14)
         line = ([rail, rail], ends) if upright else (ends, [rail, rail])
         page.plot(*line, color=style.RULE, lw=2.2, solid_capstyle="round", zorder=1)
-        outwards = 1.0 if side in ("right", "top") else -1.0
-        for k, start, end in zip(chosen, at, placed, strict=True):
+        out = 1.0 if side in ("right", "top") else -1.0
+        for (k, _), start, end in zip(chosen, at, placed, strict=True):
             colour = bands[k].family.colour
-            path = [(edge, start), (edge + 0.05 * outwards, start), (rail - 0.05 * outwards, end), (rail + 0.06 * outwards, end)]
+            path = [(edge, start), (edge + 0.05 * out, start), (rail - 0.05 * out, end), (rail + 0.06 * out, end)]
             points = np.array(path if upright else [point[::-1] for point in path])
-            page.plot(*points.T, color=colour, lw=0.9, solid_joinstyle="round", zorder=2)
-            tick = points[-2:]
-            page.plot(*tick.T, color=colour, lw=2.6, solid_capstyle="butt", zorder=3)
+            page.plot(*points.T, color=colour, lw=0.9, solid_joinstyle="round", zorder=2, gid=f"leader:{bands[k].name}")
+            page.plot(*points[-2:].T, color=colour, lw=2.6, solid_capstyle="butt", zorder=3)
             _name(page, bands[k], styles[k], side, rail, end, chi2)
-    lost = [bands[k] for k, leaving in enumerate(exits) if leaving is None]
-    used["inside"] = len(lost)
-    for number, band in enumerate(lost):  # a closed band never leaves: it is named below the rail
-        k = list(bands).index(band)
-        _name(page, band, styles[k], "right", LEFT + width + RAIL_GAP, BOTTOM - 0.3 - 0.42 * number, chi2)
-    return used
+    inside = [k for k, leaving in enumerate(exits) if leaving is None]
+    for number, k in enumerate(inside):  # a closed band never leaves the frame: named below the others, without leader
+        place = (box.left + box.width + RAIL_GAP, OVERVIEW_BOTTOM + overview + 0.3 + 0.42 * number)
+        _name(page, bands[k], styles[k], "right", *place, chi2)
 
 
 def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float, chi2: float | None) -> None:
@@ -301,7 +334,7 @@ def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float
         x, y = (rail + 0.14, at) if side == "right" else (rail - 0.14, at)
         sign, align = (1.0, "left") if side == "right" else (-1.0, "right")
         page.text(x, y + 0.045, symbol, fontsize=size, ha=align, va="center")
-        strip_x, strip_y = (x if sign > 0 else x - STRIP), y - 0.135
+        strip_x, strip_y = (x if sign > 0 else x - STRIP - 0.24), y - 0.135
     else:
         up = side == "top"
         x, y = at, rail + (0.24 if up else -0.24)
@@ -319,19 +352,11 @@ def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float
 
 
 def _summary(
-    figure: Figure,
-    axes_of: tuple[PlaneAxis, PlaneAxis],
-    combined: Band,
-    bands: Sequence[Band],
-    levels: Sequence[tuple[str, float]],
-    chi2: float | None,
-    used: dict[str, int],
-    box: tuple[float, float],
+    page: Axes, bands: Sequence[Band], levels: Sequence[tuple[str, float]], chi2: float | None
 ) -> None:
     """What fills and edges mean, and all together."""
     from matplotlib.patches import Rectangle
 
-    page = _page(figure)
     x, y = 6.98, HEIGHT - 0.3
     page.add_patch(Rectangle((x, y - 0.075), 0.3, 0.15, facecolor=style.NAVY, lw=0))
     page.text(x + 0.4, y, f"everything: {levels[0][0]} region, two parameters", fontsize=7, va="center")
@@ -356,7 +381,7 @@ def _overview_size(overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None, e
 
 
 def _overview(
-    figure: Figure,
+    sheet: Sheet,
     combined: Band,
     bands: Sequence[Band],
     levels: Sequence[tuple[str, float]],
@@ -370,13 +395,13 @@ def _overview(
         return
     x, y, _ = overview
     width, tall = _overview_size(overview, equal)
-    small = figure.add_axes(((WIDTH - 0.22 - width) / WIDTH, 0.78 / HEIGHT, width / WIDTH, tall / HEIGHT))
+    small = sheet.axes(WIDTH - 0.22 - width, OVERVIEW_BOTTOM, width, tall)
     _frame(small, x, y)
     small.tick_params(length=2, labelsize=5.5, pad=1.5)
     small.locator_params(nbins=4)
     for band in bands:
         if band.overview is not None:
-            _fill(small, refine(*band.overview), levels[0][1], band.family.colour, alpha=0.3, zorder=2.0)
+            _fill(small, band.overview, levels[0][1], band.family.colour, alpha=0.3, zorder=2.0)
     for guide in guides:
         small.plot(*guide.T, color=style.INK, lw=0.7, zorder=4)
     _fill(small, overview, levels[-1][1], style.NAVY, zorder=5)
@@ -388,26 +413,15 @@ def _overview(
     )
 
 
-def _texts(figure: Figure, axes_of: tuple[PlaneAxis, PlaneAxis], title: str, caption: str, footer: str) -> None:
+def _texts(sheet: Sheet, axes_of: tuple[PlaneAxis, PlaneAxis], title: str, caption: str, footer: str) -> None:
     head = "Constraints on " + " and ".join(symbol_text(axis.latex, axis.name) for axis in axes_of)
-    figure.text(0.2 / WIDTH, 1 - 0.34 / HEIGHT, head, fontsize=14, fontweight="bold", va="center")
-    figure.text(0.2 / WIDTH, 1 - 0.61 / HEIGHT, title, fontsize=8, color=style.FAINT_INK, va="center")
+    left, bottom, page = 0.2 - sheet.left, -sheet.below, sheet.page
+    page.text(left, HEIGHT - 0.34, head, fontsize=14, fontweight="bold", va="center")
+    page.text(left, HEIGHT - 0.61, title, fontsize=8, color=style.FAINT_INK, va="center")
     if caption:
         text = textwrap.fill(caption, 196)
-        figure.text(0.2 / WIDTH, 0.3 / HEIGHT, text, fontsize=5.8, color=style.FAINT_INK, va="bottom", linespacing=1.35)
-    style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.12 / HEIGHT)
-
-
-def _page(figure: Figure) -> Axes:
-    """The whole page as axes in inches; made once."""
-    for axes in figure.axes:
-        if axes.get_label() == "page":
-            return axes
-    page = figure.add_axes((0.0, 0.0, 1.0, 1.0), label="page", zorder=-1)
-    page.set_axis_off()
-    page.set_xlim(0.0, WIDTH)
-    page.set_ylim(0.0, HEIGHT)
-    return page
+        page.text(left, bottom + 0.3, text, fontsize=5.8, color=style.FAINT_INK, va="bottom", linespacing=1.35)
+    page.text(left, bottom + 0.12, footer, fontsize=6.5, color=style.FAINT_INK, va="bottom")
 
 
 def _data(

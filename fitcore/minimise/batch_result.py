@@ -18,7 +18,7 @@ class Status(IntEnum):
     OUT_OF_REACH = 4
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class BatchResult:
     """Minima found by `minimise_batch`, one per row.
 
@@ -59,10 +59,6 @@ class BatchResult:
     singular: np.ndarray
     iterations: np.ndarray
     n_linearisations: np.ndarray
-
-    def copy(self) -> BatchResult:
-        """The same with arrays of its own."""
-        return BatchResult(*(getattr(self, field.name).copy() for field in fields(self)))
 
     def put(self, rows: np.ndarray, other: BatchResult) -> None:
         """Overwrite rows with those of `other` (effort is added up)."""

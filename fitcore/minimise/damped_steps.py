@@ -178,9 +178,9 @@ class DampedRun:
             rows.violation, rows.constraint_gradient = violation, gradient
         else:
             take = np.flatnonzero(good)
+            # the arrays of the last linearisation belong to the problem
+            rows.chi2, rows.values = rows.chi2.copy(), rows.values.copy()
             rows.theta[:, take], rows.chi2[take] = rows.trial[:, take], chi2[take]
-            if not rows.values.flags.writeable or rows.values is normal.values:
-                rows.values = rows.values.copy()
             rows.values[:, take] = normal.values[:, take]
             rows.half_gradient[:, take] = 0.5 * linear.gradient.T[:, take]
             rows.violation[:, take] = violation[:, take]
@@ -265,9 +265,15 @@ class DampedRun:
         if done.any():
             self._leave(rows, step, predicted, np.flatnonzero(done), converged | lost, stalled, met)
         rows.active, rows.predicted = step.active, predicted
-        rows.trial = np.clip(rows.theta + step.step, self.low[:, rows.index], self.high[:, rows.index])
+        rows.trial = self._inside(rows.theta + step.step, step.active, rows.index)
         if done.any():
             rows.keep(np.flatnonzero(~done))
+
+    def _inside(self, theta: np.ndarray, active: np.ndarray, index: np.ndarray) -> np.ndarray:
+        """Points (n, A) in their boxes; active components exactly at the bound, rounding apart."""
+        low, high = self.low[:, index], self.high[:, index]
+        theta = np.where(active > 0, high, np.where(active < 0, low, theta))
+        return np.asarray(np.clip(theta, low, high))
 
     def _again(
         self,
@@ -332,8 +338,8 @@ class DampedRun:
             np.where(np.isfinite(rows.expected[pick]), rows.expected[pick], predicted[pick]), 0.0
         )
         final = np.where(minimum[pick], step.step[:, pick], 0.0)
-        inside = np.clip(rows.theta[:, pick] + final, self.low[:, index], self.high[:, index])
-        self.last_theta[index] = inside.T
+        active = np.where(minimum[pick], step.active[:, pick], 0)
+        self.last_theta[index] = self._inside(rows.theta[:, pick] + final, active, index).T
         moved = np.where(minimum[pick], step.curvature_times_step[:, pick], 0.0)
         result.gradient[index] = 2.0 * (rows.half_gradient[:, pick] + moved).T
         result.slopes[index] = -2.0 * step.multipliers[:, pick].T

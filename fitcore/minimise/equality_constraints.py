@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class EqualityConstraints:
     """Values that real quantities must take, row by row.
 

@@ -250,8 +250,9 @@ def profile_intervals(
     Returns
     -------
     IntervalTable
-        The interval that contains the minimum; separate ones around other minima need `profile`. An end is open where a
-        bound, half a period or the reach of the quantity stopped it. Ends hold to 1e-3 in chi-square.
+        The interval that contains the minimum; separate ones around other minima need `profile`. An end is open
+        where a bound, half a period or the reach of the quantity stopped it, and infinite where nothing did. Ends
+        hold to 1e-3 in chi-square.
     """
     table = IntervalTable()
     names = tuple(dict.fromkeys(names))
@@ -293,7 +294,8 @@ def profile_intervals(
         guess = np.where((guess - stop) * side > 0.0, stop, guess)
         starts, _ = held.predict(theta, guess[:, None], which=which[:, None])
         # a quantity without natural limits: far beyond any use
-        stop = np.where(np.isinf(stop), centre[which] + side * 1e6 * deviation[which], stop)
+        endless = np.isinf(stop)
+        stop = np.where(endless, centre[which] + side * 1e6 * deviation[which], stop)
         found = find_crossings(
             held,
             which,
@@ -307,7 +309,9 @@ def profile_intervals(
             stop=stop,
         )
         place = (which, (side > 0.0).astype(int), level)
-        ends[place], opens[place], good[place] = found.x, found.open, found.good
+        never = endless & found.open & (found.x == stop)
+        ends[place] = np.where(never, side * np.inf, found.x)
+        opens[place], good[place] = found.open, found.good
         if found.lowest_chi2 < minimum - LOWER_BY:
             lower = minimise_batch(problem, found.lowest[None], tolerance=1e-10)
             table.better_minimum = lower.theta[0]

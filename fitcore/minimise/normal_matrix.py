@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class SparseNormal:
     """Lower triangles of the normal matrices J^T J of a batch of points, all with one sparsity pattern.
 
@@ -41,7 +41,7 @@ class SparseNormal:
         return full
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Linearisation:
     """Chi-square, its gradient and its normal matrix at a batch of points.
 

@@ -63,7 +63,7 @@ def threshold(cl: float, dof: int) -> float:
     return float(2.0 * gammaincinv(0.5 * dof, cl))
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Profile:
     """Profile chi-square on a grid.
 
@@ -76,7 +76,7 @@ class Profile:
     chi2 : ndarray, shape (n1,) or (n1, n2)
         Minimised chi-square; +inf where no possible point has these values.
     parameters : ndarray, shape (n1, [n2,] n)
-        The minimising parameters.
+        The minimising parameters; nan where `chi2` is infinite.
     minimum : float
         Lowest chi-square known, the grid included.
     minimum_parameters : ndarray, shape (n,)
@@ -212,6 +212,7 @@ def profile(
     if minimum < start_chi2 - LOWER_BY:
         better = minimum_parameters
     shape = tuple(grid.size for grid in grids)
+    points.theta[~np.isfinite(points.chi2)] = np.nan
     return Profile(
         names=names,
         grids=grids,

@@ -205,16 +205,20 @@ def _constrain(
 
 
 def _next_active(problem: QuadraticBatch, solved: QuadraticStep, held: np.ndarray) -> np.ndarray:
-    """Pin what left the box; release what the model pulls back inside."""
+    """Pin what left the box; release what the model pulls back inside. Rounding alone does neither."""
     active = solved.active.copy()
     free = (active == 0) & ~held
-    active[free & (solved.step > problem.high)] = 1
-    active[free & (solved.step < problem.low)] = -1
+    width = problem.high - problem.low
+    slack = np.where(np.isfinite(width), 1e-12 * width, 0.0)
+    active[free & (solved.step > problem.high + slack)] = 1
+    active[free & (solved.step < problem.low - slack)] = -1
     if solved.active.any():
         pull = problem.half_gradient + solved.curvature_times_step + problem.damping * solved.step
         if problem.constraint_gradient is not None:
             pull = pull + (problem.constraint_gradient * solved.multipliers[:, None, :]).sum(axis=0)
         noise = 1e-12 * (np.abs(problem.half_gradient) + np.abs(solved.curvature_times_step))
+        # nor is a gain below 1e-20 in chi-square worth a release
+        noise = np.maximum(noise, 1e-10 * np.sqrt(np.abs(problem.pattern.diagonal(problem.values))))
         active[(solved.active > 0) & (pull > noise)] = 0
         active[(solved.active < 0) & (pull < -noise)] = 0
     return active

@@ -16,11 +16,12 @@ if TYPE_CHECKING:
 
 POLISH_ROUNDS = 8
 VERTEX_TOLERANCE = 3e-3
+SAME_VALLEY = 2e-3
 SUBGRID = 37
 DEEPEST = 3
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Region:
     """Outline of one region (or of a hole in one).
 
@@ -73,7 +74,7 @@ def grid_intervals(profile: Profile, level: float) -> list[tuple[float, float, b
             share = np.where(np.isfinite(root_b), (np.sqrt(level) - root_a) / (root_b - root_a), 0.5)
         share = np.clip(share, 0.02, 0.98)
         usable = np.isfinite(delta[b])
-        guess_theta = theta[a] + np.where(usable, share, 0.0)[:, None] * (theta[b] - theta[a])
+        guess_theta = np.where(usable[:, None], theta[a] + share[:, None] * (theta[b] - theta[a]), theta[a])
         crossing = find_crossings(
             held,
             np.zeros(rows.size, dtype=int),
@@ -162,15 +163,33 @@ def _polish(profile: Profile, vertices: np.ndarray, level: float) -> tuple[np.nd
 
 
 def _from_both_ends(held: HeldQuantities, profile: Profile, points: np.ndarray) -> HeldPoints:
-    """Profile at vertices, which lie on grid lines, from the solutions at both ends of their grid line segment."""
-    low_end, high_end = [], []
+    """Profile at vertices, which lie on grid lines, started from the solutions at both ends of the segment.
+
+    Where the ends share a valley the start lies between them; where the slopes say they do not, each end is tried.
+    """
+    low_end, high_end, share = [], [], np.zeros(len(points))
     for k, grid in enumerate(profile.grids):
-        low_end.append(np.clip(np.searchsorted(grid, points[:, k], side="right") - 1, 0, grid.size - 1))
-        high_end.append(np.clip(np.searchsorted(grid, points[:, k], side="left"), 0, grid.size - 1))
-    found = held.solve(points, profile.parameters[tuple(low_end)], tolerance=1e-5)
-    found.improve(
-        np.arange(len(points)), held.solve(points, profile.parameters[tuple(high_end)], tolerance=1e-5)
-    )
+        low = np.clip(np.searchsorted(grid, points[:, k], side="right") - 1, 0, grid.size - 1)
+        high = np.clip(np.searchsorted(grid, points[:, k], side="left"), 0, grid.size - 1)
+        between = high > low
+        share[between] = ((points[:, k] - grid[low]) / np.where(between, grid[high] - grid[low], 1.0))[
+            between
+        ]
+        low_end.append(low)
+        high_end.append(high)
+    a, b = tuple(low_end), tuple(high_end)
+    good = profile.converged[a] & profile.converged[b]
+    run = np.stack([grid[h] - grid[m] for grid, m, h in zip(profile.grids, a, b, strict=True)], axis=1)
+    rise = 0.5 * ((profile.slopes[a] + profile.slopes[b]) * run).sum(axis=1)
+    bend = np.abs(((profile.slopes[b] - profile.slopes[a]) * run).sum(axis=1))
+    with np.errstate(invalid="ignore"):
+        apart = ~(np.abs(profile.chi2[b] - profile.chi2[a] - rise) < SAME_VALLEY + 0.01 * bend) | ~good
+    share = np.where(apart, 0.0, share)[:, None]
+    first, last = profile.parameters[a], profile.parameters[b]
+    found = held.solve(points, np.where(share > 0.0, first + share * (last - first), first), tolerance=1e-5)
+    again = np.flatnonzero(apart)
+    if again.size:
+        found.improve(again, held.solve(points[again], last[again], tolerance=1e-5))
     return found
 
 

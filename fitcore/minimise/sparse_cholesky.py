@@ -20,7 +20,7 @@ FROZEN = 1e30
 """Relative weight put on a diagonal element to hold a component still."""
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Pattern:
     """Symbolic factorisation of a symmetric sparsity pattern; make it with `analyse`.
 
@@ -101,7 +101,7 @@ class Pattern:
         return Factor(self, pivots, below, singular)
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Factor:
     """Numbers of a batch of L D L^T factorisations (`Pattern.factor`).
 

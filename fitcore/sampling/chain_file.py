@@ -375,8 +375,16 @@ class ChainFile:
                 return 0
             return int(file[f"derived/{name}"].attrs["committed_steps"])
 
+    def derived_label(self, name: str) -> tuple[str, str]:
+        """Unit and symbol (LaTeX) of a stored derived quantity."""
+        with self._opened("read the derived quantities") as file:
+            if name not in file["derived"]:
+                raise UnknownNameError(name, "derived quantity of this chain", tuple(file["derived"]))
+            attributes = file[f"derived/{name}"].attrs
+            return str(attributes["units"]), str(attributes["latex"])
+
     def write_derived(
-        self, name: str, block: int, values: np.ndarray, *, unit: str = "1", title: str = ""
+        self, name: str, block: int, values: np.ndarray, *, unit: str = "1", title: str = "", latex: str = ""
     ) -> None:
         """Store a derived quantity for committed block number ``block`` (blocks in order)."""
         end = int(self._block_ends[block])
@@ -391,6 +399,7 @@ class ChainFile:
                     name, (0, walkers), dtype, maxshape=(None, walkers), chunks=(self.block_steps, walkers)
                 )
                 describe(data, unit, title or name)
+                data.attrs["latex"] = latex
                 data.attrs["committed_steps"] = np.int64(0)
                 sums = self._file["bookkeeping/derived"].create_dataset(
                     name, (0,), np.uint32, maxshape=(None,), chunks=(1024,)

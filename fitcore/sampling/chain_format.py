@@ -218,7 +218,7 @@ def block_checksum(start: int, *arrays: np.ndarray) -> int:
     """CRC-32 of a block: its first step's number, then the arrays' bytes."""
     checksum = zlib.crc32(int(start).to_bytes(8, "little"))
     for array in arrays:
-        checksum = zlib.crc32(memoryview(np.ascontiguousarray(array)).cast("B"), checksum)
+        checksum = zlib.crc32(np.ascontiguousarray(array).data, checksum)
     return checksum
 
 

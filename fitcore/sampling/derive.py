@@ -57,7 +57,12 @@ def derive(
                 for name in missing:
                     grid = np.broadcast_to(values[name], steps * walkers).reshape(steps, walkers)
                     chain.write_derived(
-                        name, number, grid, unit=problem.unit_of(name), title=problem.title_of(name)
+                        name,
+                        number,
+                        grid,
+                        unit=problem.unit_of(name),
+                        title=problem.title_of(name),
+                        latex=problem.latex_of(name),
                     )
                     computed[name] += steps
             if progress is not None:

@@ -175,7 +175,9 @@ def _netcdf(chain: Any, path: Path, thin: int, start: int) -> None:
         variables = {name: _variable(posterior, name, np.float64, units.get(name, "")) for name in names}
         first = next(iter(_parts(chain, thin, start, derived)))[4]
         derived = tuple(name for name in derived if not np.iscomplexobj(first[name]))
-        variables |= {name: _variable(posterior, name, np.float64, "") for name in derived}
+        variables |= {
+            name: _variable(posterior, name, np.float64, chain.derived_label(name)[0]) for name in derived
+        }
         log_posterior = _variable(stats, "lp", np.float64, "1")
         step = _variable(stats, "step", np.int64, "1")
         done = 0

@@ -32,7 +32,6 @@ class MemoryChain(Backend):  # type: ignore[misc]
         self.header = header
         self.block_steps = block_steps
         self._accepted: list[np.ndarray] = []
-        self._derived: dict[str, np.ndarray] = {}
         self._proposal: dict[str, np.ndarray] = {}
         self.reset(len(header.ensembles), len(header.parameter_names))
 
@@ -53,8 +52,12 @@ class MemoryChain(Backend):  # type: ignore[misc]
 
     @property
     def derived_names(self) -> tuple[str, ...]:
-        """Names of the stored derived quantities."""
-        return tuple(sorted(self._derived))
+        """Nothing: derived quantities are stored in chain files only."""
+        return ()
+
+    def derived_label(self, name: str) -> tuple[str, str]:
+        """Unit and symbol (LaTeX) of a derived quantity."""
+        raise UnknownNameError(name, "derived quantity of this chain", self.derived_names)
 
     def grow(self, steps: int, blobs: object) -> None:
         """Make room, doubling so that many small requests stay cheap."""
@@ -85,8 +88,7 @@ class MemoryChain(Backend):  # type: ignore[misc]
     ) -> Iterator[Block]:
         """The steps in blocks, as a chain file hands them out."""
         for name in derived:
-            if name not in self._derived:
-                raise UnknownNameError(name, "derived quantity of this chain", self.derived_names)
+            raise UnknownNameError(name, "derived quantity of this chain", self.derived_names)
         for begin in range(start, self.steps, self.block_steps):
             rows = slice(begin, min(begin + self.block_steps, self.steps))
             yield Block(
@@ -94,5 +96,5 @@ class MemoryChain(Backend):  # type: ignore[misc]
                 self.chain[rows],
                 self.log_prob[rows],
                 np.array(self._accepted[rows]),
-                {name: self._derived[name][rows] for name in derived},
+                {},
             )

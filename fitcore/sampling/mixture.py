@@ -203,10 +203,8 @@ def regularised(covariance: np.ndarray, spread: np.ndarray) -> np.ndarray:
     """
     covariance = np.array(covariance, dtype=np.float64)
     variance = np.diagonal(covariance)
-    bad = ~(np.isfinite(covariance).all(axis=1) & (variance > 0))
-    if bad.all() or not np.isfinite(covariance[~bad][:, ~bad]).all():
-        bad = ~(np.isfinite(variance) & (variance > 0))
-        covariance = np.where(np.isfinite(covariance), covariance, 0.0)
+    bad = ~(np.isfinite(variance) & (variance > 0))
+    covariance = np.where(np.isfinite(covariance), covariance, 0.0)
     covariance[bad, :] = 0.0
     covariance[:, bad] = 0.0
     covariance[bad, bad] = np.asarray(spread, dtype=np.float64)[bad] ** 2

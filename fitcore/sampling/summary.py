@@ -142,6 +142,7 @@ def summarise(
     thinned = ThinnedChain.read(chain, start=start, derived=derived)
     limits = stored_bounds(chain) | (bounds or {})
     units = dict(zip(parameters, chain.header.parameter_units, strict=False))
+    units |= {name: chain.derived_label(name)[0] for name in derived}
     rows = []
     for name in wanted:
         if name in parameters:

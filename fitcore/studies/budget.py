@@ -4,14 +4,14 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
 from fitcore.minimise.minima import find_minima
 from fitcore.minimise.uncertainty import curvature_at
-from observables.errors import ConvergenceError
+from observables.errors import ConvergenceError, InputError
 
 __all__ = ["BudgetResult", "BudgetRow", "budget"]
 
@@ -51,6 +51,10 @@ class BudgetResult:
         Quantity -> rows, largest shift first. Groups may share entries; entries add up in quadrature to the whole
         uncertainty, groups do so only where they are disjoint.
     units : dict
+    families : dict
+        Entry id -> (groups, kind), for figures and tables.
+    flat : tuple of str
+        Entries that are flat ranges: they have no standard deviation and no place in a budget.
     """
 
     quantities: tuple[str, ...]
@@ -59,6 +63,8 @@ class BudgetResult:
     entries: dict[str, tuple[BudgetRow, ...]]
     groups: dict[str, tuple[BudgetRow, ...]]
     units: dict[str, str]
+    families: dict[str, tuple[tuple[str, ...], str]] = field(default_factory=dict)
+    flat: tuple[str, ...] = ()
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data."""
@@ -67,6 +73,7 @@ class BudgetResult:
             return [{"name": r.name, "shift": r.shift, "removal": r.removal} for r in items]
 
         return {
+            "flat": list(self.flat),
             "quantities": {
                 name: {
                     "value": self.values[name],
@@ -99,6 +106,8 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
     ------
     ConvergenceError
         The fit, or the refit of a shifted entry, did not converge.
+    InputError
+        A quantity that the inputs do not determine.
 
     Notes
     -----
@@ -123,8 +132,15 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
         lost = [problem.entries[i % m].id for i in np.flatnonzero(~refits.converged)]
         raise ConvergenceError(f"refits with shifted {', '.join(dict.fromkeys(lost))} did not converge", refits)
 
-    covariance = curvature_at(problem, theta).covariance
+    curvature = curvature_at(problem, theta)
+    covariance = curvature.covariance
     values, gradient = problem.linearise_quantities(theta, wanted)
+    scales = np.array([p.scale for p in problem.parameters])
+    # a flat range leaves its direction open; it is reported as flat instead
+    loose = curvature.unconstrained & ~np.array([p.is_range for p in problem.parameters])
+    for name, slope in zip(wanted, gradient, strict=True):
+        if np.any(np.abs(slope * scales)[loose] > 1e-9 * np.abs(slope * scales).max()):
+            raise InputError(f"{name}: the inputs do not determine it, so that its uncertainty has no parts")
     moved, _ = problem.linearise_quantities(refits.theta, wanted)
     measured_names = tuple(e.quantity for e in problem.entries)
     _, directions = problem.linearise_quantities(theta, measured_names)
@@ -160,6 +176,8 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
         entries,
         grouped,
         {n: problem.unit_of(n) for n in wanted},
+        {e.id: (tuple(e.groups), e.kind) for e in problem.entries},
+        tuple(e.id for e in problem.inputs.entries if e.id not in {kept.id for kept in problem.entries}),
     )
 
 

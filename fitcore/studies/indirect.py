@@ -12,7 +12,10 @@ import numpy as np
 from fitcore.minimise.minima import distinct_minima, find_minima, start_points
 from observables.errors import ConvergenceError, InputError, UnknownNameError
 
-__all__ = ["IndirectResult", "IndirectRow", "indirect"]
+__all__ = ["IndirectResult", "IndirectRow", "indirect", "measured_quantities"]
+
+#: Delta chi2 of the 68.27 % and 95.0 % intervals of one quantity.
+LEVELS = (1.0, 3.841458820694124)
 
 
 @dataclass(frozen=True)
@@ -25,7 +28,7 @@ class IndirectRow:
     value : float or None
         Implied by everything else; None when nothing else determines it.
     interval_68, interval_95 : (float, float) or None
-        Delta chi2 = 1.000 and 3.841, profiled.
+        Delta chi2 = 1.000 and 3.841, profiled; infinite where nothing bounds the quantity.
     direct, direct_error : float, (float, float), or None
         Own measurement (combined, where there are several) with its (plus, minus) error.
     tension : float or None
@@ -34,6 +37,9 @@ class IndirectRow:
     left_out : tuple of str
         Ids that were left out: its own entries and those that overlap with them.
     flags : tuple of str
+        ``undetermined`` (nothing else determines it), ``direct-is-a-range`` (its entry is a flat range: no tension),
+        ``overlap-left-out``, ``several-minima`` (another one within Delta chi2 3.84), ``open-interval``,
+        ``interval-not-found``, ``not-converged``.
     """
 
     quantity: str
@@ -142,14 +148,20 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
     from fitcore.minimise.batch_solver import minimise_batch
     from fitcore.minimise.profile import profile_intervals
 
-    own = [entry for entry in problem.entries if entry.quantity == name]
+    # with flat theory errors an entry may be a range of its parameter and no term: it is left out like the others
+    every = problem.inputs.entries
+    own = [entry for entry in every if entry.quantity == name]
     ids = {entry.id for entry in own}
-    overlapping = {e.id for e in problem.entries if e.id not in ids and (ids & set(e.overlaps))}
-    overlapping |= {other for entry in own for other in entry.overlaps if other in {e.id for e in problem.entries}}
+    overlapping = {e.id for e in every if e.id not in ids and (ids & set(e.overlaps))}
+    overlapping |= {other for entry in own for other in entry.overlaps if other in {e.id for e in every}} - ids
     left_out = tuple(sorted(ids | overlapping))
     unit = problem.unit_of(name)
-    direct, direct_error, chi2_own = _direct(problem, name) if own else (None, None, 0.0)
     flags: list[str] = []
+    direct, direct_error, chi2_own = None, None, 0.0
+    if own and ids <= {entry.id for entry in problem.entries}:
+        direct, direct_error, chi2_own = _direct(problem, name)
+    elif own:
+        flags.append("direct-is-a-range")
     try:
         rest = problem.without(*left_out) if left_out else problem
         # A free direction would let the quantity run to anything: then nothing else determines it.
@@ -158,7 +170,12 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
         determined = False
     if not determined:
         return IndirectRow(
-            name, unit, direct=direct, direct_error=direct_error, left_out=left_out, flags=("undetermined",)
+            name,
+            unit,
+            direct=direct,
+            direct_error=direct_error,
+            left_out=left_out,
+            flags=(*flags, "undetermined"),
         )
     columns = [problem.parameter_names.index(n) for n in rest.parameter_names if n in problem.parameter_names]
     starting = start_points(rest, starts, rng=rng)
@@ -174,16 +191,28 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
         flags.append("not-converged")
     if len(minima) > 1 and minima[1].chi2 < best.chi2 + 3.84:
         flags.append("several-minima")
-    value = float(rest.values(best.theta, [name])[name])
-    pair = profile_intervals(rest, best.theta, [name], delta_chi2=(1.0, 3.841458820694124))[name]
+    theta, chi2_rest = best.theta, best.chi2
+    table = profile_intervals(rest, theta, [name], delta_chi2=LEVELS)
+    for _ in range(2):
+        if table.better_minimum is None:
+            break
+        # the search for the interval fell into a lower minimum: count from there
+        theta, chi2_rest = table.better_minimum, float(rest.chi2(table.better_minimum))
+        table = profile_intervals(rest, theta, [name], delta_chi2=LEVELS)
+    value = float(rest.values(theta, [name])[name])
+    pair = table[name]
     if any(pair[0][2:]):
         flags.append("open-interval")
+    if table.flagged:
+        flags.append("interval-not-found")
     tension = None
     if direct is not None:
-        excess = chi2_all - best.chi2 - chi2_own
+        excess = chi2_all - chi2_rest - chi2_own
         if overlapping:
             flags.append("overlap-left-out")
-            excess = _excess_without_overlap(problem, overlapping, best.chi2, chi2_own, known)
+            excess = _excess_without_overlap(problem, overlapping, chi2_rest, chi2_own, known)
+        if excess < -1e-3:  # more data never fit better
+            flags.append("not-converged")
         difference = direct - value
         if (period := problem.period_of(name)) is not None:
             difference -= period * round(difference / period)

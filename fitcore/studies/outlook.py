@@ -69,17 +69,32 @@ class OutlookRow:
 
 @dataclass(frozen=True)
 class OutlookResult:
-    """Rows, and the entries whose errors changed."""
+    """Rows, and the entries whose errors changed.
+
+    Attributes
+    ----------
+    title : str
+    changed : tuple of (id, error now, error in the future, unit)
+        Asymmetric errors as their geometric mean.
+    rows : tuple of OutlookRow
+    flags : tuple of str
+        ``several-minima``, and ``interval-not-found: NAME``.
+    """
 
     title: str
-    changed: tuple[tuple[str, float, float], ...]
+    changed: tuple[tuple[str, float, float, str], ...]
     rows: tuple[OutlookRow, ...]
+    flags: tuple[str, ...] = ()
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data."""
         return {
             "title": self.title,
-            "changed": [{"id": i, "error_now": a, "error_future": b} for i, a, b in self.changed],
+            "flags": list(self.flags),
+            "changed": [
+                {"id": name, "error_now": now, "error_future": later, "unit": unit}
+                for name, now, later, unit in self.changed
+            ],
             "quantities": {
                 row.name: {
                     "value": row.value,
@@ -100,7 +115,7 @@ def read_future(path: str | Path, problem: Any) -> Future:
 
     The file has an optional ``title`` and a table ``[future]``; each key is an entry's id or a group, each value a
     table with either ``factor`` (on the error of every entry meant) or ``error`` (number or [plus, minus]) and
-    ``unit``.
+    ``unit``. What is said of an entry by its id comes before what is said of its groups.
 
     Parameters
     ----------
@@ -125,11 +140,12 @@ def read_future(path: str | Path, problem: Any) -> Future:
         raise InputError([*problems, f'{path}: no [future] table; write future."ID-or-group" = {{ factor = 0.5 }}'])
     factors: dict[str, float] = {}
     absolute: dict[str, tuple[float, float]] = {}
+    own: dict[str, float] = {}
     for key, setting in table.items():
         where = f'{path}: [future] "{key}"'
-        meant = [e for e in problem.entries if key in e.names]
+        meant = [e for e in problem.inputs.entries if key in e.names]
         if not meant:
-            known = sorted({name for e in problem.entries for name in e.names})
+            known = sorted({name for e in problem.inputs.entries for name in e.names})
             from difflib import get_close_matches
 
             close = get_close_matches(key, known, n=3, cutoff=0.3)
@@ -145,7 +161,9 @@ def read_future(path: str | Path, problem: Any) -> Future:
             problems.append(f"{where} must be positive, got {setting}")
             continue
         if "factor" in setting:
-            factors |= {e.id: float(numbers[0]) for e in meant}
+            (own if len(meant) == 1 and meant[0].id == key else factors).update(
+                {e.id: float(numbers[0]) for e in meant}
+            )
             continue
         if len(meant) > 1:
             problems.append(f"{where} is a group of {len(meant)} entries: an absolute error belongs to one entry")
@@ -158,7 +176,8 @@ def read_future(path: str | Path, problem: Any) -> Future:
         absolute[meant[0].id] = (numbers[0] * scale, numbers[-1] * scale)
     if problems:
         raise InputError(problems)
-    return Future(str(data.get("title", file.stem)), factors, absolute)
+    # what is said of an entry itself comes before what is said of its groups
+    return Future(str(data.get("title", file.stem)), factors | own, absolute)
 
 
 def outlook(
@@ -193,23 +212,35 @@ def outlook(
     future experiment, not of a lucky one. Central values of today play no part beyond the best fit.
     """
     plan = future if isinstance(future, Future) else Future("", dict(future), {})
-    known = {e.id for e in problem.entries}
+    known = {e.id for e in problem.inputs.entries}
     if unknown := sorted((set(plan.factors) | set(plan.absolute)) - known):
         raise InputError(f"no entry {', '.join(unknown)} in {problem.inputs.name}; weakmix show lists the ids")
+    bad = [i for i, factor in plan.factors.items() if not _positive(factor)]
+    bad += [i for i, pair in plan.absolute.items() if not all(_positive(error) for error in pair)]
+    if bad:
+        raise InputError(f"future errors must be positive and finite: {', '.join(sorted(set(bad)))}")
     wanted = tuple(names) if names is not None else tuple(n for n in PROFILED if n in problem.parameter_names)
     problem.linearise_quantities(problem.start, wanted)
     minima = find_minima(problem, size=starts, rng=rng)
     if not minima or not minima[0].converged:
         raise ConvergenceError("the fit has no converged minimum; see weakmix fit", minima)
     theta = minima[0].theta
-    predicted = problem.predictions(theta)
+    predicted = dict(zip((e.id for e in problem.entries), problem.predictions(theta), strict=True))
+    # an entry that is a flat range of its parameter has no prediction of its own: the parameter's value is one
+    place = {name: i for i, name in enumerate(problem.parameter_names)}
+    predicted |= {
+        e.id: theta[place[e.quantity]]
+        for e in problem.inputs.entries
+        if e.id not in predicted and e.quantity in place
+    }
     entries = []
     changed = []
-    for entry, value in zip(problem.entries, predicted, strict=True):
+    for entry in problem.inputs.entries:
+        value = predicted[entry.id]
         factor = plan.factors.get(entry.id, 1.0)
         plus, minus = plan.absolute.get(entry.id, (entry.plus * factor, entry.minus * factor))
         if (plus, minus) != (entry.plus, entry.minus):
-            changed.append((entry.id, math.sqrt(entry.plus * entry.minus), math.sqrt(plus * minus)))
+            changed.append((entry.id, math.sqrt(entry.plus * entry.minus), math.sqrt(plus * minus), entry.unit))
         errors = {name: error * plus / entry.plus for name, error in entry.errors.items()}
         entries.append(replace(entry, value=float(value), plus=plus, minus=minus, errors=errors))
     then = problem.with_entries(entries)
@@ -231,7 +262,10 @@ def outlook(
                 _pair(later[1]),
             )
         )
-    return OutlookResult(plan.title, tuple(changed), tuple(rows))
+    flags = ["several-minima"] if len(minima) > 1 and minima[1].chi2 < minima[0].chi2 + LEVELS[1] else []
+    lost = {name for table in (now_intervals, future_intervals) for name, _, _ in table.flagged}
+    flags += [f"interval-not-found: {name}" for name in wanted if name in lost]
+    return OutlookResult(plan.title, tuple(changed), tuple(rows), tuple(flags))
 
 
 def _pair(interval: Any) -> tuple[float, float]:

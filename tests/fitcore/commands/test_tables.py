@@ -6,10 +6,12 @@ import io
 from dataclasses import replace
 from typing import Any
 
+import pytest
 from rich.console import Console
 
 from fitcore.commands import tables
-from fitcore.result import FitResult
+from fitcore.commands.output import Output
+from fitcore.result import Estimate, FitResult, MeasurementRow
 
 
 def text(*parts: Any) -> str:
@@ -22,33 +24,33 @@ def text(*parts: Any) -> str:
 
 PARAMETERS = """\
 Parameters
- name                 value                    68.27 %              95.0 %               unit   intervals
- ────────────────────────────────────────────────────────────────────────────────────────────────────────
- wolfenstein_lambda   0.22519 +- 0.00068       [0.22451, 0.22587]   [0.22386, 0.22652]          profile
- wolfenstein_A        0.833 +- 0.011           [0.823, 0.844]       [0.813, 0.854]              profile
- wolfenstein_rhobar   0.2 (open on one side)   [0.1, inf]           [-inf, inf]                 profile
- wolfenstein_etabar   0.3 (unconstrained)      -                    -                           -"""
+name                value                   68.27 %             95.0 %              unit  method
+─────────────────────────────────────────────────────────────────────────────────────────────────
+wolfenstein_lambda  0.22519 +- 0.00068      [0.22451, 0.22587]  [0.22386, 0.22652]        profile
+wolfenstein_A       0.833 +- 0.011          [0.823, 0.844]      [0.813, 0.854]            profile
+wolfenstein_rhobar  0.2 (open on one side)  [0.1, inf]          [-inf, inf]               profile
+wolfenstein_etabar  0.3 (unconstrained)     -                   -                         -"""
 
 DERIVED = """\
 Derived
- name       value                  68.27 %              95.0 %               unit   intervals
- ────────────────────────────────────────────────────────────────────────────────────────────
- jarlskog   (3.203 +- 0.070)e-05   [3.133, 3.273]e-05   [3.066, 3.340]e-05          linear"""
+name      value                 68.27 %             95.0 %              unit  method
+────────────────────────────────────────────────────────────────────────────────────
+jarlskog  (3.203 +- 0.070)e-05  [3.133, 3.273]e-05  [3.066, 3.340]e-05        linear"""
 
 MEASUREMENTS = """\
 Measured against fitted
- id           measured             fitted        unit    pull
- ────────────────────────────────────────────────────────────
- element-ud   0.97367 +- 0.00032   0.97432              -2.03
- gamma        66.4 +2.7 -2.8       65.6 +- 1.6   deg    +0.28
- bag-K        0.7533 +- 0.0091     0.7545               -0.13
+id          measured            fitted       unit   pull
+────────────────────────────────────────────────────────
+element-ud  0.97367 +- 0.00032  0.97432            -2.03
+gamma       66.4 +2.7 -2.8      65.6 +- 1.6  deg   +0.28
+bag-K       0.7533 +- 0.0091    0.7545             -0.13
 pull = (measured - fitted) / measured error"""
 
 OTHER_MINIMA = """\
 Other minima
- chi-square   above the best   wolfenstein_lambda   wolfenstein_A   wolfenstein_rhobar   wolfenstein_etabar
- ──────────────────────────────────────────────────────────────────────────────────────────────────────────
-       5.50            +2.29               0.2252            0.83                  0.2                 -0.3"""
+chi-square  above the best  wolfenstein_lambda  wolfenstein_A  wolfenstein_rhobar  wolfenstein_etabar
+─────────────────────────────────────────────────────────────────────────────────────────────────────
+      5.50           +2.29              0.2252           0.83                 0.2                -0.3"""
 
 
 def test_golden_parameters(result: FitResult) -> None:
@@ -99,3 +101,54 @@ def test_notices_name_everything_special_about_the_inputs() -> None:
         "  held fixed penguin_shift_2beta = 0 deg",
     ]
     assert tables.notices([], {}).row_count == 0
+
+
+@pytest.mark.parametrize("width", [80, 100, 120])
+def test_no_number_is_broken_at_common_widths(width: int) -> None:
+    names = ("wolfenstein_etabar", "long_distance_factor_epsilon_K")
+    rows = {
+        name: Estimate(0.3541, 0.00705, (0.34711, 0.36121), (0.34062, 0.36815), "profile", "GeV")
+        for name in names
+    }
+    measured = [
+        MeasurementRow(
+            *("short-distance-factor-top-top", "bag_K", 0.55012, 0.02321, 0.02110, 0.55214, -0.09, "1/ps"),
+            *("theory", ("lattice",), 0.02131),
+        )
+    ]
+    output = Output()
+    console = Console(file=io.StringIO(), width=width, color_system=None, legacy_windows=False)
+    output.__dict__["console"] = console
+    output.show(tables.estimates("Parameters", rows), tables.measurements(measured))
+    shown = console.file.getvalue()  # type: ignore[attr-defined]
+    assert max(len(line) for line in shown.splitlines()) <= width
+    for whole in ("0.3541 +0.0071 -0.0070", "[0.3406, 0.3682]", "profile", "GeV", "1/ps", "-0.09"):
+        assert any(whole in line for line in shown.splitlines()), whole
+    assert "0.550 +0.023 -0.021" in shown
+    assert ("68.27 %" in shown) == (width == 120)
+
+
+def test_names_fold_at_their_separators_and_nothing_else_does(result: FitResult) -> None:
+    assert tables.fold("long_distance_factor_epsilon_K", 20) == "long_distance_\nfactor_epsilon_K"
+    assert tables.fold("bag_K", 20) == "bag_K"
+    assert tables.fold("mixing-matrix-element-Bs", 14) == "mixing-matrix-\nelement-Bs"
+    assert tables.fold("averyveryverylongword", 5) == "averyveryverylongword"
+    output = Output()
+    output.__dict__["console"] = Console(file=io.StringIO(), width=80, color_system=None)
+    output.show(tables.other_minima(result))
+    lines = output.console.file.getvalue().splitlines()  # type: ignore[attr-defined]
+    assert "wolfenstein_" in "".join(lines)
+    assert any(line.split() == ["5.50", "+2.29", "0.2252", "0.83", "0.2", "-0.3"] for line in lines)
+
+
+@pytest.mark.parametrize("width", [60, 80, 100, 140])
+def test_headline_breaks_between_details(width: int) -> None:
+    output = Output()
+    output.__dict__["console"] = Console(file=io.StringIO(), width=width, color_system=None)
+    details = ("averages-2026 revision 1", "23 entries, 14 parameters", "hypothesis standard")
+    output.headline("fit", *details)
+    lines = output.console.file.getvalue().splitlines()  # type: ignore[attr-defined]
+    assert max(map(len, lines)) <= width
+    assert "quark mixing fit" in lines[0]
+    for detail in details:
+        assert any(detail in line for line in lines)

@@ -72,7 +72,7 @@ def test_linear_problem_is_solved_in_one_step(make_linear, seed, correlated):
 
 @given(st.integers(0, 2**32 - 1), st.booleans())
 @settings(max_examples=30, deadline=None)
-def test_bounds_agree_with_scipy(make_linear, seed, correlated):
+def test_bounded_minima_are_optimal_and_never_above_scipy(make_linear, seed, correlated):
     from scipy.optimize import lsq_linear
 
     rng = np.random.default_rng(seed)
@@ -81,8 +81,13 @@ def test_bounds_agree_with_scipy(make_linear, seed, correlated):
     result = minimise_batch(problem, rng.uniform(-0.4, 0.4, size=(4, 5)))
     assert result.converged.all()
     assert (np.abs(result.theta) <= 0.4).all()
-    np.testing.assert_allclose(result.chi2, 2.0 * exact.cost, rtol=1e-8, atol=1e-8)
-    np.testing.assert_array_equal(result.at_bound != 0, np.isclose(np.abs(result.theta), 0.4, atol=1e-12))
+    # scipy's solver sometimes stops above the minimum; the optimality conditions of a convex problem decide
+    assert (result.chi2 <= 2.0 * exact.cost * (1 + 1e-8) + 1e-8).all()
+    slope = 2.0 * (result.theta @ jacobian.T - measured) @ jacobian
+    inside = np.abs(result.theta) < 0.4
+    np.testing.assert_allclose(slope[inside], 0.0, atol=1e-5)
+    assert (slope[~inside] * np.sign(result.theta[~inside]) <= 1e-5).all()
+    np.testing.assert_array_equal(result.at_bound != 0, ~inside)
 
 
 def test_data_and_fixed_parameters_row_by_row(make_linear):
@@ -279,6 +284,45 @@ def test_range_nuisances_against_exact_bounded_least_squares(least_squares_probl
         )
         exact = lsq_linear(matrix, -constant, bounds=(-bound, bound), method="bvls", tol=1e-14)
         assert result.chi2[k] == pytest.approx(2.0 * exact.cost, abs=1e-6, rel=1e-8)
+
+
+@pytest.mark.parametrize("seed", [0, 6, 13])
+def test_degenerate_ranges_reach_the_same_minimum_from_any_start(least_squares_problem, free_parameter, seed):
+    # convex for held x and y, with ranges that share residuals and one that decouples up to rounding (seed 6)
+    rng = np.random.default_rng(seed)
+    ranges, gaussian, terms = 8, 6, 12
+    mixing = np.zeros((terms, ranges + gaussian))
+    for k in range(ranges):
+        mixing[rng.integers(0, terms), k] = 1.0
+        mixing[rng.integers(0, terms), k] += rng.normal() * (rng.random() < 0.5)
+    for k in range(gaussian):
+        mixing[:, ranges + k] = rng.normal(size=terms) * (rng.random(terms) < 0.4)
+    errors, slopes, half = (
+        rng.uniform(0.02, 0.5, terms),
+        rng.normal(size=(terms, 3)),
+        rng.uniform(0.1, 0.8, ranges),
+    )
+
+    def residual(t):
+        x, y = t[0], t[1]
+        physics = np.concatenate([a * x + b * y + 0.2 * c * x * y for a, b, c in slopes], axis=-1)
+        shifts = sum(mixing[:, k] * t[2 + k] for k in range(ranges + gaussian))
+        priors = [t[2 + ranges + k] / 0.5 for k in range(gaussian)]
+        return np.concatenate([(physics + shifts - 0.8) / errors, *priors], axis=-1)
+
+    parameters = [free_parameter("x"), free_parameter("y")]
+    parameters += [free_parameter(f"range{k}", 0.0, -half[k], half[k], half[k]) for k in range(ranges)]
+    parameters += [free_parameter(f"nuisance{k}", scale=0.5) for k in range(gaussian)]
+    problem = least_squares_problem(residual, parameters)
+    starts = np.zeros((200, len(parameters)))
+    starts[:, :2] = rng.uniform(-3, 3, (200, 2))
+    other = starts.copy()
+    other[:, 2 : 2 + ranges] = rng.uniform(-1, 1, (200, ranges)) * half
+    fixed = np.arange(len(parameters)) < 2
+    first, second = (minimise_batch(problem, s, fixed=fixed) for s in (starts, other))
+    assert first.converged.all()
+    assert second.converged.all()
+    np.testing.assert_allclose(first.chi2, second.chi2, rtol=1e-9, atol=1e-7)
 
 
 def test_bad_shapes_are_refused(curved):

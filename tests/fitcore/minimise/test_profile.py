@@ -205,6 +205,24 @@ def test_impossible_points_are_flagged(least_squares_problem, free_parameter):
     np.testing.assert_array_equal(result.flagged, result.grids[0] > 1.0)
 
 
+def test_points_that_do_not_converge_are_flagged(banana):
+    """A problem whose gradient lies beyond x = 1.5: those points may have a value, but must be flagged."""
+
+    class Lying:
+        def __getattr__(self, name):
+            return getattr(banana, name)
+
+        def linearise(self, theta, data=None):
+            linear = banana.linearise(theta, data)
+            gradient = np.where(theta[:, :1] > 1.5, -linear.gradient - 1.0, linear.gradient)
+            return type(linear)(linear.chi2, gradient, linear.normal)
+
+    result = profile(Lying(), "x", np.linspace(0.0, 3.0, 31), start=np.array([1.0, 1.0, 0.0, 0.0]))
+    np.testing.assert_array_equal(result.flagged, result.grids[0] > 1.5 + 1e-9)
+    np.testing.assert_array_equal(result.converged, ~result.flagged)
+    assert np.isfinite(result.chi2).all()
+
+
 def test_kinked_profiles_with_ranges_against_brute_force(least_squares_problem, free_parameter):
     """Two ranges in one residual and a third elsewhere: the profile has plateaus and kinks."""
     from scipy.optimize import lsq_linear

@@ -51,6 +51,9 @@ class AnalyticProblem:
     def title_of(self, name):
         return name
 
+    def latex_of(self, name):
+        return name
+
 
 def gaussian(covariance, mean=0.0, **options):
     covariance = np.atleast_2d(covariance)

@@ -13,10 +13,28 @@ from fitcore.sampling.from_fit import modes_of_fit  # noqa: E402
 from fitcore.sampling.posterior import sample  # noqa: E402
 from fitcore.sampling.summary import summarise  # noqa: E402
 
-WOLFENSTEIN = ("wolfenstein_lambda", "wolfenstein_A", "wolfenstein_rhobar", "wolfenstein_etabar")
+# PDG 2026, review 12 "CKM Quark-Mixing Matrix" (A. Ceccucci, Z. Ligeti, Y. Sakai, revised March 2026),
+# section 12.4, the Bayesian column.
+PUBLISHED = {
+    "wolfenstein_lambda": (0.22519, 0.00068),
+    "wolfenstein_A": (0.820, 0.011),
+    "wolfenstein_rhobar": (0.1561, 0.0088),
+    "wolfenstein_etabar": (0.3587, 0.0069),
+}
+WOLFENSTEIN = tuple(PUBLISHED)
 
-# R. L. Workman et al. and successors, Review of Particle Physics, 2026 edition, CKM review, Bayesian fit.
-# Recalled from the project's own notes where no digit is given here: A is the only one used below.
+# An independent calculation of the same inputs, done before this package existed, never published: posterior
+# means and standard deviations. Masses and constants differ a little: 0.08 of the width is asked, as for fits.
+REFERENCE = {
+    "wolfenstein_lambda": (0.22518, 0.00068),
+    "wolfenstein_A": (0.8336, 0.0104),
+    "wolfenstein_rhobar": (0.1590, 0.0092),
+    "wolfenstein_etabar": (0.3543, 0.0070),
+    "jarlskog": (3.205e-5, 0.070e-5),
+    "magnitude_V_ub": (3.792e-3, 0.065e-3),
+    "magnitude_V_cb": (42.27e-3, 0.45e-3),
+    "magnitude_V_td": (8.689e-3, 0.109e-3),
+}
 
 
 @pytest.fixture(scope="module")
@@ -42,6 +60,41 @@ def test_posterior_is_near_the_profile(averages):
         half = 0.5 * (high - low)
         assert summary[name].mean == pytest.approx(fit.parameters[name].value, abs=0.1 * half)
         assert summary[name].error == pytest.approx(half, rel=0.05)
+
+
+@pytest.mark.stat
+def test_posterior_is_that_of_an_independent_calculation(averages):
+    problem, _, result = averages
+    values = problem.values(result.samples(), tuple(REFERENCE))
+    for name, (mean, width) in REFERENCE.items():
+        monte_carlo = 5 * width / np.sqrt(np.min(result.diagnostics.effective_sample_size))
+        assert values[name].mean() == pytest.approx(mean, abs=0.08 * width + monte_carlo), name
+        assert values[name].std() == pytest.approx(width, rel=0.05), name
+
+
+@pytest.mark.stat
+def test_published_bayesian_fit(averages):
+    """The published A rests on lower B-mixing inputs: 1.5 of its uncertainty are asked there, 0.8 elsewhere."""
+    summary = summarise(averages[2].chain, names=WOLFENSTEIN)
+    for name, (value, error) in PUBLISHED.items():
+        share = 1.5 if name == "wolfenstein_A" else 0.8
+        assert abs(summary[name].mean - value) < share * error, name
+
+
+@pytest.mark.stat
+def test_published_bayesian_fit_with_b_mixing_of_three_flavours(tmp_path):
+    path = tmp_path / "three-flavours.toml"
+    path.write_text(
+        'title = "review-level set, B mixing with 2+1 flavours"\nrevision = 1\n'
+        'include = ["averages-2026", "alternative-B-mixing"]\n'
+        'drop = ["mixing-matrix-element-Bs", "mixing-matrix-element-ratio"]\n'
+    )
+    problem = Problem.load(path)
+    result = sample(problem, modes=modes_of_fit(problem, problem.fit()), effective=5000, rng=2)
+    assert result.valid, result.diagnostics.advice
+    summary = summarise(result.chain, names=WOLFENSTEIN)
+    for name, (value, error) in PUBLISHED.items():
+        assert abs(summary[name].mean - value) < 0.7 * error, name
 
 
 @pytest.mark.slow
@@ -84,7 +137,7 @@ def test_chain_file_costs_at_most_ten_percent(tmp_path):
     problem = Problem.load("world-2026")
     modes = modes_of_fit(problem, problem.fit())
     ratios = []
-    for repeat in range(3):
+    for repeat in range(5):
         seconds = []
         for path in (None, tmp_path / f"{repeat}.h5"):
             result = sample(
@@ -99,4 +152,5 @@ def test_chain_file_costs_at_most_ten_percent(tmp_path):
             seconds.append(result.seconds)
         ratios.append(seconds[1] / seconds[0])
     print(f"\nfile over memory: {[round(r, 3) for r in ratios]}")
-    assert min(ratios) < 1.10
+    # The middle one: single runs differ by 20 % on a busy machine.
+    assert sorted(ratios)[len(ratios) // 2] < 1.10

@@ -1,0 +1,352 @@
+"""Posteriors: one parameter at a time over credible-interval rails, a plane, and a triangle of planes."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from fitcore.figures import style
+from fitcore.figures.outlines import contour_lines, draw_edge
+from fitcore.figures.symbols import symbol_text
+from fitcore.sampling.density import Density2D, density_1d, density_2d, highest_density
+from fitcore.sampling.diagnostics import effective_sample_size
+from fitcore.sampling.summary import stored_bounds
+from fitcore.sampling.thinned import ThinnedChain
+from observables.errors import InputError, UnknownNameError
+
+__all__ = ["densities", "plane", "triangle"]
+
+LEVELS = (0.6827, 0.9545)
+MOST_PANELS = 30
+MOST_IN_TRIANGLE = 9
+ACROSS = 3
+PROFILE = style.VERMILLION
+POSTERIOR = style.NAVY
+
+
+class _Draws:
+    """Samples of the wanted quantities, with what their axes need."""
+
+    def __init__(self, chain: Any, names: Sequence[str], start: int) -> None:
+        parameters = list(chain.parameter_names)
+        derived = tuple(name for name in names if name not in parameters)
+        known = parameters + list(chain.derived_names)
+        for name in derived:
+            if name not in known:
+                raise UnknownNameError(name, "parameter or derived quantity", known)
+        thinned = ThinnedChain.read(chain, start=start, derived=derived)
+        self.names = list(names)
+        self.bounds = stored_bounds(chain)
+        self.columns: dict[str, np.ndarray] = {}
+        self.effective: dict[str, float] = {}
+        for name in names:
+            if name in parameters:
+                draws = thinned.samples[:, :, parameters.index(name)]
+            else:
+                draws = thinned.derived[name]
+            if np.iscomplexobj(draws):
+                raise InputError(f"{name}: is complex; draw a real quantity made from it")
+            self.effective[name] = effective_sample_size(np.ascontiguousarray(draws.T))
+            self.columns[name] = np.ascontiguousarray(draws).reshape(-1)
+        header = chain.header
+        self.latex = dict(zip(parameters, header.parameter_latex, strict=False))
+        self.units = dict(zip(parameters, header.parameter_units, strict=False))
+        for name in derived:
+            self.units[name], self.latex[name] = chain.derived_label(name)
+        self.footer = f"{header.inputs_sha256[:8]} - {header.hypothesis} - {thinned.steps} steps"
+
+    def limits(self, name: str) -> tuple[float, float]:
+        """Where the density may end sharply."""
+        return self.bounds.get(name, (-np.inf, np.inf))
+
+    def label(self, name: str) -> str:
+        """Symbol and unit of an axis."""
+        unit = self.units.get(name, "1")
+        symbol = symbol_text(self.latex.get(name, ""), name)
+        return symbol if unit in ("", "1") else f"{symbol}  [{unit}]"
+
+    def plane(self, x: str, y: str) -> Density2D:
+        """Density of two of them."""
+        effective = min(self.effective[x], self.effective[y])
+        return density_2d(
+            self.columns[x],
+            self.columns[y],
+            bounds=(self.limits(x), self.limits(y)),
+            effective=effective if effective > 1 else None,
+        )
+
+
+def densities(
+    chain: Any,
+    names: Sequence[str] | None = None,
+    *,
+    profile: Mapping[str, Any] | None = None,
+    start: int = 0,
+    footer: str = "",
+) -> style.Drawing:
+    """Draw the posterior of each quantity over rails of its credible and profile intervals.
+
+    Parameters
+    ----------
+    chain : ChainFile or MemoryChain
+    names : sequence of str, optional
+        Parameters and stored derived quantities, at most 30; default: the first parameters.
+    profile : mapping of name -> Estimate, optional
+        Profile intervals of a fit, drawn as a second rail.
+    start : int
+        First step used.
+    footer : str
+
+    Returns
+    -------
+    Drawing
+        Its data are the densities.
+
+    Raises
+    ------
+    UnknownNameError, InputError
+        For names the chain does not hold, and complex quantities.
+    """
+    profile = profile or {}
+    names = list(chain.parameter_names if names is None else names)[:MOST_PANELS]
+    draws = _Draws(chain, names, start)
+    down = math.ceil(len(names) / ACROSS)
+    across = min(len(names), ACROSS)
+    panel_width, panel_height, head, foot = 2.75, 1.95, 0.95, 0.35
+    width, height = max(across * panel_width + 0.2, 5.6), down * panel_height + head + foot
+    rows: list[tuple[Any, ...]] = []
+    with style.in_style():
+        figure = style.new_figure(width, height)
+        for number, name in enumerate(names):
+            left = 0.1 + panel_width * (number % ACROSS) + 0.15
+            bottom = foot + panel_height * (down - 1 - number // ACROSS) + 0.45
+            axes = figure.add_axes((left / width, bottom / height, 2.45 / width, 1.4 / height))
+            one = profile.get(name)
+            curve = _panel(axes, draws, name, one)
+            axes.set_xlabel(draws.label(name), fontsize=9, labelpad=1.5)
+            rows += [(name, float(x), float(p)) for x, p in zip(*curve, strict=True)]
+        _title(figure, height, width, "Posterior densities")
+        words = "dark 68.27 %, light 95.45 % credible (highest density, one quantity)"
+        if profile:
+            words += "; open bars: profile of the fit, 68.27 % and 95.0 % for one quantity"
+        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
+    return style.Drawing(figure, ("name", "value", "density"), tuple(rows))
+
+
+def _panel(axes: Any, draws: _Draws, name: str, one: Any) -> tuple[np.ndarray, np.ndarray]:
+    column, (lower, upper) = draws.columns[name], draws.limits(name)
+    size = draws.effective[name]
+    density = density_1d(column, lower=lower, upper=upper, effective=size if size > 1 else None)
+    x, p = density.grid, density.density / max(density.density.max(), 1e-300)
+    low, high = np.quantile(column, [0.0005, 0.9995])
+    ends = [e for e in (() if one is None else (*(one.interval_95 or ()),)) if e is not None]
+    low, high = min([low, *ends]), max([high, *ends])
+    margin = 0.04 * (high - low) or 1.0
+    axes.set_xlim(low - margin, high + margin)
+    rails = 2 if one is not None else 1
+    axes.set_ylim(-0.17 * rails - 0.03, 1.06)
+    axes.set_yticks([])
+    axes.spines["left"].set_visible(False)
+    axes.tick_params(labelsize=7, length=2.5)
+    axes.locator_params(axis="x", nbins=4)
+    for shade, level in ((0.25, LEVELS[1]), (0.6, LEVELS[0])):
+        for region in highest_density(density, level):
+            inside = (x >= region[0]) & (x <= region[1])
+            axes.fill_between(x[inside], 0, p[inside], color=style.tint(POSTERIOR, shade), lw=0, zorder=1)
+    axes.plot(x, p, color=POSTERIOR, lw=1.4, zorder=3, gid=f"density:{name}")
+    for shade, thick, level in ((0.45, 3.0, LEVELS[1]), (1.0, 5.5, LEVELS[0])):
+        for region in highest_density(density, level):
+            axes.plot(
+                region,
+                [-0.1, -0.1],
+                color=style.tint(POSTERIOR, shade),
+                lw=thick,
+                solid_capstyle="butt",
+                gid=f"credible:{name}:{level}",
+            )
+    if one is not None:
+        for tall, ends_of in ((0.05, one.interval_95), (0.09, one.interval_68)):
+            if ends_of is not None and None not in ends_of:
+                a, b = ends_of
+                axes.fill(
+                    [a, b, b, a],
+                    [-0.27 - tall / 2, -0.27 - tall / 2, -0.27 + tall / 2, -0.27 + tall / 2],
+                    facecolor=style.PAPER,
+                    edgecolor=PROFILE,
+                    lw=0.9,
+                    gid=f"profile:{name}",
+                )
+        axes.plot([one.value], [-0.27], "o", ms=3.2, mfc="white", mec=PROFILE, mew=0.9, zorder=5)
+    inside = (x >= low - margin) & (x <= high + margin)
+    step = max(1, inside.sum() // 200)
+    return x[inside][::step], density.density[inside][::step]
+
+
+def plane(
+    chain: Any,
+    x: str,
+    y: str,
+    *,
+    profile: Sequence[tuple[str, Sequence[np.ndarray]]] = (),
+    start: int = 0,
+    footer: str = "",
+) -> style.Drawing:
+    """Draw the credible regions of two quantities, with profile contours on top where given.
+
+    Parameters
+    ----------
+    chain : ChainFile or MemoryChain
+    x, y : str
+    profile : sequence of (words, lines)
+        Contours of a profile, each a list of lines (k, 2), and what they are ("68.27 %, two parameters").
+    start : int
+    footer : str
+
+    Returns
+    -------
+    Drawing
+        Its data are the contours.
+    """
+    draws = _Draws(chain, [x, y], start)
+    width, height = 5.6, 5.5
+    with style.in_style():
+        figure = style.new_figure(width, height)
+        axes = figure.add_axes((0.85 / width, 0.85 / height, 4.45 / width, 3.7 / height))
+        found = _credible(axes, draws, x, y)
+        axes.set_xlabel(draws.label(x), fontsize=11)
+        axes.set_ylabel(draws.label(y), fontsize=11)
+        for number, (words, lines) in enumerate(profile):
+            for line in lines:
+                axes.plot(
+                    *np.asarray(line).T, color=PROFILE, lw=1.2, ls=("-", (0, (4, 2)))[number % 2], zorder=6
+                )
+                found.append((f"profile {words}", np.asarray(line)))
+        _title(figure, height, width, "Posterior regions")
+        words = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
+        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        if profile:
+            listed = "; ".join(words for words, _ in profile)
+            figure.text(
+                0.2 / width,
+                1 - 0.75 / height,
+                f"red lines: profile, {listed}",
+                fontsize=7,
+                color=PROFILE,
+                va="center",
+            )
+        style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
+    rows = tuple(
+        (words, number, float(a), float(b)) for number, (words, line) in enumerate(found) for a, b in line
+    )
+    return style.Drawing(figure, ("region", "line", x, y), rows)
+
+
+def triangle(
+    chain: Any, names: Sequence[str] | None = None, *, start: int = 0, footer: str = ""
+) -> style.Drawing:
+    """Draw the credible regions of all pairs of a few quantities.
+
+    Parameters
+    ----------
+    chain : ChainFile or MemoryChain
+    names : sequence of str, optional
+        At most 9 are drawn; default: the first parameters.
+    start : int
+    footer : str
+
+    Returns
+    -------
+    Drawing
+        Its data are the contours.
+    """
+    names = list(chain.parameter_names if names is None else names)[:MOST_IN_TRIANGLE]
+    draws = _Draws(chain, names, start)
+    n, cell = len(names), 1.25
+    left, bottom, head = 0.85, 0.75, 0.95
+    width, height = max(left + n * cell + 0.2, 5.6), bottom + n * cell + head
+    rows: list[tuple[Any, ...]] = []
+    with style.in_style():
+        figure = style.new_figure(width, height)
+        limits = {}
+        for name in names:
+            low, high = np.quantile(draws.columns[name], [0.0005, 0.9995])
+            margin = 0.08 * (high - low) or 1.0
+            limits[name] = (low - margin, high + margin)
+        for i, y in enumerate(names):
+            for j, x in enumerate(names[: i + 1]):
+                at = (left + j * cell, bottom + (n - 1 - i) * cell)
+                axes = figure.add_axes(
+                    (at[0] / width, at[1] / height, (cell - 0.08) / width, (cell - 0.08) / height)
+                )
+                axes.set_xlim(*limits[x])
+                if i == j:
+                    _diagonal(axes, draws, x)
+                else:
+                    axes.set_ylim(*limits[y])
+                    found = _credible(axes, draws, x, y, ticks=2.2)
+                    rows += [(x, y, words, float(a), float(b)) for words, line in found for a, b in line]
+                axes.locator_params(nbins=3)
+                axes.tick_params(labelsize=6, length=2, labelbottom=i == n - 1, labelleft=j == 0 and i > 0)
+                for tick in axes.get_xticklabels():
+                    tick.set_rotation(40)
+                if i == n - 1:
+                    axes.set_xlabel(draws.label(x), fontsize=8)
+                if j == 0 and i > 0:
+                    axes.set_ylabel(draws.label(y), fontsize=8)
+        figure.align_labels()
+        _title(figure, height, width, "Posterior of pairs")
+        words = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
+        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
+    return style.Drawing(figure, ("x", "y", "region", "x_value", "y_value"), tuple(rows))
+
+
+def _diagonal(axes: Any, draws: _Draws, name: str) -> None:
+    lower, upper = draws.limits(name)
+    size = draws.effective[name]
+    density = density_1d(draws.columns[name], lower=lower, upper=upper, effective=size if size > 1 else None)
+    top = max(density.density.max(), 1e-300)
+    axes.set_ylim(0, 1.08)
+    axes.set_yticks([])
+    axes.spines["left"].set_visible(False)
+    for region in highest_density(density, LEVELS[0]):
+        inside = (density.grid >= region[0]) & (density.grid <= region[1])
+        axes.fill_between(
+            density.grid[inside], 0, density.density[inside] / top, color=style.tint(POSTERIOR, 0.35), lw=0
+        )
+    axes.plot(density.grid, density.density / top, color=POSTERIOR, lw=1.2)
+
+
+def _credible(
+    axes: Any, draws: _Draws, x: str, y: str, *, ticks: float = 3.5
+) -> list[tuple[str, np.ndarray]]:
+    """Draw the two regions and return their edges."""
+    density = draws.plane(x, y)
+    top = density.density.max()
+    # The edge tools want a surface that is low inside, as Delta chi-square is.
+    with np.errstate(divide="ignore"):
+        depth = np.minimum(-2.0 * np.log(density.density.T / top), 60.0)
+    levels = [max(-2.0 * math.log(density.level(cl) / top), 1e-3) for cl in LEVELS]
+    if axes.get_autoscale_on():
+        low, high = np.quantile(draws.columns[x], [0.0005, 0.9995])
+        axes.set_xlim(low - 0.08 * (high - low), high + 0.08 * (high - low))
+        low, high = np.quantile(draws.columns[y], [0.0005, 0.9995])
+        axes.set_ylim(low - 0.08 * (high - low), high + 0.08 * (high - low))
+    axes.contourf(
+        density.x, density.y, depth.T, levels=[-1.0, levels[0]], colors=[style.tint(POSTERIOR, 0.45)]
+    )
+    found: list[tuple[str, np.ndarray]] = []
+    for cl, level in zip(LEVELS, levels, strict=True):
+        lines = contour_lines(density.x, density.y, depth, level)
+        found += [(f"{100 * cl:.2f} %", line) for line in lines]
+    edges = [line for words, line in found if words.startswith("95")]
+    draw_edge(axes, edges, (density.x, density.y, depth), POSTERIOR, ticks=ticks, label=f"credible:{x}:{y}")
+    return found
+
+
+def _title(figure: Any, height: float, width: float, words: str) -> None:
+    figure.text(0.2 / width, 1 - 0.33 / height, words, fontsize=13, fontweight="bold", va="center")

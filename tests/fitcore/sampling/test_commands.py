@@ -1,0 +1,134 @@
+"""The commands `weakmix sample` and `weakmix chain` on the bundled inputs."""
+
+import json
+
+import pytest
+from click.testing import CliRunner
+
+pytest.importorskip("emcee")
+
+from fitcore.commands import chain as chain_command
+from fitcore.commands import sample as sample_command
+from fitcore.commands.errors import report_errors
+from fitcore.commands.progress import describe, duration
+from fitcore.sampling.sample_result import Progress
+
+
+def run(command, *arguments):
+    """Run a command as the group does; returns click's result."""
+    import click
+
+    class Reporting(click.Group):
+        def invoke(self, ctx):
+            with report_errors():
+                return super().invoke(ctx)
+
+    group = Reporting(commands={command.name: command})
+    return CliRunner().invoke(group, [command.name, *map(str, arguments)], prog_name="weakmix")
+
+
+@pytest.fixture(scope="module")
+def chain(tmp_path_factory):
+    path = tmp_path_factory.mktemp("chain") / "averages.h5"
+    result = run(
+        sample_command.command, "averages-2026-tree", "--chain", path, "--effective", 1000, "--json", "-"
+    )
+    assert result.exit_code == 0, result.output
+    return path, json.loads(result.stdout)
+
+
+def test_sample_tells_what_it_found(chain):
+    path, content = chain
+    assert path.exists()
+    assert content["valid"]
+    assert content["parameters"]["wolfenstein_A"]["mean"] == pytest.approx(0.802, abs=0.01)
+    assert set(content["parameters"]["wolfenstein_A"]["intervals"]) == {"0.6827", "0.9545"}
+    assert content["diagnostics"]["status"] == "reliable"
+    assert content["inputs"]["name"] == "averages-2026-tree"
+
+
+def test_resuming_with_the_same_command_does_nothing_more(chain):
+    path, content = chain
+    again = run(
+        sample_command.command, "averages-2026-tree", "--chain", path, "--effective", 1000, "--json", "-"
+    )
+    assert again.exit_code == 0, again.output
+    assert json.loads(again.stdout)["steps"] == content["steps"]
+
+
+def test_other_inputs_are_refused_with_the_differences(chain):
+    result = run(sample_command.command, "averages-2026", "--chain", chain[0], "--until", 10)
+    assert result.exit_code == 2
+    assert "different problem" in result.stderr
+    assert "parameters only in the present problem" in result.stderr
+    assert "Traceback" not in result.output
+
+
+def test_chain_that_is_too_short_exits_1(tmp_path):
+    result = run(sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--until", 10)
+    assert result.exit_code == 1
+    assert "Do not use this chain yet" in result.stderr
+
+
+def test_run_folder(tmp_path):
+    result = run(
+        sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--effective", 500,
+        "--out", tmp_path / "run", "--quiet",
+    )  # fmt: skip
+    assert result.exit_code == 0, result.output
+    assert {"result.json", "inputs.toml", "run.json"} <= {p.name for p in (tmp_path / "run").iterdir()}
+
+
+def test_chain_verify(chain, tmp_path):
+    result = run(chain_command.command, "verify", chain[0])
+    assert result.exit_code == 0
+    assert "sound" in result.stdout
+    broken = tmp_path / "broken.h5"
+    broken.write_bytes(chain[0].read_bytes()[:5000])
+    result = run(chain_command.command, "verify", broken)
+    assert result.exit_code == 2
+    assert "cannot read or write" in result.stderr
+
+
+def test_chain_derive_and_summary(chain, tmp_path):
+    result = run(chain_command.command, "derive", chain[0], "angle_gamma", "jarlskog")
+    assert result.exit_code == 0, result.output
+    assert "angle_gamma" in result.stdout
+    assert "was there already" in run(chain_command.command, "derive", chain[0], "jarlskog").stdout
+    result = run(chain_command.command, "derive", chain[0], "angle_gama")
+    assert result.exit_code == 2
+    assert "angle_gamma" in result.stderr
+
+    out = tmp_path / "figures"
+    result = run(
+        chain_command.command, "summary", chain[0], "--name", "angle_gamma", "--name", "wolfenstein_A",
+        "--out", out, "--json", "-",
+    )  # fmt: skip
+    assert result.exit_code == 0, result.output
+    content = json.loads(result.stdout)
+    assert content["parameters"]["angle_gamma"]["mean"] == pytest.approx(66.4, abs=1.5)
+    assert content["parameters"]["angle_gamma"]["unit"] == "deg"
+    assert {p.suffix for p in out.iterdir()} == {".pdf", ".png", ".csv"}
+    result = run(chain_command.command, "summary", chain[0], "--against", tmp_path)
+    assert result.exit_code == 2
+    assert "is not the run folder of a fit" in result.stderr
+
+
+def test_chain_export(chain, tmp_path):
+    target = tmp_path / "c.npz"
+    result = run(chain_command.command, "export", chain[0], "--format", "npz", "--to", target, "--thin", 10)
+    assert result.exit_code == 0
+    assert target.exists()
+    result = run(chain_command.command, "export", chain[0], "--format", "npz", "--to", target)
+    assert result.exit_code == 2
+    assert "exists already" in result.stderr
+
+
+def test_progress_in_words():
+    state = Progress("chain", 512, 192, 98765.4, 1234.0, 2.345, 0.61, 3.0, 7000.0)
+    assert describe(state) == (
+        "512 steps of 192 walkers, 98765 points/s, acceptance 0.61, autocorrelation time 2.3, 1234 effective, "
+        "1.9 h to go"
+    )
+    assert duration(89) == "89 s"
+    assert duration(600) == "10 min"
