@@ -259,7 +259,7 @@ def _stretch(index: list[int]) -> slice | np.ndarray:
 def _total(rows: np.ndarray, members: Sequence[int]) -> np.ndarray | float:
     if not members:
         return 0.0
-    total = rows[members[0]]
+    total: np.ndarray = rows[members[0]]
     for member in members[1:]:
         total = total + rows[member]
     return total

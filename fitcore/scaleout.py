@@ -24,6 +24,7 @@ from concurrent.futures import (
     Executor,
     Future,
     ProcessPoolExecutor,
+    ThreadPoolExecutor,
     wait,
 )
 from dataclasses import dataclass
@@ -269,6 +270,7 @@ class ClusterExecutor(Executor):
         self.address = address
         _knock(address, timeout)
         try:
+            _shake_hands(address, timeout)
             self._client = Client(address, timeout=timeout, set_as_default=False)
         except (OSError, ValueError, TypeError) as error:
             raise InputError(
@@ -312,6 +314,21 @@ def _knock(address: str, timeout: float) -> None:
         socket.create_connection((found["host"], int(found["port"])), timeout=timeout).close()
     except (OSError, OverflowError) as error:
         raise InputError(f"cluster {address!r}: nobody answers there ({error}); {HINT}") from error
+
+
+def _shake_hands(address: str, timeout: float) -> None:
+    """Raise OSError unless a scheduler speaks at the address: a client that meets something silent never returns."""
+    import asyncio
+
+    from distributed.core import connect
+
+    async def greet() -> None:
+        connection = await asyncio.wait_for(connect(address, timeout=timeout), timeout)
+        connection.abort()
+
+    # a thread of its own, since a notebook's has an event loop already
+    with ThreadPoolExecutor(1) as thread:
+        thread.submit(asyncio.run, greet()).result()
 
 
 def open_executor(*, jobs: int = 1, cluster: str | None = None, spec: Any = None) -> Executor:

@@ -42,7 +42,9 @@ def imported(path):
 def uphill(path):
     """What a module may not import."""
     package, *inside = path.relative_to(ROOT).with_suffix("").parts
-    forbidden = {"observables": ("likelihoods", "fitcore"), "likelihoods": ("fitcore",), "fitcore": ()}[package]
+    forbidden = {"observables": ("likelihoods", "fitcore"), "likelihoods": ("fitcore",), "fitcore": ()}[
+        package
+    ]
     if package == "fitcore" and inside != ["problem"] and inside[0] != "commands":
         forbidden = ("likelihoods", "observables")
     for name, line in imported(path):
@@ -98,7 +100,7 @@ def test_no_catch_all_modules():
     assert not names & {"utils", "util", "helpers", "helper", "common", "misc"}
 
 
-# -- public names -------------------------------------------------------------------------------------------------------------
+# -- public names --------------------------------------------------------------------------------------------
 
 
 PUBLIC = {
@@ -131,9 +133,16 @@ def test_every_module_names_only_what_it_has():
             tree = ast.parse(path.read_text(encoding="utf-8"))
             names = {n.id for n in ast.walk(tree) if isinstance(n, ast.Name) and isinstance(n.ctx, ast.Store)}
             names |= {n.name for n in tree.body if isinstance(n, ast.FunctionDef | ast.ClassDef)}
-            names |= {(a.asname or a.name) for n in ast.walk(tree) if isinstance(n, ast.Import | ast.ImportFrom) for a in n.names}
+            names |= {
+                (a.asname or a.name)
+                for n in ast.walk(tree)
+                if isinstance(n, ast.Import | ast.ImportFrom)
+                for a in n.names
+            }
             for node in tree.body:
-                if isinstance(node, ast.Assign) and any(getattr(t, "id", "") == "__all__" for t in node.targets):
+                if isinstance(node, ast.Assign) and any(
+                    getattr(t, "id", "") == "__all__" for t in node.targets
+                ):
                     missing = [name for name in ast.literal_eval(node.value) if name not in names]
                     found += [f"{path.relative_to(ROOT)}: {name}" for name in missing]
     assert not found, "\n".join(found)
@@ -150,7 +159,7 @@ def test_the_licence_and_the_readme_are_there():
     assert all((ROOT / name).is_file() for name in project["license-files"])
 
 
-# -- light imports ------------------------------------------------------------------------------------------------------------
+# -- light imports -------------------------------------------------------------------------------------------
 
 
 def python(code, *folders, cwd=None):
@@ -173,7 +182,15 @@ def test_fitcore_alone_imports_nothing_heavy():
 
 
 def test_help_imports_nothing_heavy():
-    code = "from fitcore.commands.main import cli\ntry:\n    cli(['--help'])\nexcept SystemExit as end:\n    assert not end.code"
+    code = "\n".join(
+        [
+            "from fitcore.commands.main import cli",
+            "try:",
+            "    cli(['--help'])",
+            "except SystemExit as end:",
+            "    assert not end.code",
+        ]
+    )
     assert loaded_after(code, (*HEAVY, "observables", "likelihoods")) == []
 
 
@@ -184,10 +201,13 @@ def test_the_catalogue_and_the_inputs_need_numpy_alone():
 
 def test_a_problem_needs_no_figures_and_no_minimiser():
     code = "from fitcore import Problem, FitResult"
-    assert loaded_after(code, ["matplotlib", "iminuit", "emcee", "h5py", "rich", "jinja2", "scipy.optimize"]) == []
+    assert (
+        loaded_after(code, ["matplotlib", "iminuit", "emcee", "h5py", "rich", "jinja2", "scipy.optimize"])
+        == []
+    )
 
 
-# -- somebody else's package of that name ---------------------------------------------------------------------------------------
+# -- somebody else's package of that name --------------------------------------------------------------------
 
 
 SOMEONE_ELSES = '"""Observables of another kind."""\n\nclass Observable:\n    pass\n'
@@ -224,7 +244,7 @@ def test_a_missing_observables_is_named(tmp_path):
     assert "the package 'observables' of weakmix is missing" in done.stderr.strip().splitlines()[-1]
 
 
-# -- the wheel ------------------------------------------------------------------------------------------------------------------
+# -- the wheel -----------------------------------------------------------------------------------------------
 
 
 @pytest.fixture(scope="module")

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from fitcore.commands.completion import complete_names
 from fitcore.commands.errors import EXIT_FELL_SHORT, input_error
 from fitcore.commands.options import hypothesis_option, module_option, output_options
 from fitcore.commands.output import Output
@@ -42,7 +43,9 @@ class Point:
 
 
 @click.command("compute")
-@click.argument("quantities", nargs=-1, required=True, metavar="QUANTITY...")
+@click.argument(
+    "quantities", nargs=-1, required=True, metavar="QUANTITY...", shell_complete=complete_names
+)
 @click.option(
     "--from",
     "source",

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 import click
 
+from fitcore.commands.completion import complete_names
 from fitcore.commands.errors import EXIT_FELL_SHORT
 from fitcore.commands.options import ProblemRequest, Work, output_options, problem_options, seed_options
 from fitcore.commands.output import Output
@@ -24,7 +25,13 @@ if TYPE_CHECKING:
     "--derived",
     multiple=True,
     metavar="NAME",
+    shell_complete=complete_names,
     help="Derive this quantity too, with its interval; repeatable.",
+)
+@click.option(
+    "--compare-theory-errors",
+    is_flag=True,
+    help="Also tabulate the fit with theory errors as given, Gaussian and flat.",
 )
 @click.option("--no-figures", is_flag=True, help="Draw nothing (saves about a second).")
 @output_options
@@ -34,6 +41,7 @@ def command(
     ctx: click.Context,
     request: ProblemRequest,
     derived: tuple[str, ...],
+    compare_theory_errors: bool,
     no_figures: bool,
     output: Output,
     work: Work,
@@ -54,7 +62,14 @@ def command(
         problem, request, output, work, command="fit", derived=derived, figures=not no_figures
     )
     print_fit(output, problem, result, place)
-    output.write_json(result.to_dict())
+    content = result.to_dict()
+    if compare_theory_errors:
+        from fitcore.commands import theory_errors
+
+        treatments = theory_errors.compare(request, work.seed)
+        output.show("", theory_errors.table(treatments))
+        content["theory_errors_compared"] = {one.name: one.to_dict() for one in treatments}
+    output.write_json(content)
     leave_if_not_valid(ctx, result)
 
 

@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
 
+from fitcore.commands.completion import complete_inputs
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -133,7 +134,7 @@ def problem_options(function: Command) -> Command:
     return _chain(
         _gathered("request", ProblemRequest, keys)(function),
         [
-            click.argument("inputs", metavar="INPUTS"),
+            click.argument("inputs", metavar="INPUTS", shell_complete=complete_inputs),
             click.option(
                 "--only", multiple=True, metavar="ID-OR-GROUP", help="Keep only these entries; repeatable."
             ),

@@ -21,7 +21,8 @@ if TYPE_CHECKING:
 
 CAUTION = (
     "Future intervals come from pseudo-data at today's best fit, without fluctuation, with the future errors: what "
-    "a typical future would give if today's best fit were the truth. Errors that the file does not name stay as they "
+    "a typical future would give if today's best fit were the truth; 'narrower by' compares them with the same "
+    "pseudo-data and today's errors. Errors that the file does not name stay as they "
     "are, and so do all correlations."
 )
 

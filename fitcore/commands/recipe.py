@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from fitcore.commands.completion import complete_names
 from fitcore.commands.options import hypothesis_option, module_option, reading_options
 from fitcore.commands.output import Output
 
@@ -16,7 +17,7 @@ if TYPE_CHECKING:
 
 
 @click.command("recipe")
-@click.argument("name")
+@click.argument("name", shell_complete=complete_names)
 @hypothesis_option
 @module_option
 @reading_options

@@ -133,7 +133,7 @@ def read_run(folder: Path) -> dict[str, Any]:
     if not isinstance(files, dict) or not isinstance(record.get("command_line"), list):
         message = f"{folder / 'run.json'}: is incomplete (no files, or no command line)"
         raise input_error(message)
-    needed = ["inputs.toml", "result.json", *(name for name in files if name.endswith(".py"))]
+    needed = dict.fromkeys(["inputs.toml", "result.json", *(n for n in files if n.endswith((".py", ".toml")))])
     faults = []
     for name in needed:
         found = digest(folder / name)
@@ -189,7 +189,8 @@ def recompute(folder: Path, record: Mapping[str, Any]) -> dict[str, Any]:
         place = Path(scratch) / "run"
         fixed: dict[str, Any] = {
             **{"inputs": str(folder / "inputs.toml"), "only": (), "without": (), "settings": ()},
-            **{"json": None, "quiet": True, "out": place, "no_figures": True},
+            **{"json": None, "quiet": True, "out": place, "no_figures": True, "cluster": None},
+            "future": folder / "future.toml",
             "modules": tuple(str(folder / Path(path).name) for path in context.params.get("modules", ())),
         }
         context.params.update({key: value for key, value in fixed.items() if key in context.params})

@@ -81,30 +81,42 @@ def command(
     if seed is None and not chain_path.exists():
         seed = 0
     fit = problem.fit(rng=seed or 0)
-    with ChainProgress(output) as progress:
-        result = sample(
-            problem,
-            modes=modes_of_fit(problem, fit),
-            chain_path=chain_path,
-            until=until,
-            effective=effective,
-            minutes=minutes,
-            walkers=walkers,
-            ensembles=ensembles,
-            rng=seed,
-            progress=progress,
-        )
+    go_on = resume_command(ctx, request, chain_path, until, effective, minutes)
+    try:
+        with ChainProgress(output) as progress:
+            result = sample(
+                problem,
+                modes=modes_of_fit(problem, fit),
+                chain_path=chain_path,
+                until=until,
+                effective=effective,
+                minutes=minutes,
+                walkers=walkers,
+                ensembles=ensembles,
+                rng=seed,
+                progress=progress,
+            )
+    except KeyboardInterrupt:
+        _say_how_to_go_on(output, "Interrupted during the pilot run: no steps yet. To start again:", go_on)
+        return
     output.show(*posterior_tables.verdict(result))
     content = _content(output, problem, fit, result)
     output.write_json(content)
     if output.out is not None:
         _write_run(request, output, problem, content, seed)
     if result.interrupted:
-        output.show(f"\nInterrupted; {result.steps} steps are safe in {chain_path}. To go on:")
-        output.show("  " + resume_command(ctx, request, chain_path, until, effective, minutes))
+        _say_how_to_go_on(
+            output, f"Interrupted; {result.steps} steps are safe in {chain_path}. To go on:", go_on
+        )
     elif not result.valid:
         click.echo(f"weakmix: {result.message}", err=True)
         ctx.exit(EXIT_FELL_SHORT)
+
+
+def _say_how_to_go_on(output: Output, what: str, go_on: str) -> None:
+    """Print a command line unfolded, so that it can be copied."""
+    if not output.quiet:
+        click.echo(f"\n{what}\n  {go_on}", err=output.json_on_stdout)
 
 
 def _content(output: Output, problem: Problem, fit: FitResult, result: SampleResult) -> dict[str, Any]:

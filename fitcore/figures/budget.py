@@ -19,7 +19,7 @@ if TYPE_CHECKING:
 __all__ = ["Bar", "draw"]
 
 WIDTH = 8.2
-ROW, TOP, BOTTOM, GAP = 0.25, 1.12, 0.5, 0.46
+ROW, TOP, BOTTOM, GAP = 0.25, 1.16, 0.5, 0.46
 LEFT, RIGHT = 2.75, 7.3
 MOST = 18
 
@@ -109,11 +109,11 @@ def _scale(axes: Axes, reach: float, height: float) -> None:
         axes.plot([x, x], [TOP - 0.06, height - BOTTOM], color=style.RULE, lw=0.6, zorder=0)
         axes.text(x, TOP - 0.1, f"{tick} %", fontsize=6.5, color=style.FAINT_INK, ha="center", va="bottom")
     axes.plot([LEFT, LEFT], [TOP - 0.06, height - BOTTOM], color=style.FAINT_INK, lw=0.8, zorder=1)
-    y = 0.82
+    y = 0.78
     axes.fill_between([0.2, 0.5], y - 0.05, y + 0.05, color=style.FAINT_INK, lw=0)
-    axes.text(0.58, y, "unit shift", fontsize=7, va="center")
-    axes.plot([1.42, 1.42], [y - 0.08, y + 0.08], color=style.INK, lw=1.4)
-    axes.text(1.5, y, "removal", fontsize=7, va="center")
+    axes.text(0.58, y, "shift: refitted with this input up by its error", fontsize=6.5, va="center")
+    axes.plot([3.5, 3.5], [y - 0.08, y + 0.08], color=style.INK, lw=1.4)
+    axes.text(3.58, y, "removal: what vanishes if this were known exactly", fontsize=6.5, va="center")
 
 
 def _row(axes: Axes, bar: Bar, y: float, error: float, reach: float, *, signed: bool) -> None:

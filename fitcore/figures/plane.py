@@ -33,7 +33,7 @@ STRIP = 0.95
 FAINT = 0.45
 OVERVIEW_BOTTOM = 0.78
 #: Room for names at the left and below, in inches.
-SIDE_ROOM, BELOW_ROOM = 1.4, 0.55
+SIDE_ROOM, BELOW_ROOM = 1.62, 0.55
 
 
 @dataclass(frozen=True)

@@ -35,7 +35,7 @@ FAINT_INK = "#6b6f76"
 RULE = "#d9dce1"
 PAPER = "#ffffff"
 
-DOTS_PER_INCH = 200
+DOTS_PER_INCH = 150
 #: Height of the middle of small letters above the baseline, in units of the font size.
 X_HEIGHT_MIDDLE = 0.3
 

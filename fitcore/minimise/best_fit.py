@@ -7,14 +7,25 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
+from fitcore.minimise.description import (
+    LEVELS,
+    Notes,
+    correlation,
+    estimates,
+    goodness,
+    identity,
+    measurement_rows,
+    named,
+    tuples,
+)
 from fitcore.minimise.minima import Minimum, find_minima
 from fitcore.minimise.uncertainty import Curvature, curvature_at, hessian
-from fitcore.result import Estimate, FitResult, MeasurementRow, OtherMinimum
+from fitcore.result import FitResult, OtherMinimum
 
 __all__ = ["DEFAULT_DERIVED", "PROFILED", "fit"]
 
@@ -33,26 +44,10 @@ DEFAULT_DERIVED = (
     "side_Rt",
 )
 
-#: Delta chi-square of interval_68 (68.27 %) and interval_95 (95.0 %).
-LEVELS = (1.0, 3.841458820694124)
 #: The two minimisers agree when no parameter differs by more than this many of its standard deviations.
 AGREEMENT = 1e-3
-#: Within this many standard deviations of a bound the parabola says nothing.
-NEAR_BOUND = 3.0
-
-
-@dataclass
-class _Notes:
-    """What happened on the way."""
-
-    flags: list[str] = field(default_factory=list)
-    messages: list[str] = field(default_factory=list)
-    calls: dict[str, int] = field(default_factory=dict)
-
-    def add(self, flag: str, message: str) -> None:
-        if flag not in self.flags:
-            self.flags.append(flag)
-        self.messages.append(message)
+#: How often a fit starts again from a lower minimum that a profile met.
+RESTARTS = 3
 
 
 def fit(
@@ -89,16 +84,38 @@ def fit(
     UnknownNameError, InputError
         A derived quantity that does not exist, is complex, or that the inputs do not determine.
     """
-    names = tuple(derived) if derived is not None else tuple(n for n in DEFAULT_DERIVED if problem.determines(n))
+    names = (
+        tuple(derived) if derived is not None else tuple(n for n in DEFAULT_DERIVED if problem.determines(n))
+    )
     asked = tuple(dict.fromkeys(profile or ()))
     names = tuple(dict.fromkeys((*names, *(n for n in asked if n not in problem.parameter_names))))
     if names:  # raises early, before any work is done
         problem.linearise_quantities(problem.start, names)
-    notes = _Notes()
-    minima = find_minima(problem, size=starts, rng=rng) if problem.n_parameters else _only_point(problem)
+    lower: list[np.ndarray] = []
+    while True:
+        notes = Notes()
+        result = _fit_once(problem, names, asked, notes, {"size": starts, "rng": rng, "extra": lower})
+        if notes.better is None:
+            break
+        if len(lower) == RESTARTS:
+            return replace(result, valid=False)
+        lower.append(notes.better)
+    if lower:
+        flags = (*result.flags, "restarted")
+        said = f"a profile met a lower minimum: fitted again from there ({len(lower)} times)"
+        result = replace(result, flags=flags, message="; ".join(filter(None, (said, result.message))))
+    return result
+
+
+def _fit_once(
+    problem: Any, names: tuple[str, ...], asked: tuple[str, ...], notes: Notes, search: dict[str, Any]
+) -> FitResult:
+    minima = find_minima(problem, **search) if problem.n_parameters else _only_point(problem)
     if not minima:
-        return _failed(problem, notes, "no start of the search is a possible point: check bounds and [parameters] starts")
-    notes.calls["starts"] = starts
+        return _failed(
+            problem, notes, "no start of the search is a possible point: check bounds and [parameters] starts"
+        )
+    notes.calls["starts"] = search["size"]
 
     best = minima[0]
     if not best.converged:
@@ -115,39 +132,48 @@ def fit(
     curvature = curvature_at(problem, theta)
     ok &= _agree(problem, found, best, curvature, notes)
     if not curvature.positive:
-        notes.add("curvature-not-positive", "the second derivatives at the minimum are not positive: errors are unreliable")
+        notes.add(
+            "curvature-not-positive",
+            "the second derivatives at the minimum are not positive: errors are unreliable",
+        )
         ok = False
     ok &= best.converged
 
     wanted = [n for n in PROFILED if n in problem.parameter_names]
     if bounded:  # a parabola knows nothing of ranges: every interval is a profile
-        notes.add("flat-ranges", "flat theory ranges: intervals are profiles, parabolic errors and the p-value are left out")
+        notes.add(
+            "flat-ranges",
+            "flat theory ranges: intervals are profiles, parabolic errors and the p-value are left out",
+        )
         wanted += [p.name for p in problem.parameters if not p.is_range and p.name not in wanted]
         wanted += names
     wanted += [n for n in asked if n not in wanted]
-    parameters, derived_estimates = _estimates(problem, theta, curvature, names, wanted, notes)
+    parameters, derived_estimates = estimates(problem, theta, curvature, names, wanted, notes)
     if curvature.unconstrained.any():
         loose = [n for n, free in zip(problem.parameter_names, curvature.unconstrained, strict=True) if free]
         notes.add("unconstrained", f"the inputs do not constrain {', '.join(loose)}")
         # Points along a valley are no minima of their own.
         minima = [minima[0], *(m for m in minima[1:] if m.chi2 > minima[0].chi2 + 1e-3)]
-    others = tuple(OtherMinimum(_named(problem, m.theta), m.chi2) for m in minima if m is not best)
+    others = tuple(OtherMinimum(named(problem, m.theta), m.chi2) for m in minima if m is not best)
     if any(m.chi2 < chi2 + LEVELS[1] for m in others):
-        notes.add("several-minima", "another minimum lies within Delta chi2 = 3.84: intervals belong to the best one only")
+        notes.add(
+            "several-minima",
+            "another minimum lies within Delta chi2 = 3.84: intervals belong to the best one only",
+        )
     return FitResult(
         valid=bool(ok),
         flags=tuple(notes.flags),
         message="; ".join(notes.messages),
         chi2=chi2,
-        **_goodness(problem, chi2, curvature),
-        **_identity(problem),
+        **goodness(problem, chi2, curvature),
+        **identity(problem),
         parameters=parameters,
         derived=derived_estimates,
-        measurements=_measurement_rows(problem, theta, curvature.covariance),
+        measurements=measurement_rows(problem, theta, curvature.covariance),
         parameter_names=problem.parameter_names,
         correlation_names=problem.parameter_names,
-        correlation_matrix=_tuples(_correlation(curvature.covariance)),
-        covariance_matrix=_tuples(curvature.covariance),
+        correlation_matrix=tuples(correlation(curvature.covariance)),
+        covariance_matrix=tuples(curvature.covariance),
         other_minima=others,
         n_calls=notes.calls,
     )
@@ -156,7 +182,7 @@ def fit(
 # -- minimising -----------------------------------------------------------------------------------------------------
 
 
-def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Notes) -> tuple[np.ndarray, bool]:
+def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes) -> tuple[np.ndarray, bool]:
     """MIGRAD and HESSE with the exact gradient, from the start of the search, not from where the search ended."""
     from iminuit import Minuit
 
@@ -183,10 +209,15 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Note
             # A ridge keeps unconstrained directions from stopping the linear algebra.
             return curve + 1e-9 * np.diag(np.maximum(np.diagonal(curve), 1e-3))
 
-        engine = Minuit(value, np.zeros(len(start)), grad=gradient, hessian=second, name=problem.parameter_names)
+        engine = Minuit(
+            value, np.zeros(len(start)), grad=gradient, hessian=second, name=problem.parameter_names
+        )
         engine.errordef = Minuit.LEAST_SQUARES
         engine.limits = [
-            ((p.lower - s) / c if math.isfinite(p.lower) else None, (p.upper - s) / c if math.isfinite(p.upper) else None)
+            (
+                (p.lower - s) / c if math.isfinite(p.lower) else None,
+                (p.upper - s) / c if math.isfinite(p.upper) else None,
+            )
             for p, s, c in zip(problem.parameters, start, scales, strict=True)
         ]
         engine.errors = np.ones(len(start))
@@ -199,7 +230,7 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Note
                 break
         return engine
 
-    tried = []
+    tried: list[np.ndarray] = []
     for start in (problem.start, best.start):
         if any(np.array_equal(start, other) for other in tried) or not math.isfinite(problem.chi2(start)):
             continue
@@ -211,13 +242,17 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Note
     notes.calls |= calls
     ok = bool(engine.valid)
     if not ok:
-        notes.add("migrad-not-converged", f"MIGRAD did not converge (estimated distance {engine.fmin.edm:.2g})")
+        notes.add(
+            "migrad-not-converged", f"MIGRAD did not converge (estimated distance {engine.fmin.edm:.2g})"
+        )
     if any(abs(engine.fval - m.chi2) < 1e-3 for m in minima[1:]) and engine.fval > best.chi2 + 1e-3:
         notes.add("migrad-elsewhere", "MIGRAD stopped in another minimum than the best one found")
     return theta, ok
 
 
-def _trust_region(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: _Notes) -> tuple[np.ndarray, bool]:
+def _trust_region(
+    problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
+) -> tuple[np.ndarray, bool]:
     """SciPy's bounded trust-region solver in place of MIGRAD, which stalls where flat ranges leave directions open."""
     from scipy.optimize import least_squares
 
@@ -256,7 +291,7 @@ def _difference(problem: Any, left: np.ndarray, right: np.ndarray) -> np.ndarray
     for i, parameter in enumerate(problem.parameters):
         if parameter.period:
             gap[i] -= parameter.period * np.rint(gap[i] / parameter.period)
-    return gap
+    return np.asarray(gap)
 
 
 def _only_point(problem: Any) -> list[Minimum]:
@@ -266,7 +301,7 @@ def _only_point(problem: Any) -> list[Minimum]:
     return [Minimum(point, chi2, point, 1, True)] if math.isfinite(chi2) else []
 
 
-def _agree(problem: Any, theta: np.ndarray, best: Minimum, curvature: Curvature, notes: _Notes) -> bool:
+def _agree(problem: Any, theta: np.ndarray, best: Minimum, curvature: Curvature, notes: Notes) -> bool:
     sigma = np.sqrt(np.clip(np.diagonal(curvature.covariance), 0.0, None))
     solid = (sigma > 0) & ~curvature.unconstrained
     # On a flat range any point is as good as another; the ranges are compared through chi-square only.
@@ -284,161 +319,6 @@ def _agree(problem: Any, theta: np.ndarray, best: Minimum, curvature: Curvature,
     return True
 
 
-# -- describing -----------------------------------------------------------------------------------------------------
-
-
-def _estimates(
-    problem: Any, theta: np.ndarray, curvature: Curvature, names: tuple[str, ...], wanted: list[str], notes: _Notes
-) -> tuple[dict[str, Estimate], dict[str, Estimate]]:
-    sigma = np.sqrt(np.clip(np.diagonal(curvature.covariance), 0.0, None))
-    lower = np.array([p.lower for p in problem.parameters])
-    upper = np.array([p.upper for p in problem.parameters])
-    at_bound = ((theta - lower) < NEAR_BOUND * sigma) | ((upper - theta) < NEAR_BOUND * sigma)
-    # With flat ranges about, no parabola is to be trusted.
-    at_bound |= any(p.is_range for p in problem.parameters)
-    near = [n for n, b, loose in zip(problem.parameter_names, at_bound, curvature.unconstrained, strict=True) if b and not loose]
-    # A flat range has no interval of interest; it is reported by its value alone unless asked for.
-    ranged = {p.name for p in problem.parameters if p.is_range}
-    wanted = [*wanted, *(n for n in near if n not in wanted and n not in ranged)]
-    intervals = _profile(problem, theta, curvature, wanted, notes)
-    if not ranged and (near_named := near):
-        notes.add("near-bound", f"{', '.join(near_named)} near a bound: no parabolic error")
-
-    parameters = {}
-    for i, parameter in enumerate(problem.parameters):
-        loose = bool(curvature.unconstrained[i])
-        error = None if loose or at_bound[i] or sigma[i] == 0 else float(sigma[i])
-        parameters[parameter.name] = _estimate(parameter.name, theta[i], error, parameter.unit, intervals, loose)
-    derived = {}
-    if names:
-        values, gradient = problem.linearise_quantities(theta, names)
-        for name, value, slope in zip(names, values, gradient, strict=True):
-            variance = float(slope @ curvature.covariance @ slope)
-            touched = curvature.leaves_loose(slope)
-            bad = touched or bool(ranged) or not math.isfinite(variance)
-            error = None if bad else math.sqrt(max(variance, 0.0))
-            derived[name] = _estimate(name, value, error, problem.unit_of(name), intervals, touched)
-    return parameters, derived
-
-
-def _estimate(
-    name: str, value: float, error: float | None, unit: str, intervals: dict[str, Any], loose: bool
-) -> Estimate:
-    value = float(value)
-    if name in intervals and not loose:
-        first, second = intervals[name]
-        return Estimate(value, error, first, second, "profile", unit)
-    if error is None:
-        return Estimate(value, None, None, None, "linear", unit)
-    widths = [math.sqrt(level) * error for level in LEVELS]
-    return Estimate(
-        value, error, (value - widths[0], value + widths[0]), (value - widths[1], value + widths[1]), "linear", unit
-    )
-
-
-def _profile(
-    problem: Any, theta: np.ndarray, curvature: Curvature, wanted: list[str], notes: _Notes
-) -> dict[str, tuple[Any, Any]]:
-    from fitcore.minimise.profile import profile_intervals
-
-    loose = {n for n, free in zip(problem.parameter_names, curvature.unconstrained, strict=True) if free}
-    wanted = [n for n in wanted if n not in loose]
-    if not wanted:
-        return {}
-    found = profile_intervals(problem, theta, wanted, delta_chi2=LEVELS)
-    result = {}
-    if found.better_minimum is not None:
-        notes.add("better-minimum", f"the profiles met a lower minimum, chi2 = {found.minimum:.6g}: fit again from there")
-    for name in dict.fromkeys(name for name, *_ in found.flagged):
-        notes.add("profile-failed", f"an end of the interval of {name} could not be found: it reaches at least that far")
-    for name, pair in found.items():
-        if any(not (lo <= hi) for lo, hi, *_ in pair):
-            notes.add("profile-failed", f"the profile of {name} could not be followed to its crossing")
-            continue
-        result[name] = tuple((float(lo), float(hi)) for lo, hi, *_ in pair)
-        if any(lo_open or hi_open for _, _, lo_open, hi_open in pair):
-            notes.add("open-interval", f"an interval of {name} ends at a bound")
-    return result
-
-
-def _goodness(problem: Any, chi2: float, curvature: Curvature) -> dict[str, Any]:
-    from scipy.special import chdtrc
-
-    degrees = problem.terms.degrees_of_freedom - curvature.rank
-    has_ranges = any(p.is_range for p in problem.parameters)
-    p_value = None if has_ranges or degrees <= 0 else float(chdtrc(degrees, chi2))
-    return {"degrees_of_freedom": int(degrees), "p_value": p_value}
-
-
-def _identity(problem: Any) -> dict[str, Any]:
-    from fitcore.provenance import provenance
-
-    inputs = problem.inputs
-    return {
-        "hypothesis": problem.hypothesis,
-        "theory_errors": problem.theory_errors,
-        "title": inputs.title,
-        "inputs_name": inputs.name,
-        "inputs_sha256": inputs.sha256,
-        "inputs_revision": inputs.revision or 0,
-        "notices": tuple((notice.kind, notice.id, notice.text) for notice in inputs.notices),
-        "fixed": dict(problem.fixed),
-        "provenance": provenance(problem),
-    }
-
-
-def _measurement_rows(problem: Any, theta: np.ndarray, covariance: np.ndarray) -> tuple[MeasurementRow, ...]:
-    quantities = tuple(dict.fromkeys(entry.quantity for entry in problem.entries))
-    _, gradient = problem.linearise_quantities(theta, quantities)
-    spread = dict(
-        zip(quantities, np.sqrt(np.clip(np.einsum("qi,ij,qj->q", gradient, covariance, gradient), 0.0, None)), strict=True)
-    )
-    predicted = problem.predictions(theta)
-    u = problem.terms.standardised(predicted[:, None])[:, 0]
-    pulled = u.copy()
-    for block in problem.terms.correlation_blocks:
-        pulled[block.indices] = block.inverse @ u[block.indices]
-    rows = []
-    for entry, fitted, share in zip(problem.entries, predicted, u * pulled, strict=True):
-        difference = entry.value - fitted
-        if entry.period:
-            difference -= entry.period * round(difference / entry.period)
-            fitted = entry.value - difference
-        error = entry.minus if difference > 0 else entry.plus
-        rows.append(
-            MeasurementRow(
-                id=entry.id,
-                quantity=entry.quantity,
-                measured=entry.value,
-                error_plus=entry.plus,
-                error_minus=entry.minus,
-                fitted=float(fitted),
-                pull=float(difference / error),
-                unit=entry.unit,
-                kind=entry.kind,
-                groups=tuple(entry.groups),
-                fitted_error=float(spread[entry.quantity]),
-                share=float(share),
-            )
-        )
-    return tuple(rows)
-
-
-def _failed(problem: Any, notes: _Notes, message: str) -> FitResult:
+def _failed(problem: Any, notes: Notes, message: str) -> FitResult:
     notes.add("no-start", message)
-    return FitResult(valid=False, flags=tuple(notes.flags), message=message, **_identity(problem))
-
-
-def _named(problem: Any, theta: np.ndarray) -> dict[str, float]:
-    return {name: float(value) for name, value in zip(problem.parameter_names, theta, strict=True)}
-
-
-def _correlation(covariance: np.ndarray) -> np.ndarray:
-    sigma = np.sqrt(np.clip(np.diagonal(covariance), 0.0, None))
-    with np.errstate(all="ignore"):
-        matrix = covariance / np.outer(sigma, sigma)
-    return np.asarray(np.clip(matrix, -1.0, 1.0))
-
-
-def _tuples(matrix: np.ndarray) -> tuple[tuple[float, ...], ...]:
-    return tuple(tuple(float(x) for x in row) for row in matrix)
+    return FitResult(valid=False, flags=tuple(notes.flags), message=message, **identity(problem))

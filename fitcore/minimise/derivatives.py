@@ -1,8 +1,8 @@
 """Exact forward derivatives on batches, sparse by support.
 
 A `Dual` is an array together with one tangent array per parameter it depends on, and only those. Formulas written
-with NumPy's ufuncs (and ``np.where``, ``np.sum``, ``np.angle``, ``np.real``, ``np.imag``, indexing) run on it unchanged,
-through NumPy's dispatch protocols. A formula that uses anything else is differentiated by central differences in
+with NumPy's ufuncs (and ``np.where``, ``np.sum``, ``np.angle``, ``np.real``, ``np.imag``, indexing) run on it
+unchanged, through NumPy's dispatch protocols. A formula that uses anything else is differentiated by central differences in
 its own few arguments, which `call_with_derivatives` arranges.
 
 Complex arrays carry complex tangents with respect to the real parameters, so ``np.abs`` and ``np.conjugate``, which
@@ -18,12 +18,12 @@ from typing import Any
 import numpy as np
 from numpy.lib.mixins import NDArrayOperatorsMixin
 
-__all__ = ["Dual", "UnsupportedOperation", "call_with_derivatives", "seed", "tangents_of"]
+__all__ = ["Dual", "UnsupportedOperationError", "call_with_derivatives", "seed", "tangents_of"]
 
 Support = tuple[int, ...]
 
 
-class UnsupportedOperation(TypeError):
+class UnsupportedOperationError(TypeError):
     """An operation that has no derivative rule here."""
 
 
@@ -138,15 +138,15 @@ class Dual(NDArrayOperatorsMixin):
 
     def __array__(self, *_: Any, **__: Any) -> Any:
         # Without this, np.asarray would make an array of objects and the derivatives would be lost in silence.
-        raise UnsupportedOperation("a derivative-carrying array cannot become a plain array")
+        raise UnsupportedOperationError("a derivative-carrying array cannot become a plain array")
 
     def __float__(self) -> float:
-        raise UnsupportedOperation("a derivative-carrying array cannot become a plain number")
+        raise UnsupportedOperationError("a derivative-carrying array cannot become a plain number")
 
-    __complex__ = __int__ = __float__  # type: ignore[assignment]
+    __complex__ = __int__ = __float__
 
     def __bool__(self) -> bool:
-        raise UnsupportedOperation("the truth value of a batch is undefined; use np.where")
+        raise UnsupportedOperationError("the truth value of a batch is undefined; use np.where")
 
     def __repr__(self) -> str:
         return f"Dual(shape={self.shape}, support={self.support})"
@@ -155,17 +155,17 @@ class Dual(NDArrayOperatorsMixin):
 
     def __array_ufunc__(self, ufunc: np.ufunc, method: str, *inputs: Any, **kwargs: Any) -> Any:
         if method != "__call__" or any(value is not None for value in kwargs.values()):
-            raise UnsupportedOperation(f"{ufunc.__name__}.{method} with {sorted(kwargs)}")
+            raise UnsupportedOperationError(f"{ufunc.__name__}.{method} with {sorted(kwargs)}")
         if len(inputs) == 1:
             return _unary(ufunc, inputs[0])
         if len(inputs) == 2:
             return _binary(ufunc, inputs[0], inputs[1])
-        raise UnsupportedOperation(ufunc.__name__)
+        raise UnsupportedOperationError(ufunc.__name__)
 
     def __array_function__(self, function: Any, types: Any, args: Any, kwargs: Any) -> Any:
         rule = _FUNCTIONS.get(function)
         if rule is None:
-            raise UnsupportedOperation(function.__name__)
+            raise UnsupportedOperationError(function.__name__)
         return rule(*args, **kwargs)
 
 
@@ -206,7 +206,7 @@ def call_with_derivatives(function: Callable[..., Any], arguments: list[Any]) ->
     try:
         return function(*arguments)
     except (TypeError, AttributeError):
-        # UnsupportedOperation, or a method or argument that only plain arrays have; an error of the formula's own
+        # UnsupportedOperationError, or a method or argument that only plain arrays have; an error of the formula's own
         # comes out of the plain call.
         return _by_differences(function, arguments)
 
@@ -281,7 +281,7 @@ def _unary(ufunc: np.ufunc, x: Dual) -> Any:
         return value
     slope = _SLOPES.get(ufunc)
     if slope is None:
-        raise UnsupportedOperation(ufunc.__name__)
+        raise UnsupportedOperationError(ufunc.__name__)
     return Dual(value, x.support, _scale(slope(x.value, value), x, np.ndim(value)))
 
 
@@ -356,7 +356,7 @@ def _binary(ufunc: np.ufunc, x: Any, y: Any) -> Any:
         return Dual(value, x.support, _scale(np.copysign(1.0, b) * np.sign(a), x, np.ndim(value)))
     if ufunc is np.remainder and not isinstance(y, Dual):
         return Dual(value, x.support, _lift(x.tangents, np.ndim(value)))
-    raise UnsupportedOperation(ufunc.__name__)
+    raise UnsupportedOperationError(ufunc.__name__)
 
 
 def _divide(x: Any, y: Any) -> Dual:
@@ -405,7 +405,7 @@ def _where(condition: Any, x: Any, y: Any) -> Any:
 def _sum(x: Dual, axis: int = -1) -> Dual:
     tangents = np.broadcast_to(x.tangents, (len(x.support), *x.shape))
     if axis is None or axis >= 0:
-        raise UnsupportedOperation("np.sum takes axis=-1, -2, ... here, so that any leading batch shape works")
+        raise UnsupportedOperationError("np.sum takes axis=-1, -2, ... here, so that any leading batch shape works")
     return Dual(np.sum(x.value, axis=axis), x.support, np.sum(tangents, axis=axis))
 
 

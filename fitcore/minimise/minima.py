@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -86,7 +87,12 @@ def _kronecker(size: int, dimensions: int, rng: np.random.Generator) -> np.ndarr
 
 
 def find_minima(
-    problem: Any, *, size: int = 64, rng: np.random.Generator | int | None = 0, data: np.ndarray | None = None
+    problem: Any,
+    *,
+    size: int = 64,
+    rng: np.random.Generator | int | None = 0,
+    data: np.ndarray | None = None,
+    extra: Sequence[np.ndarray] = (),
 ) -> list[Minimum]:
     """Multi-start by the batch solver; distinct minima, best first.
 
@@ -98,6 +104,8 @@ def find_minima(
     rng : Generator or seed
     data : ndarray, shape (m,), optional
         Measured values in place of the entries' own.
+    extra : sequence of ndarray, shape (n,)
+        Further starts.
 
     Returns
     -------
@@ -106,7 +114,7 @@ def find_minima(
     """
     from fitcore.minimise.batch_solver import minimise_batch
 
-    starts = start_points(problem, size, rng=rng)
+    starts = np.concatenate([start_points(problem, size, rng=rng), *(np.atleast_2d(point) for point in extra)])
     rows = None if data is None else np.broadcast_to(data, (len(starts), problem.n_entries))
     alive = np.isfinite(problem.chi2(starts, rows))
     if not alive.any():

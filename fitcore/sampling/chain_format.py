@@ -142,7 +142,7 @@ class ChainHeader:
 
     def checksum(self) -> int:
         """CRC-32 of the header's content."""
-        text = json.dumps([self.as_attributes(), list(self.ensembles)], sort_keys=True)
+        text = json.dumps([self.as_attributes(), [int(e) for e in self.ensembles]], sort_keys=True)
         return zlib.crc32(text.encode())
 
 
@@ -220,6 +220,17 @@ def block_checksum(start: int, *arrays: np.ndarray) -> int:
     for array in arrays:
         checksum = zlib.crc32(np.ascontiguousarray(array).data, checksum)
     return checksum
+
+
+def committed_blocks(ends: np.ndarray, committed: int) -> int:
+    """Number of blocks that make up ``committed`` steps; -1 when no block ends there.
+
+    Entries after the last committed block may hold anything: a writer may have died while it wrote them.
+    """
+    if committed == 0:
+        return 0
+    found = np.flatnonzero(ends == committed)
+    return int(found[0]) + 1 if len(found) else -1
 
 
 def pack_state(state: Any) -> np.ndarray:

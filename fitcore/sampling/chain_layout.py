@@ -15,6 +15,7 @@ from fitcore.sampling.chain_format import (
     MAIN_DATASETS,
     STATE_WORDS,
     ChainHeader,
+    committed_blocks,
     store_errors,
 )
 from observables.errors import StoreError
@@ -139,7 +140,7 @@ def _check(path: Path, file: Any) -> tuple[ChainHeader, tuple[str, ...]]:
     walkers, n = len(header.ensembles), len(header.parameter_names)
     committed = int(file["committed_steps"][()])
     ends = file["bookkeeping/block_end"][:]
-    blocks = int(np.searchsorted(ends, committed, side="right")) if committed > 0 else 0
+    blocks = committed_blocks(ends, committed)
     closed_at = int(file["bookkeeping/closed_at"][()])
     consistent = (
         chain.shape[1:] == (walkers, n)
@@ -148,8 +149,8 @@ def _check(path: Path, file: Any) -> tuple[ChainHeader, tuple[str, ...]]:
         and file["accepted"].shape[1:] == (walkers,)
         and committed >= 0
         and all(len(file[name]) >= committed for name in ("chain", "log_posterior", "accepted"))
+        and blocks >= 0
         and np.all(np.diff(ends[:blocks], prepend=0) > 0)
-        and (ends[blocks - 1] if blocks else 0) == committed
         and min(len(file["random_state"]), len(file["bookkeeping/block_checksum"])) >= blocks
         and closed_at in (-1, committed)
     )

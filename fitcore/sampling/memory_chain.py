@@ -7,8 +7,8 @@ from collections.abc import Iterator, Mapping
 import numpy as np
 from emcee.backends import Backend
 
-from fitcore.sampling.chain_file import Block
 from fitcore.sampling.chain_format import ChainHeader
+from fitcore.sampling.chain_reading import Block
 from observables.errors import UnknownNameError
 
 __all__ = ["MemoryChain"]

@@ -11,6 +11,7 @@ import numpy as np
 
 from fitcore.minimise.minima import find_minima
 from fitcore.minimise.uncertainty import curvature_at
+from fitcore.studies.determined import is_determined
 from observables.errors import ConvergenceError, InputError
 
 __all__ = ["BudgetResult", "BudgetRow", "budget"]
@@ -132,14 +133,10 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
         lost = [problem.entries[i % m].id for i in np.flatnonzero(~refits.converged)]
         raise ConvergenceError(f"refits with shifted {', '.join(dict.fromkeys(lost))} did not converge", refits)
 
-    curvature = curvature_at(problem, theta)
-    covariance = curvature.covariance
+    covariance = curvature_at(problem, theta).covariance
     values, gradient = problem.linearise_quantities(theta, wanted)
-    scales = np.array([p.scale for p in problem.parameters])
-    # a flat range leaves its direction open; it is reported as flat instead
-    loose = curvature.unconstrained & ~np.array([p.is_range for p in problem.parameters])
-    for name, slope in zip(wanted, gradient, strict=True):
-        if np.any(np.abs(slope * scales)[loose] > 1e-9 * np.abs(slope * scales).max()):
+    for name in wanted:  # a flat range leaves its direction open; it is reported as flat instead
+        if not is_determined(problem, theta, name, but_ranges=True):
             raise InputError(f"{name}: the inputs do not determine it, so that its uncertainty has no parts")
     moved, _ = problem.linearise_quantities(refits.theta, wanted)
     measured_names = tuple(e.quantity for e in problem.entries)

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 
 from fitcore.minimise.minima import distinct_minima, find_minima, start_points
+from fitcore.studies.determined import is_determined
 from observables.errors import ConvergenceError, InputError, UnknownNameError
 
 __all__ = ["IndirectResult", "IndirectRow", "indirect", "measured_quantities"]
@@ -165,7 +166,7 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
     try:
         rest = problem.without(*left_out) if left_out else problem
         # A free direction would let the quantity run to anything: then nothing else determines it.
-        determined = rest.determines(name) and _constrained(rest, name, known, problem)
+        determined = rest.determines(name) and is_determined(rest, _near(rest, known, problem), name)
     except (InputError, UnknownNameError):
         determined = False
     if not determined:
@@ -231,23 +232,13 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
     )
 
 
-def _constrained(rest: Any, name: str, known: np.ndarray, problem: Any) -> bool:
-    """Whether the remaining entries see every direction in which the quantity changes."""
-    theta = rest.start.copy()
+def _near(rest: Any, known: np.ndarray, problem: Any) -> np.ndarray:
+    """Best fit of everything, as a point of the problem without some entries."""
+    theta = np.array(rest.start)
     for i, parameter in enumerate(rest.parameter_names):
         if parameter in problem.parameter_names:
             theta[i] = known[0][problem.parameter_names.index(parameter)]
-    scales = np.array([p.scale for p in rest.parameters])
-    jacobian = np.nan_to_num(rest.jacobian(theta)) * scales
-    _, gradient = rest.linearise_quantities(theta, [name])
-    slope = np.nan_to_num(gradient[0]) * scales
-    norms = np.linalg.norm(jacobian, axis=0)
-    if np.any((norms == 0) & (slope != 0)):
-        return False
-    unit = 1.0 / np.where(norms > 0, norms, 1.0)
-    scaled = slope * unit
-    solution, *_ = np.linalg.lstsq((jacobian * unit).T, scaled, rcond=1e-9)
-    return bool(np.linalg.norm((jacobian * unit).T @ solution - scaled) <= 1e-6 * max(np.linalg.norm(scaled), 1e-300))
+    return theta
 
 
 def _excess_without_overlap(

@@ -49,9 +49,11 @@ class OutlookRow:
     value : float
         Best fit today, which is the truth assumed for the future.
     now_68, future_68, now_95, future_95 : (float, float)
-        Profile intervals of both, around the same value where the problem is symmetric.
+        Profile intervals of today's data, and of pseudo-data with future errors.
+    today_68 : (float, float)
+        Profile interval of pseudo-data with today's errors: what the future is fairly compared with.
     gain : float
-        Width of the 68.27 % interval now over that in the future.
+        Width of `today_68` over that of `future_68`; 1 when no error changes.
     """
 
     name: str
@@ -61,10 +63,11 @@ class OutlookRow:
     future_68: tuple[float, float]
     now_95: tuple[float, float]
     future_95: tuple[float, float]
+    today_68: tuple[float, float]
 
     @property
     def gain(self) -> float:
-        return (self.now_68[1] - self.now_68[0]) / (self.future_68[1] - self.future_68[0])
+        return (self.today_68[1] - self.today_68[0]) / (self.future_68[1] - self.future_68[0])
 
 
 @dataclass(frozen=True)
@@ -103,6 +106,7 @@ class OutlookResult:
                     "future_68": list(row.future_68),
                     "now_95": list(row.now_95),
                     "future_95": list(row.future_95),
+                    "today_68": list(row.today_68),
                     "gain": row.gain,
                 }
                 for row in self.rows
@@ -233,7 +237,7 @@ def outlook(
         for e in problem.inputs.entries
         if e.id not in predicted and e.quantity in place
     }
-    entries = []
+    entries, same = [], []
     changed = []
     for entry in problem.inputs.entries:
         value = predicted[entry.id]
@@ -242,11 +246,13 @@ def outlook(
         if (plus, minus) != (entry.plus, entry.minus):
             changed.append((entry.id, math.sqrt(entry.plus * entry.minus), math.sqrt(plus * minus), entry.unit))
         errors = {name: error * plus / entry.plus for name, error in entry.errors.items()}
+        same.append(replace(entry, value=float(value)))
         entries.append(replace(entry, value=float(value), plus=plus, minus=minus, errors=errors))
-    then = problem.with_entries(entries)
+    then, today = problem.with_entries(entries), problem.with_entries(same)
     now_intervals = profile_intervals(problem, theta, wanted, delta_chi2=LEVELS)
     # The pseudo-data sit at the predictions, so today's best fit is also the future one.
     future_intervals = profile_intervals(then, theta, wanted, delta_chi2=LEVELS)
+    today_intervals = profile_intervals(today, theta, wanted, delta_chi2=LEVELS[:1])
     values, _ = problem.linearise_quantities(theta, wanted)
     rows = []
     for name, value in zip(wanted, values, strict=True):
@@ -260,10 +266,11 @@ def outlook(
                 _pair(later[0]),
                 _pair(now[1]),
                 _pair(later[1]),
+                _pair(today_intervals[name][0]),
             )
         )
     flags = ["several-minima"] if len(minima) > 1 and minima[1].chi2 < minima[0].chi2 + LEVELS[1] else []
-    lost = {name for table in (now_intervals, future_intervals) for name, _, _ in table.flagged}
+    lost = {name for table in (now_intervals, future_intervals, today_intervals) for name, _, _ in table.flagged}
     flags += [f"interval-not-found: {name}" for name in wanted if name in lost]
     return OutlookResult(plan.title, tuple(changed), tuple(rows), tuple(flags))
 

@@ -50,7 +50,13 @@ def small_catalogue():
         ("turn", 30.0, {"unit": "deg", "period": 360.0, "scale": 1.0, "lower": -360.0, "upper": 360.0}),
         ("hidden_shift", 0.0, {"lower": -1.0, "upper": 1.0, "fixed": True}),
     ]:
-        settings = {"unit": "1", "start": start, "scale": 0.1, "title": f"the {name}", "latex": name[0]} | more
+        settings = {
+            "unit": "1",
+            "start": start,
+            "scale": 0.1,
+            "title": f"the {name}",
+            "latex": name[0],
+        } | more
         catalogue.parameter(name, **settings)
     catalogue.constant("gauge", 2.0, error=0.1, unit="1", source="invented")
 

@@ -17,7 +17,14 @@ def rich(make, tables):
     m, block = tables.measurement, tables.correlated
     return make(
         block("pair", ["at_one", "at_three"], [1.3, 3.1], [0.2, 0.3], [[1.0, 0.6], [0.6, 1.0]]),
-        block("same", ["square", "square"], [1.1, 0.8], [0.3, 0.2], [[1.0, -0.4], [-0.4, 1.0]], ids=["s-1", "s-2"]),
+        block(
+            "same",
+            ["square", "square"],
+            [1.1, 0.8],
+            [0.3, 0.2],
+            [[1.0, -0.4], [-0.4, 1.0]],
+            ids=["s-1", "s-2"],
+        ),
         m("named-1", "at_two", 2.0, {"statistical": 0.1, "common": 0.2}),
         m("named-2", "square", 1.2, {"statistical": 0.2, "common": -0.1}),
         m("named-3", "product", 4.4, {"statistical": 0.5, "common": 0.3}, unit="GeV"),
@@ -34,7 +41,9 @@ def rich(make, tables):
 @pytest.fixture
 def points(rich):
     rng = np.random.default_rng(5)
-    theta = rich.start + np.array([p.scale for p in rich.parameters]) * rng.normal(size=(37, rich.n_parameters))
+    theta = rich.start + np.array([p.scale for p in rich.parameters]) * rng.normal(
+        size=(37, rich.n_parameters)
+    )
     place = rich.parameter_names.index
     theta[:, place("width")] = rng.uniform(1.2, 4.0, 37)
     theta[:, place("turn")] = rng.uniform(-179.0, 179.0, 37)
@@ -136,10 +145,12 @@ def test_derivatives_of_real_inputs(name):
         lin.normal.dense() * np.outer(scales, scales), normal, rtol=1e-9, atol=1e-12 * normal.max()
     )
     slopes = differences(problem.residuals, theta, 0.02 * scales)
-    np.testing.assert_allclose(jacobian * scales, slopes * scales, rtol=1e-6, atol=1e-8 * np.abs(jacobian * scales).max())
+    np.testing.assert_allclose(
+        jacobian * scales, slopes * scales, rtol=1e-6, atol=1e-8 * np.abs(jacobian * scales).max()
+    )
 
 
-# -- batches ----------------------------------------------------------------------------------------------------------------
+# -- batches -------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("size", [1, 2, 3, 8, 37])
@@ -189,7 +200,7 @@ def test_points_are_not_changed(rich, points):
     assert np.array_equal(points, before)
 
 
-# -- other data ---------------------------------------------------------------------------------------------------------------
+# -- other data ----------------------------------------------------------------------------------------------
 
 
 def test_data_replaces_the_measured_values_row_by_row(make, tables, rich, points):
@@ -203,7 +214,10 @@ def test_data_replaces_the_measured_values_row_by_row(make, tables, rich, points
     lin, residuals = rich.linearise(points, data), rich.residuals(points, data)
     assert np.array_equal(lin.chi2, rows)
     np.testing.assert_allclose(
-        lin.gradient, 2 * np.einsum("bm,bmn->bn", residuals, rich.jacobian(points, data)), rtol=1e-11, atol=1e-10
+        lin.gradient,
+        2 * np.einsum("bm,bmn->bn", residuals, rich.jacobian(points, data)),
+        rtol=1e-11,
+        atol=1e-10,
     )
     changed = make(tables.measurement("x", "at_one", 1.3, [0.4, 0.2]))
     original = make(tables.measurement("x", "at_one", 1.0, [0.4, 0.2]))
@@ -243,7 +257,7 @@ def test_pseudo_data_follow_the_terms(rich, points):
     assert abs(chi2.mean() - rich.n_entries) < 5 * math.sqrt(2 * rich.n_entries / size)
 
 
-# -- impossible points ----------------------------------------------------------------------------------------------------------
+# -- impossible points ---------------------------------------------------------------------------------------
 
 
 def test_impossible_points(rich, points):
@@ -283,7 +297,9 @@ def test_a_kink_does_not_poison_the_rest(make, tables, catalogue):
         return np.abs(wave - 1.0) + slope  # no slope in turn at turn = 0
 
     catalogue.quantity(unit="1", title="kink", source="invented")(size_of_wave)
-    problem = make(tables.measurement("k", "size_of_wave", 1.5, 0.1), tables.measurement("t", "turn", 3, 1, unit="deg"))
+    problem = make(
+        tables.measurement("k", "size_of_wave", 1.5, 0.1), tables.measurement("t", "turn", 3, 1, unit="deg")
+    )
     theta = {"slope": 1.0, "turn": 0.0}
     lin = problem.linearise(theta)
     assert lin.chi2[0] == pytest.approx(25.0 + 9.0)
@@ -293,7 +309,9 @@ def test_a_kink_does_not_poison_the_rest(make, tables, catalogue):
 
 
 def test_angles_wrap(make, tables):
-    problem = make(tables.measurement("a", "direction", 175.0, 5.0, unit="deg"), tables.measurement("o", "offset", 0, 1))
+    problem = make(
+        tables.measurement("a", "direction", 175.0, 5.0, unit="deg"), tables.measurement("o", "offset", 0, 1)
+    )
     turn = problem.parameter_names.index("turn")
     theta = np.tile(problem.start, (5, 1))
     theta[:, turn] = [170.0, 175.0, -175.0, -175.0 + 360.0, -5.0 + 1e-9]

@@ -88,7 +88,9 @@ def test_a_round_trip_is_exact(result):
 
 def test_every_field_takes_part_in_the_round_trip():
     default = FitResult()
-    unchanged = [f.name for f in dataclasses.fields(FULL) if same(getattr(FULL, f.name), getattr(default, f.name))]
+    unchanged = [
+        f.name for f in dataclasses.fields(FULL) if same(getattr(FULL, f.name), getattr(default, f.name))
+    ]
     assert unchanged == [], "the example has to differ from the default everywhere"
 
 
@@ -111,7 +113,14 @@ def test_the_documented_keys():
         "measurements", "correlation", "other_minima",
     } <= data.keys()  # fmt: skip
     assert {"name", "sha256"} <= data["inputs"].keys()
-    assert data["parameters"]["a"].keys() == {"value", "error", "interval_68", "interval_95", "method", "unit"}
+    assert data["parameters"]["a"].keys() == {
+        "value",
+        "error",
+        "interval_68",
+        "interval_95",
+        "method",
+        "unit",
+    }
     assert {"id", "quantity", "measured", "error", "fitted", "pull"} <= data["measurements"][0].keys()
     assert data["correlation"].keys() == {"names", "matrix"}
     assert data["other_minima"][0].keys() == {"parameters", "chi2"}
@@ -141,7 +150,12 @@ def test_numpy_numbers_become_plain():
         provenance={"ok": np.bool_(True)},
     )
     data = json.loads(result.to_json())
-    assert (data["chi2"], data["degrees_of_freedom"], data["fixed"]["a"], data["n_calls"]["chi2"]) == (1.5, 3, 0.5, 4)
+    assert (data["chi2"], data["degrees_of_freedom"], data["fixed"]["a"], data["n_calls"]["chi2"]) == (
+        1.5,
+        3,
+        0.5,
+        4,
+    )
     assert data["provenance"]["ok"] is True
 
 
@@ -151,7 +165,9 @@ def test_values_of_the_parameters():
 
 def test_a_newer_format_is_refused():
     data = FULL.to_dict() | {"format_version": FORMAT_VERSION + 1}
-    with pytest.raises(StoreError, match=rf"format {FORMAT_VERSION + 1}, this weakmix reads up to {FORMAT_VERSION}"):
+    with pytest.raises(
+        StoreError, match=rf"format {FORMAT_VERSION + 1}, this weakmix reads up to {FORMAT_VERSION}"
+    ):
         FitResult.from_dict(data)
 
 
@@ -164,7 +180,7 @@ def test_what_is_no_stored_fit(text):
     assert isinstance(caught.value, OSError)
 
 
-@pytest.mark.parametrize("key", [key for key in FULL.to_dict()])
+@pytest.mark.parametrize("key", list(FULL.to_dict()))
 def test_a_missing_key_is_told(key):
     data = FULL.to_dict()
     del data[key]

@@ -70,7 +70,9 @@ class Checker:
             rho, eta = self.inputs.index("wolfenstein_rhobar"), self.inputs.index("wolfenstein_etabar")
             for _ in range(1000):
                 apex = points[rho] + 1j * points[eta]
-                close = (np.abs(apex) < CLEARANCE) | (np.abs(1 - apex) < CLEARANCE) | (np.abs(points[eta]) < 0.05)
+                close = (
+                    (np.abs(apex) < CLEARANCE) | (np.abs(1 - apex) < CLEARANCE) | (np.abs(points[eta]) < 0.05)
+                )
                 if not close.any():
                     break
                 points[rho, close] = self.rng.uniform(-0.9, 0.9, close.sum())
@@ -97,10 +99,12 @@ class Checker:
         A quantity of either sign passes through zero, and rounding errors do not shrink with it.
         """
         period = self.catalogue[name].period
-        return np.maximum(np.abs(values), period / (2 * np.pi) if period else np.median(np.abs(self.values[name])))
+        return np.maximum(
+            np.abs(values), period / (2 * np.pi) if period else np.median(np.abs(self.values[name]))
+        )
 
 
-# -- values -------------------------------------------------------------------------------------------------------------
+# -- values --------------------------------------------------------------------------------------------------
 
 
 def batch_is_point_by_point(checker):
@@ -177,7 +181,9 @@ def nothing_raises(checker):
     n = len(checker.inputs)
     bounds = np.array([[leaf.lower, leaf.upper] for leaf in checker.parameters.values()]).reshape(n, 2)
     huge = np.where(np.isfinite(bounds), bounds, np.sign(bounds) * 1e6)
-    wild = np.column_stack([huge, huge.mean(axis=1), 3.0 * huge, np.zeros(n), np.full(n, -1.0), np.full(n, np.nan)])
+    wild = np.column_stack(
+        [huge, huge.mean(axis=1), 3.0 * huge, np.zeros(n), np.full(n, -1.0), np.full(n, np.nan)]
+    )
     try:
         checker.evaluate(wild)
         for column in wild.T:
@@ -201,7 +207,7 @@ def _culprit(checker, shape, points=None):
     return "?"
 
 
-# -- physics --------------------------------------------------------------------------------------------------------------
+# -- physics -------------------------------------------------------------------------------------------------
 
 
 def rephasing_changes_nothing(checker, tolerance=1e-12):
@@ -221,9 +227,13 @@ def rephasing_changes_nothing(checker, tolerance=1e-12):
     after = catalogue.compute(physical, at, checker.hypothesis, overrides=turned)
     faults = []
     for name in physical:
-        moved = np.abs(checker.difference(name, after[name], before[name])) / checker.size_of(name, before[name])
+        moved = np.abs(checker.difference(name, after[name], before[name])) / checker.size_of(
+            name, before[name]
+        )
         if not np.all(moved <= tolerance * CANCELLATION.get(name, 1.0)):
-            faults.append(f"{name}: moves by {np.max(moved):.1e} of itself when the quark fields are rephased")
+            faults.append(
+                f"{name}: moves by {np.max(moved):.1e} of itself when the quark fields are rephased"
+            )
     return faults
 
 
@@ -249,7 +259,7 @@ def cp_parity_is_as_declared(checker, tolerance=1e-12):
     return faults
 
 
-# -- declarations -----------------------------------------------------------------------------------------------------------
+# -- declarations --------------------------------------------------------------------------------------------
 
 
 def unit_is_known(catalogue):
@@ -298,7 +308,7 @@ def title_is_stated(catalogue):
     return faults
 
 
-# -- derivatives ------------------------------------------------------------------------------------------------------------
+# -- derivatives ---------------------------------------------------------------------------------------------
 
 
 def derivatives_are_exact(checker, points=6, tolerance=1e-8):
@@ -350,7 +360,8 @@ def derivatives_are_exact(checker, points=6, tolerance=1e-8):
         if wrong.any():
             i, j = np.argwhere(wrong)[0]
             faults.append(
-                f"{name}: derivative with respect to {checker.inputs[i]} is {exact[i, j]!r}, differences say {numeric[i, j]!r}"
+                f"{name}: derivative with respect to {checker.inputs[i]} is {exact[i, j]!r}, "
+                f"differences say {numeric[i, j]!r}"
             )
     return faults
 

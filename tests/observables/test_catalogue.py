@@ -48,7 +48,7 @@ def small():
     return catalogue
 
 
-# -- looking up -------------------------------------------------------------------------------------------------------
+# -- looking up ----------------------------------------------------------------------------------------------
 
 
 def test_nodes_tell_what_they_are(small):
@@ -76,7 +76,15 @@ def test_nodes_are_frozen(small):
 
 
 def test_names_come_in_order_of_declaration_and_by_kind(small):
-    assert small.names() == ("speed", "time", "calibration", "calibration_squared", "distance", "wave", "root")
+    assert small.names() == (
+        "speed",
+        "time",
+        "calibration",
+        "calibration_squared",
+        "distance",
+        "wave",
+        "root",
+    )
     assert small.names("parameter") == ("speed", "time")
     assert small.names("constant") == ("calibration",)
     assert small.names("quantity")[-1] == "root"
@@ -117,23 +125,24 @@ def test_every_look_up_of_an_unknown_name_says_so(small, look_up):
         getattr(small, look_up)("speeed")
 
 
-# -- what may not be declared ------------------------------------------------------------------------------------------
+# -- what may not be declared --------------------------------------------------------------------------------
 
 
 def test_two_owners_of_a_name_are_both_named(small):
+    def distance(speed) -> Real:
+        return speed
+
+    distance.__qualname__ = "elsewhere"
     with pytest.raises(CatalogueError, match="'distance'") as caught:
-
-        def distance(speed) -> Real:
-            return speed
-
-        distance.__qualname__ = "elsewhere"
         add_quantity(small, distance)
     places = str(caught.value).count(f"{__file__}:")
     assert places == 2, f"both places have to be named: {caught.value}"
 
 
 def test_two_parameters_of_one_name_are_both_named(small):
-    with pytest.raises(CatalogueError, match=r"two owners of the name 'speed'.*test_catalogue.*test_catalogue"):
+    with pytest.raises(
+        CatalogueError, match=r"two owners of the name 'speed'.*test_catalogue.*test_catalogue"
+    ):
         small.parameter("speed", unit="1", start=0.0, scale=1.0, title="again")
 
 
@@ -186,7 +195,9 @@ def test_an_annotation_is_compulsory(small):
         return speed
 
     for function in (without, wrong):
-        with pytest.raises(CatalogueError, match=rf"test_catalogue.py:\d+: '{function.__name__}' must say '-> Real'"):
+        with pytest.raises(
+            CatalogueError, match=rf"test_catalogue.py:\d+: '{function.__name__}' must say '-> Real'"
+        ):
             add_quantity(small, function)
 
 
@@ -234,7 +245,7 @@ def test_numbers_of_leaves_become_floats():
     assert isinstance(node.scale, float)
 
 
-# -- families ---------------------------------------------------------------------------------------------------------
+# -- families ------------------------------------------------------------------------------------------------
 
 
 def test_a_family_shares_one_function(small):
@@ -256,7 +267,7 @@ def test_renaming_what_is_no_argument(small):
         add_quantity(small, doubled, ingredients={"elemnt": "speed"})
 
 
-# -- the graph as a whole -----------------------------------------------------------------------------------------------
+# -- the graph as a whole ------------------------------------------------------------------------------------
 
 
 def test_a_missing_ingredient_is_found_at_first_use_and_by_check(small):
@@ -321,7 +332,7 @@ def test_a_copy_is_independent(small):
     assert "mass" not in small
 
 
-# -- folding and pruning --------------------------------------------------------------------------------------------------
+# -- folding and pruning -------------------------------------------------------------------------------------
 
 
 def counted(catalogue, name, ingredients, calls, formula):
@@ -332,7 +343,10 @@ def counted(catalogue, name, ingredients, calls, formula):
         return formula(*values)
 
     namespace = {"inner": function, "Real": Real}
-    exec(f"def {name}({', '.join(ingredients)}) -> Real:\n    return inner({', '.join(ingredients)})", namespace)
+    exec(
+        f"def {name}({', '.join(ingredients)}) -> Real:\n    return inner({', '.join(ingredients)})",
+        namespace,
+    )
     add_quantity(catalogue, namespace[name])
 
 
@@ -395,7 +409,7 @@ def test_intermediate_results_are_dropped_but_targets_and_inputs_stay(small):
     assert np.array_equal(wave, np.exp(1j * distance))
 
 
-# -- computing --------------------------------------------------------------------------------------------------------
+# -- computing -----------------------------------------------------------------------------------------------
 
 
 def test_scalars_in_scalars_out(small):
@@ -421,7 +435,9 @@ def test_batches_keep_their_shape(small, shape):
 
 
 def test_values_broadcast(small):
-    found = small.compute(["distance"], {"speed": np.array([[1.0], [2.0]]), "time": np.array([1.0, 2.0, 3.0])})
+    found = small.compute(
+        ["distance"], {"speed": np.array([[1.0], [2.0]]), "time": np.array([1.0, 2.0, 3.0])}
+    )
     assert found["distance"].tolist() == [[9.0, 18.0, 27.0], [18.0, 36.0, 54.0]]
 
 

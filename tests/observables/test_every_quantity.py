@@ -12,7 +12,9 @@ from observables import catalogue
 from observables.catalogue import Complex, Real
 from observables.graph import find_parameters
 
-_SPEC = importlib.util.spec_from_file_location("quantity_checks", Path(__file__).with_name("quantity_checks.py"))
+_SPEC = importlib.util.spec_from_file_location(
+    "quantity_checks", Path(__file__).with_name("quantity_checks.py")
+)
 checks = importlib.util.module_from_spec(_SPEC)
 _SPEC.loader.exec_module(checks)
 
@@ -23,7 +25,11 @@ def touched(hypothesis):
     """Quantities that a hypothesis moves: those that rest on one of its parameters."""
     overlay = catalogue.get_hypothesis(hypothesis)
     names = catalogue.names("quantity")
-    return [n for n in names if not overlay.parameters.keys().isdisjoint(find_parameters(catalogue, (n,), overlay))]
+    return [
+        n
+        for n in names
+        if not overlay.parameters.keys().isdisjoint(find_parameters(catalogue, (n,), overlay))
+    ]
 
 
 @pytest.fixture(scope="module", params=catalogue.hypothesis_names())
@@ -32,7 +38,9 @@ def checker(request):
     return checks.Checker(catalogue, names, request.param)
 
 
-@pytest.mark.parametrize("check", [*checks.CHECKS_OF_VALUES, checks.fallback_agrees], ids=lambda check: check.__name__)
+@pytest.mark.parametrize(
+    "check", [*checks.CHECKS_OF_VALUES, checks.fallback_agrees], ids=lambda check: check.__name__
+)
 def test_values(checker, check):
     faults = check(checker)
     assert not faults, "\n".join(faults)
@@ -71,7 +79,7 @@ def _upstream(name):
     return found
 
 
-# -- planted faults ---------------------------------------------------------------------------------------------------------
+# -- planted faults ------------------------------------------------------------------------------------------
 
 
 def plant(function, name="planted", **declared):

@@ -184,7 +184,9 @@ def test_families_rename_arguments(small):
     def scaled(standard, size) -> Real:
         return standard * size
 
-    new = overlay(small, "renamed", scaled, parameters=["size_of_height"], ingredients={"size": "size_of_height"})
+    new = overlay(
+        small, "renamed", scaled, parameters=["size_of_height"], ingredients={"size": "size_of_height"}
+    )
     assert small.compute(["top"], {"base": 1.0, "size_of_height": 2.0}, new)["top"] == 21.0
 
 
@@ -197,7 +199,7 @@ def test_a_layer_that_takes_the_quantity_itself_is_a_cycle(small):
         small.compute(["top"], {"base": 1.0}, "snake")
 
 
-# -- what is refused ------------------------------------------------------------------------------------------------------
+# -- what is refused -----------------------------------------------------------------------------------------
 
 
 def test_an_unknown_hypothesis_is_an_error_with_close_matches(small, shifted):
@@ -244,7 +246,9 @@ def test_a_parameter_of_the_catalogue_cannot_be_declared_again(small):
 
 
 def test_a_parameter_is_declared_once(small, shifted):
-    with pytest.raises(CatalogueError, match=r"'shifted' declares the parameter 'shift' twice: .*:\d+ and .*:\d+"):
+    with pytest.raises(
+        CatalogueError, match=r"'shifted' declares the parameter 'shift' twice: .*:\d+ and .*:\d+"
+    ):
         shifted.parameter("shift", unit="1", start=0.0, scale=0.1, title="again")
     for start in (1.0, 2.0):  # the same line may run again
         shifted.parameter("size", unit="1", start=start, scale=0.1, title="again")

@@ -159,3 +159,39 @@ def test_streams_of_a_process(tmp_path: Path) -> None:
     assert (bad.returncode, bad.stdout) == (2, "")
     assert "no-such-file.toml" in bad.stderr
     assert "Traceback" not in bad.stderr
+
+
+def complete(words: str) -> list[str]:
+    """What bash is offered for the last of some words."""
+    parts = words.split(" ")
+    environment = {
+        **os.environ,
+        **{"_WEAKMIX_COMPLETE": "bash_complete", "COMP_WORDS": words, "COMP_CWORD": str(len(parts) - 1)},
+    }
+    code = "from fitcore.commands.main import main; main()"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, env=environment)
+    assert done.stderr == ""
+    return [line.partition(",")[2] for line in done.stdout.splitlines()]
+
+
+@pytest.mark.parametrize(
+    ("words", "offered"),
+    [
+        ("weakmix fi", ["find", "fit"]),
+        ("weakmix fit aver", ["averages-2026", "averages-2026-tree", "aver"]),
+        ("weakmix fit averages-2026 --theory", ["--theory-errors"]),
+        ("weakmix recipe mixing_frequency_B", ["mixing_frequency_Bd", "mixing_frequency_Bs"]),
+    ],
+)
+def test_shell_completion(words: str, offered: list[str]) -> None:
+    assert complete(words) == offered
+
+
+def test_shell_completion_script() -> None:
+    environment = {**os.environ, "_WEAKMIX_COMPLETE": "bash_source"}
+    code = "from fitcore.commands.main import main; main()"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, env=environment)
+    if done.returncode:  # click needs bash 4.4 to write it
+        assert "bash" in done.stderr.lower()
+    else:
+        assert "_WEAKMIX_COMPLETE=bash_complete" in done.stdout

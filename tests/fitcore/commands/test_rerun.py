@@ -55,9 +55,35 @@ def test_a_changed_number_is_found(weakmix: Run, made: Path) -> None:
     assert weakmix("rerun", made).exit_code == 0
 
 
-def test_demo_and_profile_can_be_repeated(weakmix: Run) -> None:
-    assert weakmix("demo", "--no-figures", "--quiet", "--out", "demo").exit_code == 0
-    assert weakmix("rerun", "demo", "--quiet").exit_code == 0
+FUTURE = """
+title = "Twice the data"
+[future]
+"gamma" = { factor = 0.5 }
+"""
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        ("profile", "template.toml", "wolfenstein_rhobar", "--seed", "4"),
+        ("indirect", "template.toml", "angle_gamma"),
+        ("budget", "template.toml", "wolfenstein_etabar"),
+        ("outlook", "template.toml", "future.toml", "wolfenstein_etabar"),
+        ("calibrate", "template.toml", "--toys", "20", "--seed", "4"),
+        ("fit", "template.toml", "--theory-errors", "flat", "--without", "element-ub"),
+        ("demo",),
+    ],
+    ids=lambda arguments: arguments[0],
+)
+def test_every_repeatable_command(weakmix: Run, template: Path, arguments: tuple[str, ...]) -> None:
+    Path("future.toml").write_text(FUTURE)
+    done = weakmix(*arguments, "--no-figures", "--quiet", "--out", "run")
+    assert Path("run").is_dir(), done.output
+    template.unlink()
+    Path("future.toml").unlink()
+    again = weakmix("rerun", "run", "--json", "-")
+    assert again.exit_code == 0, again.stderr
+    assert json.loads(again.stdout)["compared"] > 5
 
 
 @pytest.mark.parametrize(

@@ -124,6 +124,41 @@ def test_chain_export(chain, tmp_path):
     assert "exists already" in result.stderr
 
 
+def test_interrupt_prints_the_command_that_goes_on(tmp_path, monkeypatch):
+    """Ctrl-C after some blocks: exit 0, everything kept, the resume command on the screen."""
+    import signal
+
+    from fitcore.commands import progress
+
+    def interrupt(self, state):
+        if state.phase == "chain" and state.steps >= 128:
+            signal.raise_signal(signal.SIGINT)
+
+    monkeypatch.setattr(progress.ChainProgress, "__call__", interrupt)
+    path = tmp_path / "my chain.h5"
+    arguments = ["averages-2026", "--chain", path, "--without", "alpha-average", "--until", 100_000]
+    result = run(sample_command.command, *arguments)
+    assert result.exit_code == 0, result.output
+    assert "steps are safe" in result.stdout
+    assert f"sample averages-2026 --chain '{path}' --without alpha-average --until 100000" in result.stdout
+    assert run(chain_command.command, "verify", path).exit_code == 0
+
+
+def test_interrupt_during_the_pilot_run(tmp_path, monkeypatch):
+    from fitcore.commands import progress
+
+    def interrupt(self, state):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(progress.ChainProgress, "__call__", interrupt)
+    result = run(sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--until", 50)
+    assert result.exit_code == 0
+    assert "Interrupted during the pilot run" in result.stdout
+    monkeypatch.undo()
+    result = run(sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--effective", 500)
+    assert result.exit_code == 0, result.output
+
+
 def test_progress_in_words():
     state = Progress("chain", 512, 192, 98765.4, 1234.0, 2.345, 0.61, 3.0, 7000.0)
     assert describe(state) == (

@@ -35,7 +35,7 @@ def uninterrupted(writer_script, tmp_path_factory):
     return content(path)
 
 
-@pytest.mark.parametrize("repetitions", [6, pytest.param(100, marks=pytest.mark.slow)])
+@pytest.mark.parametrize("repetitions", [4, pytest.param(100, marks=pytest.mark.slow)])
 def test_kill_at_random_moments(writer_script, uninterrupted, tmp_path, repetitions):
     script = Path(writer_script[1]).with_name("chain_killer.py")
     killed = subprocess.run(
@@ -50,6 +50,20 @@ def test_kill_at_random_moments(writer_script, uninterrupted, tmp_path, repetiti
         for a, b in zip(content(path), uninterrupted, strict=True):
             np.testing.assert_array_equal(a, b)
     assert any(0 < steps < UNTIL for steps in survived), survived
+
+
+def test_reader_never_meets_a_writer_in_the_middle(writer_script, tmp_path):
+    """Whatever moment a reader looks at, it sees a sound chain."""
+    path = tmp_path / "chain.h5"
+    with subprocess.Popen([*writer_script, str(path), "480"], stdout=subprocess.DEVNULL) as process:
+        while not path.exists() and process.poll() is None:
+            time.sleep(0.01)
+        seen = [verify(path).steps]
+        while process.poll() is None:
+            seen.append(verify(path).steps)
+    assert process.returncode == 0
+    assert seen == sorted(seen)
+    assert verify(path).steps == 480
 
 
 def test_full_disk_stops_the_run_and_loses_nothing(writer_script, uninterrupted, tmp_path):
@@ -68,7 +82,7 @@ def test_full_disk_stops_the_run_and_loses_nothing(writer_script, uninterrupted,
 def test_interrupt_from_the_keyboard_commits_and_ends_in_good_order(writer_script, uninterrupted, tmp_path):
     path = tmp_path / "chain.h5"
     with subprocess.Popen(
-        [*writer_script, str(path), str(UNTIL), "0.002"],
+        [*writer_script, str(path), str(UNTIL), "0.0008"],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
