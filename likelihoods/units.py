@@ -41,7 +41,7 @@ hbar = 1 = ħ
 """
 
 _DIMENSIONLESS = {"1": 1.0, "": 1.0, "%": 1e-2, "percent": 1e-2}
-# What nearly every entry is written in, so that a fit does not wait for pint: unit -> dimension, mantissa, power of ten.
+# What nearly every entry is written in, so that a fit does not wait for pint: dimension, mantissa, power of ten.
 _ENERGIES = {"meV": -3, "eV": 0, "keV": 3, "MeV": 6, "GeV": 9, "TeV": 12}
 _TIMES = {"fs": -15, "ps": -12, "ns": -9, "us": -6, "ms": -3, "s": 0}
 _COMMON: dict[str, tuple[str, float, int]] = {

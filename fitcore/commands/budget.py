@@ -77,7 +77,9 @@ def command(
         output.show(*tables_of(result, name))
     output.show(CAUTION)
     if result.flat:
-        output.show(f"Flat ranges have no standard deviation and are not in these budgets: {', '.join(result.flat)}")
+        output.show(
+            f"Flat ranges have no standard deviation and are not in these budgets: {', '.join(result.flat)}"
+        )
     if place is not None:
         output.show(f"\nWritten to {place}")
     output.write_json(result.to_dict())

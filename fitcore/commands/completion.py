@@ -21,9 +21,7 @@ def complete_inputs(
     return [*names, CompletionItem(incomplete, type="file")]
 
 
-def complete_names(
-    _ctx: click.Context, _parameter: click.Parameter, incomplete: str
-) -> list[CompletionItem]:
+def complete_names(_ctx: click.Context, _parameter: click.Parameter, incomplete: str) -> list[CompletionItem]:
     """Offer the names of the catalogue."""
     from click.shell_completion import CompletionItem
 

@@ -43,9 +43,7 @@ class Point:
 
 
 @click.command("compute")
-@click.argument(
-    "quantities", nargs=-1, required=True, metavar="QUANTITY...", shell_complete=complete_names
-)
+@click.argument("quantities", nargs=-1, required=True, metavar="QUANTITY...", shell_complete=complete_names)
 @click.option(
     "--from",
     "source",
@@ -153,8 +151,12 @@ def command(
     output.write_json(content)
     if output.out is not None:
         options = {
-            **{"quantities": list(names), "from": source, "at": list(assignments)},
-            **{"start_values": start_values, "hypothesis": list(hypothesis), "modules": list(modules)},
+            "quantities": list(names),
+            "from": source,
+            "at": list(assignments),
+            "start_values": start_values,
+            "hypothesis": list(hypothesis),
+            "modules": list(modules),
         }
         write_run(output, content, options)
     undefined = [name for name in names if not math.isfinite(abs(computed[name]))]

@@ -108,7 +108,12 @@ def table(result: IndirectResult) -> Table:
         elif row.value is not None:
             implied = number(row.value)
         made.add_row(
-            row.quantity, direct, implied, tables.shown_unit(row.unit), tables.pull(row.tension), ", ".join(row.flags)
+            row.quantity,
+            direct,
+            implied,
+            tables.shown_unit(row.unit),
+            tables.pull(row.tension),
+            ", ".join(row.flags),
         )
     return made
 

@@ -67,7 +67,9 @@ def _load(file: Path) -> None:
         exec(compile(source, str(file), "exec"), module.__dict__)
     except (KeyboardInterrupt, MemoryError):
         raise
-    except BaseException as error:  # whatever a user's file raises, SystemExit included, is the user's to mend
+    except (
+        BaseException
+    ) as error:  # whatever a user's file raises, SystemExit included, is the user's to mend
         sys.modules.pop(name, None)
         if before is not None:
             sys.modules[name] = before

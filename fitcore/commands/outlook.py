@@ -119,7 +119,10 @@ def tables_of(result: OutlookResult) -> list[Table]:
         ("narrower by", "right"),
     )
     for row in result.rows:
-        cells = [with_error(row.value, high - row.value, row.value - low) for low, high in (row.now_68, row.future_68)]
+        cells = [
+            with_error(row.value, high - row.value, row.value - low)
+            for low, high in (row.now_68, row.future_68)
+        ]
         made.add_row(row.name, *cells, tables.shown_unit(row.unit), f"{row.gain:.2f}")
     return [changed, made]
 

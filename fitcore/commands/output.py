@@ -80,6 +80,18 @@ class Output:
     out: Path | None = None
     quiet: bool = False
 
+    def __post_init__(self) -> None:
+        """Refuse a place that cannot take the JSON, before anything is computed."""
+        if self.json is None or self.json == "-":
+            return
+        path = Path(self.json)
+        if path.is_dir() or not path.parent.is_dir():
+            from observables.errors import InputError
+
+            why = "is a folder" if path.is_dir() else f"the folder {path.parent} does not exist"
+            message = f"--json {path}: {why}; give a file in an existing folder"
+            raise InputError(message)
+
     @property
     def json_on_stdout(self) -> bool:
         """Whether stdout belongs to a program."""
@@ -102,6 +114,12 @@ class Output:
                 self.console.print(part)
             else:
                 self.console.print(fit_into(self.console), "")
+
+    def show_as_is(self, text: str) -> None:
+        """Print text whose line breaks mean something, such as code: the terminal may wrap it, this does not."""
+        from rich.text import Text
+
+        self.console.print(Text(text), soft_wrap=True)
 
     def headline(self, what: str, *details: str) -> None:
         """Print the first line of a command: program, what it does to quark mixing, on what."""

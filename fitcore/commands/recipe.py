@@ -62,7 +62,8 @@ def command(name: str, hypothesis: tuple[str, ...], modules: tuple[str, ...], ou
             facts.add_row(label, text)
     output.show(facts)
     for title, text in formulas(node, overlay):
-        output.show(f"[bold]{title}[/bold]", _literal(text), "")
+        output.show(f"[bold]{title}[/bold]")
+        output.show_as_is(text + "\n")
     if node.kind == "quantity":
         output.show("[bold]Ingredients[/bold]", tree(name, overlay), "")
     if parameters:

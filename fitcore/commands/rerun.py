@@ -24,7 +24,9 @@ RELATIVE = 1e-9
 #: ... or of the uncertainty stored beside them; absolute for what is measured in uncertainties already.
 OF_SIGMA = 1e-6
 #: Branches of a result that describe the run, not its outcome.
-NOT_COMPARED = frozenset({"provenance", "inputs", "notices", "n_calls", "format_version", "message", "seconds"})
+NOT_COMPARED = frozenset(
+    {"provenance", "inputs", "notices", "n_calls", "format_version", "message", "seconds"}
+)
 #: Numbers counted in standard deviations, or bounded by one.
 IN_SIGMAS = ("chi2", "chi2_share", "pull", "p_value", "correlation", "covariance", "tension", "minimum")
 MOST_ROWS = 30
@@ -80,7 +82,9 @@ def command(ctx: click.Context, folder: Path, output: Output) -> None:
         output.show(made)
         if len(differences) > MOST_ROWS:
             output.show(f"... and {len(differences) - MOST_ROWS} more; --json lists all of them.")
-    verdict = f"{len(differences)} of {compared} numbers differ" if differences else f"All {compared} numbers agree"
+    verdict = (
+        f"{len(differences)} of {compared} numbers differ" if differences else f"All {compared} numbers agree"
+    )
     output.show(f"{verdict} (to {RELATIVE:g} of themselves, or {OF_SIGMA:g} of their uncertainty).")
     output.write_json(
         {
@@ -127,18 +131,24 @@ def read_run(folder: Path) -> dict[str, Any]:
         message = f"{folder}: was written by a newer weakmix; install one at least as new"
         raise input_error(message)
     if record.get("command") not in REPEATABLE:
-        message = f"{folder}: is a run of {record.get('command')!r}; only {', '.join(REPEATABLE)} can be run again"
+        message = (
+            f"{folder}: is a run of {record.get('command')!r}; only {', '.join(REPEATABLE)} can be run again"
+        )
         raise input_error(message)
     files = record.get("files")
     if not isinstance(files, dict) or not isinstance(record.get("command_line"), list):
         message = f"{folder / 'run.json'}: is incomplete (no files, or no command line)"
         raise input_error(message)
-    needed = dict.fromkeys(["inputs.toml", "result.json", *(n for n in files if n.endswith((".py", ".toml")))])
+    needed = dict.fromkeys(
+        ["inputs.toml", "result.json", *(n for n in files if n.endswith((".py", ".toml")))]
+    )
     faults = []
     for name in needed:
         found = digest(folder / name)
         if found is None:
-            faults.append(f"{folder / name}: is missing or cannot be read; the run cannot be repeated without it")
+            faults.append(
+                f"{folder / name}: is missing or cannot be read; the run cannot be repeated without it"
+            )
         elif found != files.get(name) and name != "result.json":
             faults.append(
                 f"{folder / name}: was changed after the run (sha256 {found[:12]}, recorded "
@@ -188,8 +198,15 @@ def recompute(folder: Path, record: Mapping[str, Any]) -> dict[str, Any]:
     with tempfile.TemporaryDirectory(prefix="weakmix-rerun-") as scratch:
         place = Path(scratch) / "run"
         fixed: dict[str, Any] = {
-            **{"inputs": str(folder / "inputs.toml"), "only": (), "without": (), "settings": ()},
-            **{"json": None, "quiet": True, "out": place, "no_figures": True, "cluster": None},
+            "inputs": str(folder / "inputs.toml"),
+            "only": (),
+            "without": (),
+            "settings": (),
+            "json": None,
+            "quiet": True,
+            "out": place,
+            "no_figures": True,
+            "cluster": None,
             "future": folder / "future.toml",
             "modules": tuple(str(folder / Path(path).name) for path in context.params.get("modules", ())),
         }
@@ -222,7 +239,9 @@ def compare(stored: Any, recomputed: Any) -> tuple[list[Difference], int]:
             tolerance = max(RELATIVE * abs(old), OF_SIGMA * sigma)
             distance = abs(old - new)
             if distance > tolerance:
-                differences.append(Difference(where, old, new, distance / tolerance if tolerance else math.inf))
+                differences.append(
+                    Difference(where, old, new, distance / tolerance if tolerance else math.inf)
+                )
         elif old is not new and old != new:
             differences.append(Difference(where, old, new, math.inf))
     return differences, len(before)
@@ -237,7 +256,9 @@ def _errors(result: Any) -> dict[str, float]:
     table = result.get("covariance") if isinstance(result, dict) else None
     if not isinstance(table, dict) or not table.get("matrix"):
         return {}
-    diagonal = {name: row[i] for i, (name, row) in enumerate(zip(table["names"], table["matrix"], strict=True))}
+    diagonal = {
+        name: row[i] for i, (name, row) in enumerate(zip(table["names"], table["matrix"], strict=True))
+    }
     return {name: math.sqrt(x) for name, x in diagonal.items() if _number(x) and x > 0}
 
 
@@ -285,5 +306,5 @@ def _uncertainty(entry: Mapping[str, Any]) -> float:
             return float(abs(found))
     ends = entry.get("interval_68")
     if isinstance(ends, list) and len(ends) == 2 and all(_number(end) for end in ends):
-        return abs(ends[1] - ends[0]) / 2
+        return float(abs(ends[1] - ends[0])) / 2
     return 0.0

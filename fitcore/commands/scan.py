@@ -178,7 +178,9 @@ def run(
     grids = _grids(problem, axes, near, math.sqrt(highest), each=each)
     found = profile(problem, names, grids, start=thetas[0], minima=thetas[1:])
     if not np.isfinite(found.chi2).any():
-        raise InputError(f"no possible point has {' and '.join(_range_text(a, g) for a, g in zip(axes, grids, strict=True))}")
+        raise InputError(
+            f"no possible point has {' and '.join(_range_text(a, g) for a, g in zip(axes, grids, strict=True))}"
+        )
     found = _widened(problem, axes, found, levels, thetas)
     report(1, 1 + len(others))
     scan = Scan(problem, levels, found, _regions(found, levels), minima[0].chi2)
@@ -246,7 +248,11 @@ def _equal_frame(ranges: list[tuple[float, float]]) -> list[tuple[float, float]]
 
 
 def _widened(
-    problem: Problem, axes: Sequence[Axis], found: Profile, levels: Sequence[float], thetas: Sequence[np.ndarray]
+    problem: Problem,
+    axes: Sequence[Axis],
+    found: Profile,
+    levels: Sequence[float],
+    thetas: Sequence[np.ndarray],
 ) -> Profile:
     """Widen an automatic range of one quantity until the outermost interval ends inside it."""
     if len(axes) != 1 or axes[0].low is not None:
@@ -267,9 +273,7 @@ def _widened(
         if (low, high) == (grid[0], grid[-1]):
             break
         wider = np.linspace(low, high, axes[0].points or POINTS[1])
-        found = profile(
-            problem, found.names, [wider], start=found.minimum_parameters, minima=list(thetas)
-        )
+        found = profile(problem, found.names, [wider], start=found.minimum_parameters, minima=list(thetas))
     return found
 
 
@@ -289,7 +293,9 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
     wide = _overview_grids(scan)
     steps = 1 + len(division.constraints)
     # everything together is a spot at this scale: a coarse grid finds its other regions, the frame draws it
-    overview = profile(problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4]))
+    overview = profile(
+        problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4])
+    )
     done, skipped = [], []
     for number, constraint in enumerate(division.constraints):
         report(number + 1, steps)
@@ -302,7 +308,15 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
         done.append(ConstraintProfile(constraint, alone, around, lowest))
     report(steps, steps)
     return Scan(
-        problem, scan.levels, found, scan.regions, scan.start_chi2, division, tuple(done), tuple(skipped), overview
+        problem,
+        scan.levels,
+        found,
+        scan.regions,
+        scan.start_chi2,
+        division,
+        tuple(done),
+        tuple(skipped),
+        overview,
     )
 
 
@@ -331,13 +345,23 @@ def notes(scan: Scan) -> list[str]:
     unreachable = int((found.flagged & ~np.isfinite(found.chi2)).sum())
     failed = int((found.flagged & np.isfinite(found.chi2)).sum())
     if unreachable:
-        said.append(f"{unreachable} of {found.chi2.size} grid points are out of reach: no possible point has these values")
+        said.append(
+            f"{unreachable} of {found.chi2.size} grid points are out of reach: no possible point has these values"
+        )
     if failed:
-        said.append(f"{failed} of {found.chi2.size} grid points are flagged: not minimised, their chi-square is too high")
+        said.append(
+            f"{failed} of {found.chi2.size} grid points are flagged: not minimised, their chi-square is too high"
+        )
     if scan.skipped:
-        said.append(f"not drawn alone, because alone they do not determine the plane: {', '.join(scan.skipped)}")
+        said.append(
+            f"not drawn alone, because alone they do not determine the plane: {', '.join(scan.skipped)}"
+        )
     if scan.each and any(part.profile.flagged.any() for part in scan.each):
-        parts = [f"{p.constraint.name} ({int(p.profile.flagged.sum())})" for p in scan.each if p.profile.flagged.any()]
+        parts = [
+            f"{p.constraint.name} ({int(p.profile.flagged.sum())})"
+            for p in scan.each
+            if p.profile.flagged.any()
+        ]
         said.append(f"flagged points in bands: {', '.join(parts)}")
     return said
 
@@ -357,11 +381,15 @@ def shortcomings(scan: Scan) -> list[str]:
             moved[tuple(edge)] = False
             beside |= failed & moved
     if beside.any():
-        return [f"{int(beside.sum())} grid points beside a region could not be minimised: its edge is uncertain"]
+        return [
+            f"{int(beside.sum())} grid points beside a region could not be minimised: its edge is uncertain"
+        ]
     return []
 
 
-def region_data(regions: tuple[tuple[Any, ...], ...], levels: Sequence[float], dof: int) -> list[dict[str, Any]]:
+def region_data(
+    regions: tuple[tuple[Any, ...], ...], levels: Sequence[float], dof: int
+) -> list[dict[str, Any]]:
     """Regions as plain data."""
     data = []
     for level, parts in zip(levels, regions, strict=True):

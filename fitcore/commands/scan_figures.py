@@ -76,16 +76,20 @@ def _plane(scan: Scan) -> style.Drawing:
     first, second = (PlaneAxis(n, problem.latex_of(n), problem.unit_of(n)) for n in found.names)
     levels = _levels(scan)
     outlines = {
-        level: [part.vertices for part in parts] for (_, level), parts in zip(levels, scan.regions, strict=True)
+        level: [part.vertices for part in parts]
+        for (_, level), parts in zip(levels, scan.regions, strict=True)
     }
     together = Band(
         "everything",
         "",
         style.OTHER,
-        *found.grids,
+        found.grids[0],
+        found.grids[1],
         found.delta_chi2,
         outlines=outlines,
-        overview=None if scan.overview is None else (*scan.overview.grids, scan.overview.chi2 - found.minimum),
+        overview=None
+        if scan.overview is None
+        else ((scan.overview.grids[0], scan.overview.grids[1], scan.overview.chi2 - found.minimum)),
     )
     caption = ""
     if scan.division is not None:
@@ -125,8 +129,9 @@ def _band(scan: Scan, part: ConstraintProfile) -> Band:
         constraint.name,
         r"\,{+}\,".join(latex) if all(latex) else "",
         style.family_of(constraint.groups),
-        *part.profile.grids,
+        part.profile.grids[0],
+        part.profile.grids[1],
         part.profile.chi2 - part.lowest,
         share=constraint.chi2,
-        overview=refine(*around.grids, delta, around.slopes),
+        overview=refine(around.grids[0], around.grids[1], delta, around.slopes),
     )

@@ -117,7 +117,7 @@ def fold(name: Any, room: int) -> Any:
     return "\n".join(lines)
 
 
-def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> HouseTable:
+def table(title: str, *columns: str | tuple[str, str], caption: str = "") -> Table:
     """Make an empty table in the house style.
 
     Parameters

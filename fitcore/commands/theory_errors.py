@@ -44,7 +44,9 @@ def table(treatments: tuple[Treatment, ...]) -> Table:
             row = treatment.rows[name]
             low, high = row.interval_68
             text = with_error(row.value, high - row.value, row.value - low)
-            cells.append(text if row.plateau is None else f"{text}  {interval(*row.plateau, 0.5 * (high - low))}")
+            cells.append(
+                text if row.plateau is None else f"{text}  {interval(*row.plateau, 0.5 * (high - low))}"
+            )
         made.add_row(name, *cells)
     made.add_row("chi-square", *(f"{treatment.chi2:.2f}" for treatment in treatments))
     return made

@@ -79,7 +79,13 @@ def draw(
         axes.text(
             WIDTH - 0.2, 0.57, f"the whole: {error:.2g}{unit_text}", fontsize=8, ha="right", va="center"
         )
-        reach = max([1.0, *(bar.removal / error for bar in (*shown, *together)), *(abs(b.shift) / error for b in shown)])
+        reach = max(
+            [
+                1.0,
+                *(bar.removal / error for bar in (*shown, *together)),
+                *(abs(b.shift) / error for b in shown),
+            ]
+        )
         _scale(axes, reach, height)
         y = TOP
         for bar in shown:
@@ -87,7 +93,9 @@ def draw(
             y += ROW
         if together:
             y += GAP
-            axes.text(0.2, y - 0.14, "in groups, which may share inputs", fontsize=7.5, va="center", style="italic")
+            axes.text(
+                0.2, y - 0.14, "in groups, which may share inputs", fontsize=7.5, va="center", style="italic"
+            )
             for bar in together:
                 _row(axes, bar, y + ROW / 2, error, reach, signed=False)
                 y += ROW
@@ -95,11 +103,20 @@ def draw(
             footer += f"  -  the {MOST} largest of {len(entries)} inputs"
         style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.13 / height)
     rows = tuple(
-        (kind, bar.name, bar.family.label if kind == "input" else None, bar.shift, bar.removal, bar.shift / error)
+        (
+            kind,
+            bar.name,
+            bar.family.label if kind == "input" else None,
+            bar.shift,
+            bar.removal,
+            bar.shift / error,
+        )
         for kind, part in (("input", entries), ("group", together))
         for bar in part
     )
-    return style.Drawing(figure, ("kind", "name", "family", "shift", "removal", "shift_over_uncertainty"), rows)
+    return style.Drawing(
+        figure, ("kind", "name", "family", "shift", "removal", "shift_over_uncertainty"), rows
+    )
 
 
 def _scale(axes: Axes, reach: float, height: float) -> None:
@@ -124,9 +141,15 @@ def _row(axes: Axes, bar: Bar, y: float, error: float, reach: float, *, signed: 
     colour = bar.family.colour if signed else style.NAVY
     size = 7.5 * min(1.0, 36 / len(bar.name))
     axes.text(LEFT - 0.1, y, bar.name, fontsize=size, ha="right", va="center")
-    axes.add_patch(Rectangle((LEFT, y - 0.07), max(length, 0.008), 0.14, color=colour, lw=0, zorder=2, gid=f"shift:{bar.name}"))
+    axes.add_patch(
+        Rectangle(
+            (LEFT, y - 0.07), max(length, 0.008), 0.14, color=colour, lw=0, zorder=2, gid=f"shift:{bar.name}"
+        )
+    )
     stroke = LEFT + bar.removal * per_unit
-    axes.plot([stroke, stroke], [y - 0.095, y + 0.095], color=style.INK, lw=1.4, zorder=3, gid=f"removal:{bar.name}")
+    axes.plot(
+        [stroke, stroke], [y - 0.095, y + 0.095], color=style.INK, lw=1.4, zorder=3, gid=f"removal:{bar.name}"
+    )
     words = f"{100 * abs(bar.shift) / error:.0f} %"
     if signed:  # an input that moves up moves the result up or down
         words = ("+" if bar.shift >= 0 else "\N{MINUS SIGN}") + words

@@ -67,7 +67,9 @@ def draw(pairs: Sequence[Pair], *, title: str = "", footer: str = "") -> style.D
         for number, pair in enumerate(ordered):
             y = TOP + ROW * (number + 0.5)
             if number % 2 == 0:
-                axes.fill_between([0.16, WIDTH - 0.16], y - ROW / 2, y + ROW / 2, color="#f5f6f8", lw=0, zorder=0)
+                axes.fill_between(
+                    [0.16, WIDTH - 0.16], y - ROW / 2, y + ROW / 2, color="#f5f6f8", lw=0, zorder=0
+                )
             _row(axes, pair, y)
         style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.13 / height)
         figure.text(
@@ -113,12 +115,24 @@ def _row(axes: Axes, pair: Pair, y: float) -> None:
     if own is not None:
         width = max(width, 2.5 * (own[1] - own[0]))
     if math.isfinite(width):  # a long tail of the 95 % interval must not squeeze the rest
-        shown = [min(max(end, pair.value - width), pair.value + width) if end not in (own or ()) else end for end in shown]
+        shown = [
+            min(max(end, pair.value - width), pair.value + width) if end not in (own or ()) else end
+            for end in shown
+        ]
     scale = scale_for(shown, LEFT, RIGHT)
     draw_scale(axes, scale, y, below=0.16)
     if own is not None and pair.direct is not None:
         bar(axes, scale, y - 0.085, own, None, pair.direct, pair.family.colour, f"direct:{pair.name}")
-    bar(axes, scale, y + 0.06, pair.interval_68, pair.interval_95, pair.value, style.NAVY, f"indirect:{pair.name}")
+    bar(
+        axes,
+        scale,
+        y + 0.06,
+        pair.interval_68,
+        pair.interval_95,
+        pair.value,
+        style.NAVY,
+        f"indirect:{pair.name}",
+    )
     if pair.tension is not None:
         axes.text(
             WIDTH - 0.3,

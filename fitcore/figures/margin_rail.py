@@ -51,7 +51,12 @@ def find_exit(
     Exit or None
         None when the band does not reach the frame.
     """
-    sides = {"right": (y, delta[-1]), "top": (x, delta[:, -1]), "left": (y, delta[0]), "bottom": (x, delta[:, 0])}
+    sides = {
+        "right": (y, delta[-1]),
+        "top": (x, delta[:, -1]),
+        "left": (y, delta[0]),
+        "bottom": (x, delta[:, 0]),
+    }
     found = []
     for side in SIDES:
         positions, values = sides[side]
@@ -65,7 +70,9 @@ def find_exit(
         low, high = starts[longest], ends[longest]
         full = high - low >= positions.size - 2
         crowded = sum(other.side == side for other in taken) >= room
-        found.append((full or crowded, SIDES.index(side), Exit(side, float(0.5 * (positions[low] + positions[high])))))
+        found.append(
+            (full or crowded, SIDES.index(side), Exit(side, float(0.5 * (positions[low] + positions[high]))))
+        )
     return min(found, key=lambda item: item[:2])[2] if found else None
 
 

@@ -88,12 +88,16 @@ def draw(
             delta = np.where(np.isfinite(curve.delta), np.minimum(curve.delta, 10 * top), 10 * top)
             if len(curves) == 1:
                 inside = np.minimum(delta, levels[0][1])
-                upper.fill_between(curve.x, inside, levels[0][1], color=style.tint(colour, 0.16), lw=0, zorder=1)
+                upper.fill_between(
+                    curve.x, inside, levels[0][1], color=style.tint(colour, 0.16), lw=0, zorder=1
+                )
             upper.plot(curve.x, delta, color=colour, lw=1.9, ls=dashes, zorder=3, gid=f"curve:{curve.label}")
         _rail(lower, curves, levels, (low, high))
         unit_text = "" if unit == "1" else f"  [{unit}]"
         lower.set_xlabel(symbol + unit_text, fontsize=11)
-        figure.text(0.2 / WIDTH, 1 - 0.33 / total, f"Profile of {symbol}", fontsize=13, fontweight="bold", va="center")
+        figure.text(
+            0.2 / WIDTH, 1 - 0.33 / total, f"Profile of {symbol}", fontsize=13, fontweight="bold", va="center"
+        )
         figure.text(0.2 / WIDTH, 1 - 0.57 / total, title, fontsize=7.5, color=style.FAINT_INK, va="center")
         words = ", ".join(f"{text} at {level:.4g}" for text, level in levels)
         figure.text(

@@ -73,7 +73,14 @@ def _hermite(grid: np.ndarray, times: int) -> tuple[np.ndarray, np.ndarray, np.n
 
 
 def inward_ticks(
-    axes: Axes, line: np.ndarray, x: np.ndarray, y: np.ndarray, delta: np.ndarray, *, length: float, spacing: float
+    axes: Axes,
+    line: np.ndarray,
+    x: np.ndarray,
+    y: np.ndarray,
+    delta: np.ndarray,
+    *,
+    length: float,
+    spacing: float,
 ) -> np.ndarray:
     """Ticks along a line, each pointing to where Delta chi-square is lower.
 
@@ -101,7 +108,9 @@ def inward_ticks(
     where = (np.arange(count) + 0.5) * along[-1] / count
     foot = np.stack([np.interp(where, along, points[:, k]) for k in (0, 1)], axis=1)
     before, after = np.maximum(where - 0.5, 0.0), np.minimum(where + 0.5, along[-1])
-    tangent = np.stack([np.interp(after, along, points[:, k]) - np.interp(before, along, points[:, k]) for k in (0, 1)], 1)
+    tangent = np.stack(
+        [np.interp(after, along, points[:, k]) - np.interp(before, along, points[:, k]) for k in (0, 1)], 1
+    )
     size = np.hypot(*tangent.T)
     keep = size > 0.0
     foot, tangent = foot[keep], tangent[keep] / size[keep, None]
@@ -139,7 +148,12 @@ def draw_edge(
         if outline:
             axes.plot(*line.T, color="white", lw=width + 2 * outline, zorder=zorder, solid_joinstyle="round")
         axes.plot(
-            *line.T, color=colour, lw=width, ls=style, zorder=zorder + 0.02, gid=f"{label}:{number}" if label else None
+            *line.T,
+            color=colour,
+            lw=width,
+            ls=style,
+            zorder=zorder + 0.02,
+            gid=f"{label}:{number}" if label else None,
         )
         if ticks:
             marks = inward_ticks(axes, line, *grid, length=ticks, spacing=spacing)

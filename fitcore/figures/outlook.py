@@ -66,17 +66,32 @@ def draw(rows: Sequence[BeforeAfter], *, title: str = "", footer: str = "") -> s
         for number, row in enumerate(rows):
             y = TOP + ROW * (number + 0.5)
             if number % 2 == 0:
-                axes.fill_between([0.16, WIDTH - 0.16], y - ROW / 2, y + ROW / 2, color="#f5f6f8", lw=0, zorder=0)
+                axes.fill_between(
+                    [0.16, WIDTH - 0.16], y - ROW / 2, y + ROW / 2, color="#f5f6f8", lw=0, zorder=0
+                )
             symbol = symbol_text(row.latex, row.name)
             unit = "" if row.unit == "1" else f"  {row.unit}"
-            axes.text(0.28, y - 0.06, symbol, fontsize=10 * min(1.0, 20 / max(glyphs(symbol), 1)), va="center")
+            axes.text(
+                0.28, y - 0.06, symbol, fontsize=10 * min(1.0, 20 / max(glyphs(symbol), 1)), va="center"
+            )
             axes.text(0.28, y + 0.14, row.name + unit, fontsize=5.4, va="center", color=style.FAINT_INK)
             ends = (*row.now_68, *row.now_95, *row.future_68, *row.future_95)
             scale = scale_for([end for end in ends if math.isfinite(end)] or [row.value], LEFT, RIGHT)
             draw_scale(axes, scale, y, below=0.17)
             bar(axes, scale, y - 0.085, row.now_68, row.now_95, row.value, NOW, f"now:{row.name}")
-            bar(axes, scale, y + 0.07, row.future_68, row.future_95, row.value, style.NAVY, f"future:{row.name}")
-            axes.text(WIDTH - 0.3, y, f"\N{MULTIPLICATION SIGN}{row.gain:.2f}", fontsize=9, ha="right", va="center")
+            bar(
+                axes,
+                scale,
+                y + 0.07,
+                row.future_68,
+                row.future_95,
+                row.value,
+                style.NAVY,
+                f"future:{row.name}",
+            )
+            axes.text(
+                WIDTH - 0.3, y, f"\N{MULTIPLICATION SIGN}{row.gain:.2f}", fontsize=9, ha="right", va="center"
+            )
         style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.13 / height)
         figure.text(
             1 - 0.2 / WIDTH,

@@ -228,7 +228,9 @@ def _line_styles(bands: Sequence[Band]) -> list[Any]:
     return chosen
 
 
-def _fill(axes: Axes, grid: tuple[np.ndarray, np.ndarray, np.ndarray], level: float, colour: Any, **more: Any) -> None:
+def _fill(
+    axes: Axes, grid: tuple[np.ndarray, np.ndarray, np.ndarray], level: float, colour: Any, **more: Any
+) -> None:
     x, y, delta = grid
     surface = height(delta, level)
     if surface.min() < np.sqrt(level):
@@ -239,7 +241,14 @@ def _band(axes: Axes, band: Band, dashes: Any, levels: Sequence[tuple[str, float
     inner, colour = levels[0][1], band.family.colour
     _fill(axes, band.grid, inner, colour, alpha=0.22 * ink, zorder=2.0)
     draw_edge(
-        axes, band.lines(inner), band.grid, colour, width=0.6 + 0.6 * ink, style=dashes, zorder=3.0, label=band.name
+        axes,
+        band.lines(inner),
+        band.grid,
+        colour,
+        width=0.6 + 0.6 * ink,
+        style=dashes,
+        zorder=3.0,
+        label=band.name,
     )
     pale = style.tint(colour, 0.55)
     for _, level in levels[1:]:
@@ -247,7 +256,12 @@ def _band(axes: Axes, band: Band, dashes: Any, levels: Sequence[tuple[str, float
 
 
 def _together(
-    axes: Axes, combined: Band, levels: Sequence[tuple[str, float]], best: tuple[float, float] | None, *, alone: bool
+    axes: Axes,
+    combined: Band,
+    levels: Sequence[tuple[str, float]],
+    best: tuple[float, float] | None,
+    *,
+    alone: bool,
 ) -> None:
     from matplotlib.patches import Polygon
 
@@ -288,7 +302,9 @@ def _rails(
 ) -> None:
     """Names in the margins."""
     for side in ("right", "top", "left", "bottom"):
-        chosen = [(k, leaving.at) for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side]
+        chosen = [
+            (k, leaving.at) for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side
+        ]
         if not chosen:
             continue
         upright = side in ("right", "left")
@@ -313,13 +329,27 @@ def _rails(
         out = 1.0 if side in ("right", "top") else -1.0
         for (k, _), start, end in zip(chosen, at, placed, strict=True):
             colour = bands[k].family.colour
-            path = [(edge, start), (edge + 0.05 * out, start), (rail - 0.05 * out, end), (rail + 0.06 * out, end)]
+            path = [
+                (edge, start),
+                (edge + 0.05 * out, start),
+                (rail - 0.05 * out, end),
+                (rail + 0.06 * out, end),
+            ]
             points = np.array(path if upright else [point[::-1] for point in path])
-            page.plot(*points.T, color=colour, lw=0.9, solid_joinstyle="round", zorder=2, gid=f"leader:{bands[k].name}")
+            page.plot(
+                *points.T,
+                color=colour,
+                lw=0.9,
+                solid_joinstyle="round",
+                zorder=2,
+                gid=f"leader:{bands[k].name}",
+            )
             page.plot(*points[-2:].T, color=colour, lw=2.6, solid_capstyle="butt", zorder=3)
             _name(page, bands[k], styles[k], side, rail, end, chi2)
     inside = [k for k, leaving in enumerate(exits) if leaving is None]
-    for number, k in enumerate(inside):  # a closed band never leaves the frame: named below the others, without leader
+    for number, k in enumerate(
+        inside
+    ):  # a closed band never leaves the frame: named below the others, without leader
         place = (box.left + box.width + RAIL_GAP, OVERVIEW_BOTTOM + overview + 0.3 + 0.42 * number)
         _name(page, bands[k], styles[k], "right", *place, chi2)
 
@@ -346,9 +376,24 @@ def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float
     part = 0.0 if not chi2 else min(max(band.share / chi2, 0.0), 1.0)
     page.add_patch(Rectangle((strip_x, strip_y), full, 0.045, facecolor=style.RULE, lw=0, zorder=2))
     page.add_patch(
-        Rectangle((strip_x, strip_y), max(full * part, 0.012), 0.045, facecolor=colour, lw=0, zorder=3, gid=f"share:{band.name}")
+        Rectangle(
+            (strip_x, strip_y),
+            max(full * part, 0.012),
+            0.045,
+            facecolor=colour,
+            lw=0,
+            zorder=3,
+            gid=f"share:{band.name}",
+        )
     )
-    page.text(strip_x + full + 0.05, strip_y + 0.02, f"{band.share:.1f}", fontsize=6, color=style.FAINT_INK, va="center")
+    page.text(
+        strip_x + full + 0.05,
+        strip_y + 0.02,
+        f"{band.share:.1f}",
+        fontsize=6,
+        color=style.FAINT_INK,
+        va="center",
+    )
 
 
 def _summary(
@@ -373,7 +418,9 @@ def _summary(
         page.text(x, row, words + total, fontsize=6.2, va="center", color=style.FAINT_INK)
 
 
-def _overview_size(overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None, equal: bool) -> tuple[float, float]:
+def _overview_size(
+    overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None, equal: bool
+) -> tuple[float, float]:
     if overview is None:
         return 0.0, 0.0
     shape = float(np.ptp(overview[0]) / np.ptp(overview[1])) if equal else 2.2 / 1.5
@@ -409,7 +456,15 @@ def _overview(
         small.fill(*line.T, color=style.NAVY, lw=0, zorder=5)
     corner = (float(combined.x[0]), float(combined.y[0]))
     small.add_patch(
-        Rectangle(corner, float(np.ptp(combined.x)), float(np.ptp(combined.y)), fill=False, ec=style.INK, lw=0.9, zorder=6)
+        Rectangle(
+            corner,
+            float(np.ptp(combined.x)),
+            float(np.ptp(combined.y)),
+            fill=False,
+            ec=style.INK,
+            lw=0.9,
+            zorder=6,
+        )
     )
 
 
@@ -420,7 +475,9 @@ def _texts(sheet: Sheet, axes_of: tuple[PlaneAxis, PlaneAxis], title: str, capti
     page.text(left, HEIGHT - 0.61, title, fontsize=8, color=style.FAINT_INK, va="center")
     if caption:
         text = textwrap.fill(caption, 196)
-        page.text(left, bottom + 0.3, text, fontsize=5.8, color=style.FAINT_INK, va="bottom", linespacing=1.35)
+        page.text(
+            left, bottom + 0.3, text, fontsize=5.8, color=style.FAINT_INK, va="bottom", linespacing=1.35
+        )
     page.text(left, bottom + 0.12, footer, fontsize=6.5, color=style.FAINT_INK, va="bottom")
 
 

@@ -49,7 +49,14 @@ def draw_scale(axes: Axes, scale: Scale, y: float, *, below: float) -> None:
         x = scale.at(tick)
         axes.plot([x, x], [y + below, y + below + 0.03], color=style.FAINT_INK, lw=0.6, zorder=1)
         axes.text(
-            x, y + below + 0.04, f"{tick:.6g}", fontsize=4.8, color=style.FAINT_INK, ha="center", va="top", zorder=1
+            x,
+            y + below + 0.04,
+            f"{tick:.6g}",
+            fontsize=4.8,
+            color=style.FAINT_INK,
+            ha="center",
+            va="top",
+            zorder=1,
         )
 
 
@@ -69,7 +76,9 @@ def bar(
             continue
         places = [scale.at(end) for end in ends]
         shade = style.tint(str(colour), strength)
-        axes.plot(places, [y, y], color=shade, lw=width, solid_capstyle="butt", zorder=depth, gid=label or None)
+        axes.plot(
+            places, [y, y], color=shade, lw=width, solid_capstyle="butt", zorder=depth, gid=label or None
+        )
         for end, place, marker in zip(ends, places, "<>", strict=True):
             if not scale.holds(end):
                 axes.plot([place], [y], marker=marker, ms=4, color=shade, zorder=depth)

@@ -46,6 +46,8 @@ DEFAULT_DERIVED = (
 
 #: The two minimisers agree when no parameter differs by more than this many of its standard deviations.
 AGREEMENT = 1e-3
+#: Estimated distance to the minimum, in chi-square, at which MIGRAD has converged.
+NEAR_ENOUGH = 1e-5
 #: How often a fit starts again from a lower minimum that a profile met.
 RESTARTS = 3
 
@@ -127,7 +129,7 @@ def _fit_once(
         found, ok = best.theta, True
     best = _twin(problem, found, minima)
     theta, chi2 = found, float(problem.chi2(found))
-    if best.chi2 < chi2 - 1e-3:  # the better one is reported, but two that differ are no proof of each other
+    if best.chi2 < chi2:  # the better one is reported, but two that differ are no proof of each other
         theta, chi2 = best.theta, best.chi2
     curvature = curvature_at(problem, theta)
     ok &= _agree(problem, found, best, curvature, notes)
@@ -188,6 +190,9 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
 
     scales = np.array([p.scale for p in problem.parameters])
     calls = {"chi2": 0, "gradient": 0, "hessian": 0}
+    # At a bound the curvature in MIGRAD's own variables is that of its transformation, which a second derivative in
+    # ours does not have: its estimated distance would be that to a minimum beyond the bound.
+    on_bound = any(not p.lower < x < p.upper for p, x in zip(problem.parameters, best.theta, strict=True))
 
     def attempt(start: np.ndarray) -> Minuit:
         def value(x: np.ndarray) -> float:
@@ -198,7 +203,8 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
 
         def gradient(x: np.ndarray) -> np.ndarray:
             calls["gradient"] += 1
-            return problem.linearise((start + np.asarray(x) * scales)[None]).gradient[0] * scales
+            point = start + np.asarray(x) * scales
+            return np.asarray(problem.linearise(point[None]).gradient[0] * scales)
 
         def second(x: np.ndarray) -> np.ndarray:
             calls["hessian"] += 1
@@ -210,7 +216,11 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
             return curve + 1e-9 * np.diag(np.maximum(np.diagonal(curve), 1e-3))
 
         engine = Minuit(
-            value, np.zeros(len(start)), grad=gradient, hessian=second, name=problem.parameter_names
+            value,
+            np.zeros(len(start)),
+            grad=gradient,
+            hessian=None if on_bound else second,
+            name=problem.parameter_names,
         )
         engine.errordef = Minuit.LEAST_SQUARES
         engine.limits = [
@@ -240,7 +250,8 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
         if engine.fval < best.chi2 + 1e-3:
             break
     notes.calls |= calls
-    ok = bool(engine.valid)
+    # MIGRAD's own criterion is far below what matters; next to a bound it cannot be met.
+    ok = bool(engine.valid or engine.fmin.edm < NEAR_ENOUGH)
     if not ok:
         notes.add(
             "migrad-not-converged", f"MIGRAD did not converge (estimated distance {engine.fmin.edm:.2g})"

@@ -405,7 +405,9 @@ def _where(condition: Any, x: Any, y: Any) -> Any:
 def _sum(x: Dual, axis: int = -1) -> Dual:
     tangents = np.broadcast_to(x.tangents, (len(x.support), *x.shape))
     if axis is None or axis >= 0:
-        raise UnsupportedOperationError("np.sum takes axis=-1, -2, ... here, so that any leading batch shape works")
+        raise UnsupportedOperationError(
+            "np.sum takes axis=-1, -2, ... here, so that any leading batch shape works"
+        )
     return Dual(np.sum(x.value, axis=axis), x.support, np.sum(tangents, axis=axis))
 
 

@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from fitcore.minimise.uncertainty import Curvature
+from fitcore.minimise.uncertainty import AT_BOUND, Curvature
 from fitcore.result import Estimate, MeasurementRow
 
 __all__ = [
@@ -27,6 +27,8 @@ __all__ = [
 LEVELS = (1.0, 3.841458820694124)
 #: Within this many standard deviations of a bound the parabola says nothing.
 NEAR_BOUND = 3.0
+#: A derived quantity leans on a parameter that makes more than this part of its uncertainty.
+LEANING = 0.01
 
 
 @dataclass
@@ -55,7 +57,9 @@ def estimates(
     sigma = np.sqrt(np.clip(np.diagonal(curvature.covariance), 0.0, None))
     lower = np.array([p.lower for p in problem.parameters])
     upper = np.array([p.upper for p in problem.parameters])
-    at_bound = ((theta - lower) < NEAR_BOUND * sigma) | ((upper - theta) < NEAR_BOUND * sigma)
+    room = np.minimum(theta - lower, upper - theta)
+    steps = np.array([p.scale for p in problem.parameters])
+    at_bound = room <= np.maximum(NEAR_BOUND * sigma, AT_BOUND * steps)
     # With flat ranges about, no parabola is to be trusted.
     at_bound |= any(p.is_range for p in problem.parameters)
     near = [
@@ -66,6 +70,16 @@ def estimates(
     # A flat range has no interval of interest; it is reported by its value alone unless asked for.
     ranged = {p.name for p in problem.parameters if p.is_range}
     wanted = [*wanted, *(n for n in near if n not in wanted and n not in ranged)]
+    # What leans on a parameter near its bound has no parabola either.
+    empty = (np.zeros(0), np.zeros((0, len(theta))))
+    values, gradient = problem.linearise_quantities(theta, names) if names else empty
+    leaning = {
+        name
+        for name, slope in zip(names, gradient, strict=True)
+        if np.any(np.abs(slope * sigma)[at_bound] > LEANING * np.linalg.norm(slope * sigma))
+    }
+    if not ranged:
+        wanted += [name for name in names if name in leaning and name not in wanted]
     intervals = _profile(problem, theta, curvature, wanted, notes)
     if not ranged and (near_named := near):
         notes.add("near-bound", f"{', '.join(near_named)} near a bound: no parabolic error")
@@ -78,14 +92,12 @@ def estimates(
             parameter.name, theta[i], error, parameter.unit, intervals, loose
         )
     derived = {}
-    if names:
-        values, gradient = problem.linearise_quantities(theta, names)
-        for name, value, slope in zip(names, values, gradient, strict=True):
-            variance = float(slope @ curvature.covariance @ slope)
-            touched = curvature.leaves_loose(slope)
-            bad = touched or bool(ranged) or not math.isfinite(variance)
-            error = None if bad else math.sqrt(max(variance, 0.0))
-            derived[name] = _estimate(name, value, error, problem.unit_of(name), intervals, touched)
+    for name, value, slope in zip(names, values, gradient, strict=True):
+        variance = float(slope @ curvature.covariance @ slope)
+        touched = curvature.leaves_loose(slope)
+        bad = touched or bool(ranged) or name in leaning or not math.isfinite(variance)
+        error = None if bad else math.sqrt(max(variance, 0.0))
+        derived[name] = _estimate(name, value, error, problem.unit_of(name), intervals, touched)
     return parameters, derived
 
 
@@ -123,18 +135,22 @@ def _profile(
     if found.better_minimum is not None:
         notes.add("better-minimum", f"the profiles met a lower minimum, chi2 = {found.minimum:.6g}")
         notes.better = np.asarray(found.better_minimum, dtype=float)
-    for name in dict.fromkeys(name for name, *_ in found.flagged):
-        notes.add(
-            "profile-failed",
-            f"an end of the interval of {name} could not be found: it reaches at least that far",
-        )
+    cut = list(dict.fromkeys(name for name, *_ in found.flagged))
+    open_ended = []
     for name, pair in found.items():
         if any(not (lo <= hi) for lo, hi, *_ in pair):
-            notes.add("profile-failed", f"the profile of {name} could not be followed to its crossing")
+            cut += [name] if name not in cut else []
             continue
         result[name] = tuple((float(lo), float(hi)) for lo, hi, *_ in pair)
         if any(lo_open or hi_open for _, _, lo_open, hi_open in pair):
-            notes.add("open-interval", f"an interval of {name} ends at a bound")
+            open_ended.append(name)
+    if cut:
+        notes.add(
+            "profile-failed",
+            f"an end of the interval of {', '.join(cut)} could not be found: it reaches at least that far",
+        )
+    if open_ended:
+        notes.add("open-interval", f"an interval of {', '.join(open_ended)} ends at a bound")
     return result
 
 

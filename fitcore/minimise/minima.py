@@ -114,7 +114,9 @@ def find_minima(
     """
     from fitcore.minimise.batch_solver import minimise_batch
 
-    starts = np.concatenate([start_points(problem, size, rng=rng), *(np.atleast_2d(point) for point in extra)])
+    starts = np.concatenate(
+        [start_points(problem, size, rng=rng), *(np.atleast_2d(point) for point in extra)]
+    )
     rows = None if data is None else np.broadcast_to(data, (len(starts), problem.n_entries))
     alive = np.isfinite(problem.chi2(starts, rows))
     if not alive.any():
@@ -155,7 +157,13 @@ def distinct_minima(
         same = distance < SAME_MINIMUM
         same[0] = True
         listed.append(
-            Minimum(theta[best].copy(), float(chi2[best]), starts[best].copy(), int(same.sum()), bool(converged[best]))
+            Minimum(
+                theta[best].copy(),
+                float(chi2[best]),
+                starts[best].copy(),
+                int(same.sum()),
+                bool(converged[best]),
+            )
         )
         order = order[~same]
     return listed

@@ -11,6 +11,8 @@ __all__ = ["Curvature", "curvature_at", "hessian"]
 
 #: Singular values below this fraction of the largest one (columns normalised) count as zero.
 RANK_TOLERANCE = 1e-7
+#: A parameter closer to its bound than this many of its steps sits on it.
+AT_BOUND = 1e-3
 
 
 @dataclass(frozen=True)
@@ -83,33 +85,48 @@ def curvature_at(problem: Any, theta: np.ndarray) -> Curvature:
     """
     theta = np.asarray(theta, dtype=float)
     n = len(theta)
-    counted = np.array([not getattr(p, "is_range", False) for p in problem.parameters], dtype=bool)
-    scales = np.array([p.scale for p in problem.parameters])[counted]
-    jacobian = problem.jacobian(theta)[:, counted]
+    parameters = problem.parameters
+    scales = np.array([p.scale for p in parameters])
+    lower, upper = np.array([p.lower for p in parameters]), np.array([p.upper for p in parameters])
+    counted = np.array([not getattr(p, "is_range", False) for p in parameters], dtype=bool)
+    jacobian = problem.jacobian(theta)
     jacobian = np.where(np.isfinite(jacobian), jacobian, 0.0)
-    norms = np.linalg.norm(jacobian, axis=0)
-    unit = np.where(norms > 0, 1.0 / np.where(norms > 0, norms, 1.0), scales)
-    _, singular, right = np.linalg.svd(jacobian * unit, full_matrices=True)
-    strong = np.zeros(len(norms), dtype=bool)
-    strong[: len(singular)] = singular > RANK_TOLERANCE * singular.max(initial=1e-300)
-    weak = right[~strong]
-    loose = (np.abs(weak) > 1e-3).any(axis=0) | (norms == 0)
 
+    unit, strong, right = _directions(jacobian[:, counted], scales[counted])
+    weak = right[~strong]
+    unconstrained = np.zeros(n, dtype=bool)
+    unconstrained[counted] = (np.abs(weak) > 1e-3).any(axis=0) | ~jacobian[:, counted].any(axis=0)
+    loose = np.zeros((len(weak), n))
+    loose[:, counted] = weak * unit
+    rank = int(strong.sum())
+
+    # At a bound chi-square need not be at rest: a parameter that sits there is held.
+    held = np.minimum(theta - lower, upper - theta) <= AT_BOUND * scales
+    moving = counted & ~held
+    if held.any():
+        unit, strong, right = _directions(jacobian[:, moving], scales[moving])
     basis = right[strong]  # rows span what the data constrain, in normalised coordinates
-    gauss_newton = basis @ ((jacobian * unit).T @ (jacobian * unit)) @ basis.T
+    columns = jacobian[:, moving] * unit
+    gauss_newton = basis @ (columns.T @ columns) @ basis.T
     guess = np.sqrt(np.clip(np.diagonal(basis.T @ np.linalg.inv(gauss_newton) @ basis), 0.0, None)) * unit
-    steps = np.array([0.01 * p.scale for p in problem.parameters])
-    steps[counted] = np.where(guess > 0, 0.02 * guess, 0.01 * scales)
+    steps = 0.01 * scales
+    steps[moving] = np.where(guess > 0, 0.02 * guess, steps[moving])
     full = hessian(problem, theta, steps)
-    reduced = basis @ (full[np.ix_(counted, counted)] * np.outer(unit, unit)) @ basis.T
+    reduced = basis @ (full[np.ix_(moving, moving)] * np.outer(unit, unit)) @ basis.T
     eigenvalues = np.linalg.eigvalsh(reduced)
     positive = bool(eigenvalues.size == 0 or eigenvalues[0] > 0)
     core = reduced if positive else 2.0 * gauss_newton
     part = (basis.T @ (2.0 * np.linalg.inv(core)) @ basis) * np.outer(unit, unit)
     covariance = np.zeros((n, n))
-    covariance[np.ix_(counted, counted)] = 0.5 * (part + part.T)
-    unconstrained = np.zeros(n, dtype=bool)
-    unconstrained[counted] = loose
-    directions = np.zeros((len(weak), n))
-    directions[:, counted] = weak * unit
-    return Curvature(full, covariance, int(strong.sum()), unconstrained, positive, directions)
+    covariance[np.ix_(moving, moving)] = 0.5 * (part + part.T)
+    return Curvature(full, covariance, rank, unconstrained, positive, loose)
+
+
+def _directions(jacobian: np.ndarray, scales: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Unit of each column, which right singular vectors count, and all of them as rows."""
+    norms = np.linalg.norm(jacobian, axis=0)
+    unit = np.where(norms > 0, 1.0 / np.where(norms > 0, norms, 1.0), scales)
+    _, singular, right = np.linalg.svd(jacobian * unit, full_matrices=True)
+    strong = np.zeros(len(norms), dtype=bool)
+    strong[: len(singular)] = singular > RANK_TOLERANCE * singular.max(initial=1e-300)
+    return unit, strong, right

@@ -1,7 +1,7 @@
 """Posterior chains in an HDF5 file that survives kills, full disks and second writers.
 
 Blocks of steps are committed in two phases: the data, a flush, the number of committed steps, a flush and
-fsync. Nothing beyond that number is ever trusted, so a writer may die at any moment. Space for a block is
+fsync (while sampling goes on; it is waited for before the next block). Nothing beyond that number is ever trusted, so a writer may die at any moment. Space for a block is
 reserved before the first byte of it is written; a full disk therefore stops a run without touching the
 file. The layout is documented in :mod:`fitcore.sampling.chain_format`.
 """
@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import contextlib
 import os
+import threading
 import time
 from collections.abc import Mapping
 from pathlib import Path
@@ -42,6 +43,8 @@ class ChainFile(ChainReader):
         self._lock = lock
         self._last_commit = time.monotonic()
         self._failed = False
+        self._sync: threading.Thread | None = None
+        self._sync_error: OSError | None = None
 
     @classmethod
     def create(
@@ -157,6 +160,7 @@ class ChainFile(ChainReader):
         try:
             if not self._failed:
                 self.commit()
+                self._finish_sync()
                 with store_errors(self.path, "close the file"):
                     self._file["bookkeeping/closed_at"][()] = self.committed_steps
                     self._file.flush()
@@ -164,6 +168,8 @@ class ChainFile(ChainReader):
                     give_back(descriptor, self._file.id.get_filesize())
                     os.fsync(descriptor)
         finally:
+            if self._sync is not None:
+                self._sync.join()
             file, self._file = self._file, None
             try:
                 with store_errors(self.path, "close the file"):
@@ -283,6 +289,7 @@ class ChainFile(ChainReader):
         number, file = len(self._block_ends), self._file
         try:
             with store_errors(self.path, f"write steps {begin} to {end - 1}"):
+                self._finish_sync()
                 self._reserve(chain.nbytes + log_posterior.nbytes + accepted.nbytes + words.nbytes)
                 rows = slice(begin, end)
                 for name, value in (
@@ -305,7 +312,7 @@ class ChainFile(ChainReader):
                 file.flush()
                 file["committed_steps"][()] = end
                 file.flush()
-                os.fsync(file.id.get_vfd_handle())
+                self._start_sync(file.id.get_vfd_handle())
         except StoreError:
             self._failed = True
             raise
@@ -313,6 +320,29 @@ class ChainFile(ChainReader):
         self.committed_steps = end
         self._buffer.clear()
         self._last_commit = time.monotonic()
+
+    def _start_sync(self, descriptor: int) -> None:
+        """Have the disk catch up while sampling goes on; a kill needs no disk, a power failure does."""
+
+        def sync() -> None:
+            try:
+                os.fsync(descriptor)
+            except OSError as error:
+                self._sync_error = error
+
+        self._sync = threading.Thread(target=sync, name="chain-sync", daemon=True)
+        self._sync.start()
+
+    def _finish_sync(self) -> None:
+        """Wait for the disk; raises StoreError when it failed."""
+        if self._sync is not None:
+            self._sync.join()
+            self._sync = None
+        if self._sync_error is not None:
+            error, self._sync_error = self._sync_error, None
+            raise StoreError(
+                f"{self.path}: the disk did not take the last block ({error.strerror}); check it, then verify the file"
+            ) from error
 
     def _reserve(self, size: int) -> None:
         """Make sure that ``size`` more bytes fit, before the HDF5 library writes any of them.

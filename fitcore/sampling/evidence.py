@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from fitcore.sampling.mixture import StudentMixture
-from fitcore.sampling.preparation import Target, best_degrees
+from fitcore.sampling.preparation import Target, refitted
 from fitcore.sampling.thinned import ThinnedChain
 from observables.errors import InputError
 
@@ -98,10 +98,8 @@ def evidence(
     log_posterior = thinned.log_posterior.reshape(-1)
     lower = np.array([p.lower for p in problem.parameters], dtype=np.float64)
     upper = np.array([p.upper for p in problem.parameters], dtype=np.float64)
-    labels = np.zeros(len(samples), dtype=np.int64) if density is None else density.nearest(samples)
-    fitted = StudentMixture.from_draws(samples, labels, lower, upper)
-    pick = random.integers(len(samples), size=min(4000, len(samples)))
-    fitted, _ = best_degrees(target, fitted, samples[pick], log_posterior[pick], random)
+    single = StudentMixture.from_draws(samples, np.zeros(len(samples), dtype=np.int64), lower, upper)
+    fitted, _ = refitted(target, density or single, samples, log_posterior, lower, upper, random)
     # Heavier tails than a chain's proposal needs: the weights then have their maximum inside the posterior.
     fitted = fitted.with_degrees(min(fitted.degrees, _MOST_DEGREES))
     points = fitted.draw(draws, random)

@@ -175,9 +175,8 @@ class StudentMixture:
         """Mixture with one component per label, from draws (B, n) of the density to be imitated."""
         width = draws.std(axis=0)
         # As if every parameter could come this low: a logarithm must not meet zero.
-        scales = chosen_scales(
-            np.minimum(draws.mean(axis=0), draws.min(axis=0) + 4.0 * width), width, lower, upper
-        )
+        lowest = np.minimum(draws.mean(axis=0), draws.min(axis=0) + 4.0 * width)
+        scales = chosen_scales(lowest, width, lower, upper)
         y, _ = scales.scaled(draws)
         spread = np.maximum(y.std(axis=0), 1e-300)
         weights, means, covariances = [], [], []

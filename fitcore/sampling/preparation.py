@@ -11,7 +11,15 @@ import numpy as np
 from fitcore.sampling.mixture import StudentMixture
 from observables.errors import ConvergenceError, InputError
 
-__all__ = ["Mode", "Target", "best_degrees", "checked_modes", "legacy_random_state", "start_points"]
+__all__ = [
+    "Mode",
+    "Target",
+    "best_degrees",
+    "checked_modes",
+    "legacy_random_state",
+    "refitted",
+    "start_points",
+]
 
 Mode = tuple[np.ndarray, np.ndarray, float]
 
@@ -191,6 +199,24 @@ def best_degrees(
         if acceptance > best_acceptance:
             best, best_acceptance = trial, acceptance
     return best, best_acceptance
+
+
+def refitted(
+    target: Target,
+    previous: StudentMixture,
+    coords: np.ndarray,
+    log_prob: np.ndarray,
+    lower: np.ndarray,
+    upper: np.ndarray,
+    random: Any,
+) -> tuple[StudentMixture, float]:
+    """The mixture that imitates chain points (B, n) best, and its predicted acceptance.
+
+    One component per component of ``previous``.
+    """
+    fitted = StudentMixture.from_draws(coords, previous.nearest(coords), lower, upper)
+    pick = (random.random(min(2000, len(coords))) * len(coords)).astype(np.int64)
+    return best_degrees(target, fitted, coords[pick], log_prob[pick], random)
 
 
 @dataclass(frozen=True)

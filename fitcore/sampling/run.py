@@ -18,9 +18,9 @@ from fitcore.sampling.preparation import (
     Mode,
     Prepared,
     Target,
-    best_degrees,
     checked_modes,
     legacy_random_state,
+    refitted,
     shares,
     start_points,
 )
@@ -146,14 +146,13 @@ class Run:
             steps += PILOT_STEPS
             half = store.get_chain(discard=PILOT_STEPS // 2, flat=True)
             half_log_prob = store.get_log_prob(discard=PILOT_STEPS // 2, flat=True)
-            labels = density.nearest(half)
-            refitted = StudentMixture.from_draws(half, labels, self.lower, self.upper)
             random.set_state(state.random_state)
-            pick = random.randint(len(half), size=min(2000, len(half)))
-            refitted, achieved = best_degrees(self.target, refitted, half[pick], half_log_prob[pick], random)
+            density, achieved = refitted(
+                self.target, density, half, half_log_prob, self.lower, self.upper, random
+            )
             state.random_state = random.get_state()
             settled = achieved < 1.1 * acceptance and achieved > 0.2
-            density, acceptance = refitted, achieved
+            acceptance = achieved
             _LOG.debug("pilot: %d steps, predicted acceptance %.2f", steps, acceptance)
             if self.progress is not None:
                 self.progress(Progress("pilot", steps, len(coords), 0.0, None, None, acceptance, 0.0, None))

@@ -84,11 +84,13 @@ class BudgetResult:
                     "groups": rows(self.groups[name]),
                 }
                 for name in self.quantities
-            }
+            },
         }
 
 
-def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.random.Generator | int | None = 0) -> BudgetResult:
+def budget(
+    problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.random.Generator | int | None = 0
+) -> BudgetResult:
     """Error budgets of parameters or derived quantities.
 
     Parameters
@@ -131,7 +133,9 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
     refits = minimise_batch(problem, np.tile(theta, (2 * m, 1)), data=data)
     if not refits.converged.all():
         lost = [problem.entries[i % m].id for i in np.flatnonzero(~refits.converged)]
-        raise ConvergenceError(f"refits with shifted {', '.join(dict.fromkeys(lost))} did not converge", refits)
+        raise ConvergenceError(
+            f"refits with shifted {', '.join(dict.fromkeys(lost))} did not converge", refits
+        )
 
     covariance = curvature_at(problem, theta).covariance
     values, gradient = problem.linearise_quantities(theta, wanted)
@@ -163,7 +167,9 @@ def budget(problem: Any, names: Iterable[str], *, starts: int = 64, rng: np.rand
             part = shifts[members]
             total = float(part @ correlation[np.ix_(members, members)] @ part)
             rows.append(
-                BudgetRow(group, math.sqrt(max(total, 0.0)), _removal(gradient[q], covariance, directions[members]))
+                BudgetRow(
+                    group, math.sqrt(max(total, 0.0)), _removal(gradient[q], covariance, directions[members])
+                )
             )
         grouped[name] = _sorted(rows)
     return BudgetResult(

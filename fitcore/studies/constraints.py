@@ -19,6 +19,7 @@ from typing import Any
 import numpy as np
 
 from fitcore.minimise.batch_solver import minimise_batch
+from fitcore.minimise.minima import find_minima
 from fitcore.minimise.profile import Profile, profile
 from fitcore.minimise.uncertainty import curvature_at
 
@@ -142,7 +143,9 @@ def divide(problem: Any, theta: np.ndarray, names: Sequence[str], half_widths: S
 
     constraints = []
     for q in speaking:
-        partners = [p for p in fixing if _share_of_theory(theory_part(q), theory_part(p), spread[q], spread[p])]
+        partners = [
+            p for p in fixing if _share_of_theory(theory_part(q), theory_part(p), spread[q], spread[p])
+        ]
         own = make(q)
         # alone means alone: the partner does not sneak in among the entries that fix the rest
         absent = {entries[i].id for p in partners for i in members[p]}
@@ -188,7 +191,10 @@ def profile_constraint(
     for k, parameter in enumerate(alone.parameter_names):
         start[k] = known.get(parameter, start[k])
     near = minimise_batch(alone, start[None])
-    return [profile(alone, names, grids, start=near.theta[0]) for grids in frames]
+    # alone, a constraint is often better met far away: a profile that learns so on its way would start anew
+    seeds = [near.theta[0], *(m.theta for m in find_minima(alone, size=16)[:1])]
+    seeds.sort(key=lambda theta: float(alone.chi2(theta)))
+    return [profile(alone, names, grids, start=seeds[0], minima=seeds[1:]) for grids in frames]
 
 
 def _moves(axes: np.ndarray, parameter: int) -> bool:
@@ -201,7 +207,9 @@ def _combined_error(entries: Sequence[Any], places: Sequence[int]) -> float:
     return 1.0 / math.sqrt(weight)
 
 
-def _moves_of_frame(problem: Any, theta: np.ndarray, axes: np.ndarray, half_widths: Sequence[float]) -> np.ndarray:
+def _moves_of_frame(
+    problem: Any, theta: np.ndarray, axes: np.ndarray, half_widths: Sequence[float]
+) -> np.ndarray:
     """Steps of the parameters (one per axis) that lead to the edge of the frame, shortest in standard deviations."""
     covariance = curvature_at(problem, theta).covariance
     scales = np.array([p.scale for p in problem.parameters])
@@ -216,7 +224,9 @@ def _share_of_theory(first: np.ndarray, second: np.ndarray, error_1: float, erro
     """Whether two predictions move together with their common inputs, visibly against the measured errors."""
     if not first.size:
         return False
-    total = math.hypot(float(np.linalg.norm(first)), error_1) * math.hypot(float(np.linalg.norm(second)), error_2)
+    total = math.hypot(float(np.linalg.norm(first)), error_1) * math.hypot(
+        float(np.linalg.norm(second)), error_2
+    )
     return total > 0.0 and abs(float(first @ second)) > SHARED * total
 
 

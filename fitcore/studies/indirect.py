@@ -17,6 +17,8 @@ __all__ = ["IndirectResult", "IndirectRow", "indirect", "measured_quantities"]
 
 #: Delta chi2 of the 68.27 % and 95.0 % intervals of one quantity.
 LEVELS = (1.0, 3.841458820694124)
+#: Delta chi2 up to which a combination of entries with flat ranges counts as equally good.
+FLAT_TO = 1e-3
 
 
 @dataclass(frozen=True)
@@ -154,7 +156,9 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
     own = [entry for entry in every if entry.quantity == name]
     ids = {entry.id for entry in own}
     overlapping = {e.id for e in every if e.id not in ids and (ids & set(e.overlaps))}
-    overlapping |= {other for entry in own for other in entry.overlaps if other in {e.id for e in every}} - ids
+    overlapping |= {
+        other for entry in own for other in entry.overlaps if other in {e.id for e in every}
+    } - ids
     left_out = tuple(sorted(ids | overlapping))
     unit = problem.unit_of(name)
     flags: list[str] = []
@@ -256,42 +260,70 @@ def _excess_without_overlap(
 
 
 def _direct(problem: Any, name: str) -> tuple[float, tuple[float, float], float]:
-    """Own entries combined: value, (plus, minus) at Delta chi2 = 1, and their chi-square at the combination."""
+    """Own entries combined: value, (plus, minus) at Delta chi2 = 1, and their chi-square at the combination.
+
+    Flat ranges of the entries count: within them a measured value costs nothing, and the combination is the middle of
+    what fits best.
+    """
     places = [i for i, entry in enumerate(problem.entries) if entry.quantity == name]
     entries = [problem.entries[i] for i in places]
+    halves = np.array([problem.ranges.get(entry.id, 0.0) for entry in entries])
     if len(entries) == 1:
-        return entries[0].value, (entries[0].plus, entries[0].minus), 0.0
-    terms = problem.terms
-
-    def chi2_at(values: np.ndarray) -> np.ndarray:
-        predicted = np.tile(terms.values[:, None], (1, len(values)))
-        predicted[places] = values
-        u = terms.standardised(predicted)
-        u[[i for i in range(len(problem.entries)) if i not in places]] = 0.0
-        return _own_chi2(terms, u, places)
+        return entries[0].value, (entries[0].plus + halves[0], entries[0].minus + halves[0]), 0.0
 
     from scipy.optimize import brentq, minimize_scalar
 
-    centre = [e.value for e in entries]
-    reach = max(max(e.plus, e.minus) for e in entries)
-    low, high = min(centre) - reach, max(centre) + reach
-    best = minimize_scalar(lambda v: chi2_at(np.array([v]))[0], bounds=(low, high), method="bounded", options={"xatol": 1e-10 * reach})
+    chi2_at = _own_chi2(problem.terms, places, halves)
+    centre = np.array([e.value for e in entries])
+    if (period := problem.period_of(name)) is not None:  # the images nearest to the first
+        centre -= period * np.rint((centre - centre[0]) / period)
+    reach = float(max(max(e.plus, e.minus) for e in entries) + halves.max())
+    bounds = (float(centre.min()) - reach, float(centre.max()) + reach)
+    best = minimize_scalar(chi2_at, bounds=bounds, method="bounded", options={"xatol": 1e-10 * reach})
     value, lowest = float(best.x), float(best.fun)
 
-    def crossing(sign: float) -> float:
+    def crossing(sign: float, level: float) -> float:
         edge = value + sign * reach
-        while chi2_at(np.array([edge]))[0] < lowest + 1.0:
+        while chi2_at(edge) < lowest + level:
             edge += sign * reach
-        return abs(float(brentq(lambda v: chi2_at(np.array([v]))[0] - lowest - 1.0, value, edge)) - value)
+        return float(brentq(lambda v: chi2_at(v) - lowest - level, value, edge))
 
-    return value, (crossing(1.0), crossing(-1.0)), lowest
+    low, high = crossing(-1.0, 1.0), crossing(1.0, 1.0)
+    if halves.any():
+        value = 0.5 * (crossing(-1.0, FLAT_TO) + crossing(1.0, FLAT_TO))
+    return value, (high - value, value - low), lowest
 
 
-def _own_chi2(terms: Any, u: np.ndarray, places: list[int]) -> np.ndarray:
-    """chi-square of some entries alone: their correlations among themselves, without those to others."""
-    matrix = terms.correlation[np.ix_(places, places)]
-    own = u[places]
-    return np.asarray(np.einsum("ib,ij,jb->b", own, np.linalg.inv(matrix), own))
+def _own_chi2(terms: Any, places: list[int], halves: np.ndarray) -> Callable[[float], float]:
+    """chi-square of some entries alone, as a function of the one value that they measure: their correlations among
+    themselves, without those to others, and with the best shift of each inside its flat range."""
+    root = np.linalg.cholesky(terms.correlation[np.ix_(places, places)])
+    ranged = np.flatnonzero(halves)
+
+    def whitened(value: float, shifts: np.ndarray) -> np.ndarray:
+        predicted = terms.values.copy()
+        predicted[places] = value
+        predicted[np.array(places)[ranged]] += shifts
+        return np.asarray(np.linalg.solve(root, terms.standardised(predicted[:, None])[places, 0]))
+
+    def chi2_at(value: float) -> float:
+        if not ranged.size:
+            return float(np.sum(whitened(value, np.zeros(0)) ** 2))
+        from scipy.optimize import least_squares
+
+        # in units of the ranges; whitened residuals of one quantity are smooth in them
+        width = halves[ranged]
+        found = least_squares(
+            lambda s: whitened(value, s * width),
+            np.zeros(ranged.size),
+            bounds=(-1.0, 1.0),
+            xtol=1e-12,
+            ftol=1e-12,
+            gtol=1e-12,
+        )
+        return float(2.0 * found.cost)
+
+    return chi2_at
 
 
 def _listed(pair: tuple[float, float] | None) -> list[float | None] | None:

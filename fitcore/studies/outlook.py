@@ -138,10 +138,16 @@ def read_future(path: str | Path, problem: Any) -> Future:
         raise InputError(f"{path}: cannot be read ({error}); give the path of a TOML file") from error
     except tomllib.TOMLDecodeError as error:
         raise InputError(f"{path}: not TOML: {error}") from error
-    problems = [f'{path}: unknown key "{key}"; known are title and future' for key in data if key not in ("title", "future")]
+    problems = [
+        f'{path}: unknown key "{key}"; known are title and future'
+        for key in data
+        if key not in ("title", "future")
+    ]
     table = data.get("future")
     if not isinstance(table, dict) or not table:
-        raise InputError([*problems, f'{path}: no [future] table; write future."ID-or-group" = {{ factor = 0.5 }}'])
+        raise InputError(
+            [*problems, f'{path}: no [future] table; write future."ID-or-group" = {{ factor = 0.5 }}']
+        )
     factors: dict[str, float] = {}
     absolute: dict[str, tuple[float, float]] = {}
     own: dict[str, float] = {}
@@ -161,7 +167,11 @@ def read_future(path: str | Path, problem: Any) -> Future:
             continue
         numbers = setting.get("factor", setting.get("error"))
         numbers = numbers if isinstance(numbers, list) else [numbers]
-        if len(numbers) not in (1, 2) or not all(_positive(x) for x in numbers) or ("factor" in setting and len(numbers) != 1):
+        if (
+            len(numbers) not in (1, 2)
+            or not all(_positive(x) for x in numbers)
+            or ("factor" in setting and len(numbers) != 1)
+        ):
             problems.append(f"{where} must be positive, got {setting}")
             continue
         if "factor" in setting:
@@ -170,7 +180,9 @@ def read_future(path: str | Path, problem: Any) -> Future:
             )
             continue
         if len(meant) > 1:
-            problems.append(f"{where} is a group of {len(meant)} entries: an absolute error belongs to one entry")
+            problems.append(
+                f"{where} is a group of {len(meant)} entries: an absolute error belongs to one entry"
+            )
             continue
         try:
             scale = problem.unit_factor(setting["unit"], meant[0].unit)
@@ -218,7 +230,9 @@ def outlook(
     plan = future if isinstance(future, Future) else Future("", dict(future), {})
     known = {e.id for e in problem.inputs.entries}
     if unknown := sorted((set(plan.factors) | set(plan.absolute)) - known):
-        raise InputError(f"no entry {', '.join(unknown)} in {problem.inputs.name}; weakmix show lists the ids")
+        raise InputError(
+            f"no entry {', '.join(unknown)} in {problem.inputs.name}; weakmix show lists the ids"
+        )
     bad = [i for i, factor in plan.factors.items() if not _positive(factor)]
     bad += [i for i, pair in plan.absolute.items() if not all(_positive(error) for error in pair)]
     if bad:
@@ -244,7 +258,9 @@ def outlook(
         factor = plan.factors.get(entry.id, 1.0)
         plus, minus = plan.absolute.get(entry.id, (entry.plus * factor, entry.minus * factor))
         if (plus, minus) != (entry.plus, entry.minus):
-            changed.append((entry.id, math.sqrt(entry.plus * entry.minus), math.sqrt(plus * minus), entry.unit))
+            changed.append(
+                (entry.id, math.sqrt(entry.plus * entry.minus), math.sqrt(plus * minus), entry.unit)
+            )
         errors = {name: error * plus / entry.plus for name, error in entry.errors.items()}
         same.append(replace(entry, value=float(value)))
         entries.append(replace(entry, value=float(value), plus=plus, minus=minus, errors=errors))
@@ -270,7 +286,9 @@ def outlook(
             )
         )
     flags = ["several-minima"] if len(minima) > 1 and minima[1].chi2 < minima[0].chi2 + LEVELS[1] else []
-    lost = {name for table in (now_intervals, future_intervals, today_intervals) for name, _, _ in table.flagged}
+    lost = {
+        name for table in (now_intervals, future_intervals, today_intervals) for name, _, _ in table.flagged
+    }
     flags += [f"interval-not-found: {name}" for name in wanted if name in lost]
     return OutlookResult(plan.title, tuple(changed), tuple(rows), tuple(flags))
 
@@ -280,4 +298,9 @@ def _pair(interval: Any) -> tuple[float, float]:
 
 
 def _positive(number: Any) -> bool:
-    return isinstance(number, int | float) and not isinstance(number, bool) and math.isfinite(number) and number > 0
+    return (
+        isinstance(number, int | float)
+        and not isinstance(number, bool)
+        and math.isfinite(number)
+        and number > 0
+    )

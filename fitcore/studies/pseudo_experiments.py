@@ -22,6 +22,8 @@ __all__ = ["Truth", "held_fit", "run_block", "likelihood_ratio"]
 
 #: A held fit that ends lower than the free one by more than this shows that the free one missed its minimum.
 LOWER_BY = 1e-6
+#: A variance below this share of the uncorrelated one means that all its parameters sit at bounds.
+FROZEN = 1e-9
 
 
 @dataclass(frozen=True)
@@ -194,9 +196,9 @@ def _pulls(problem: Any, free: BatchResult, name: str, value: float, data: np.nd
     fitted, direction = _linear(problem, free.theta, name)
     pattern = analyse(linear.normal.rows, linear.normal.cols, free.theta.shape[1])
     diagonal = pattern.diagonal(linear.normal.values)
-    ridge = 1e-12 * np.where(diagonal > 0.0, diagonal, 1.0)
+    diagonal = np.where(diagonal > 0.0, diagonal, 1.0)
     # parameters at a bound do not move
-    ridge = np.where(free.at_bound.T != 0, 1e30 * np.where(diagonal > 0.0, diagonal, 1.0), ridge)
+    ridge = np.where(free.at_bound.T != 0, 1e30, 1e-12) * diagonal
     factor = pattern.factor(linear.normal.values, ridge)
     solved = factor.solve(direction[:, None, :])[:, 0]
     variance = (direction * solved).sum(axis=0)
@@ -206,7 +208,8 @@ def _pulls(problem: Any, free: BatchResult, name: str, value: float, data: np.nd
         difference = difference - period * np.rint(difference / period)
     with np.errstate(invalid="ignore", divide="ignore"):
         pull = difference / np.sqrt(variance)
-    pull[~free.converged | ~np.isfinite(pull) | (variance <= 1e-20 * value**2)] = np.nan
+    frozen = variance <= FROZEN * (direction**2 / diagonal).sum(axis=0)
+    pull[~free.converged | ~np.isfinite(pull) | frozen] = np.nan
     return np.asarray(pull)
 
 

@@ -87,7 +87,7 @@ class ToyStore:
         whole = content[: content.rfind(b"\n") + 1]
         if whole:
             self._read(path, whole.splitlines())
-        elif content and not json.dumps(self.header).encode().startswith(content[:40]):
+        elif content and not _line(self.header).startswith(content[:40]):
             raise StoreError(f"{path}: is not a file of pseudo-experiments; nothing was touched; give another name")
         try:
             self._stream = path.open("r+b" if path.exists() else "xb")
@@ -136,7 +136,7 @@ class ToyStore:
     def _append(self, line: Mapping[str, Any]) -> None:
         assert self._stream is not None
         try:
-            self._stream.write(json.dumps(line, allow_nan=False, separators=(",", ":")).encode() + b"\n")
+            self._stream.write(_line(line))
             self._stream.flush()
             os.fsync(self._stream.fileno())
         except OSError as error:
@@ -156,6 +156,10 @@ class ToyStore:
 
     def __exit__(self, *_exception: object) -> None:
         self.close()
+
+
+def _line(content: Mapping[str, Any]) -> bytes:
+    return json.dumps(content, allow_nan=False, separators=(",", ":")).encode() + b"\n"
 
 
 def _encode(column: np.ndarray) -> list[Any]:

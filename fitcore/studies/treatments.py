@@ -105,6 +105,8 @@ def compare_treatments(
             flat, inner, outer = ((end[0], end[1]) for end in table[name])
             wide = flat[1] - flat[0] > WIDE * (inner[1] - inner[0])
             rows[name] = TreatmentRow(float(value), inner, outer, flat if wide else None)
-        flags = tuple(f"interval-not-found: {name}" for name in wanted if name in {lost[0] for lost in table.flagged})
+        flags = tuple(
+            f"interval-not-found: {name}" for name in wanted if name in {lost[0] for lost in table.flagged}
+        )
         made.append(Treatment(treatment, float(table.minimum), rows, flags))
     return tuple(made)

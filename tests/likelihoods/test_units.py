@@ -124,5 +124,7 @@ def test_common_units_agree_with_the_registry() -> None:
 
 
 def test_published_inputs_do_not_wait_for_pint() -> None:
-    code = "import sys, likelihoods; likelihoods.load_inputs('averages-2026'); sys.exit('pint' in sys.modules)"
+    code = (
+        "import sys, likelihoods; likelihoods.load_inputs('averages-2026'); sys.exit('pint' in sys.modules)"
+    )
     subprocess.run([sys.executable, "-c", code], check=True)

@@ -91,7 +91,11 @@ def test_out_names_the_folder_and_json_the_file(weakmix: Run, template: Path, tm
     refused = weakmix("fit", template, "--out", "other")
     assert refused.exit_code == 2
     assert "other" in refused.stderr
-    assert weakmix("fit", template, "--json", "no/such/place.json", "--out", "mine").exit_code == 2
+    for place, words in (("no/such/place.json", "no/such does not exist"), ("mine", "is a folder")):
+        refused = weakmix("fit", template, "--json", place, "--out", "another")
+        assert refused.exit_code == 2
+        assert words in refused.stderr
+        assert not (tmp_path / "another").exists()  # found out before the fit
 
 
 def test_selections_change_the_fit(weakmix: Run, template: Path) -> None:
@@ -220,3 +224,28 @@ def test_truth_is_compared_on_the_side_where_it_lies(result: FitResult) -> None:
     assert set(rows) == {"x"}
     rows = against_truth(replace(result, parameters=one, derived={}), {"x": 0.95})
     assert rows["x"]["distance"] == pytest.approx(-0.5)
+
+
+def test_seed_reaches_the_fit_and_jobs_is_offered_only_where_it_works(
+    weakmix: Run, template: Path, result: FitResult, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    seen: list[Any] = []
+
+    def fit(*_arguments: Any, **options: Any) -> FitResult:
+        seen.append(options["rng"])
+        return result
+
+    monkeypatch.setattr(Problem, "fit", fit)
+    assert weakmix("fit", template, "--seed", 7, "--json", "-").exit_code == 0
+    assert weakmix("fit", template, "--seed", 8, "--out", "run", "--no-figures").exit_code == 0
+    assert seen == [7, 8]
+    for command in ("fit", "demo"):
+        assert "--jobs" not in weakmix(command, "--help").stdout
+    assert "--jobs" in weakmix("calibrate", "--help").stdout
+
+
+def test_the_verdict_comes_first(weakmix: Run) -> None:
+    lines = weakmix("fit", "averages-2026", "--no-figures").stdout.splitlines()
+    assert "quark mixing fit" in lines[0]
+    assert lines[1].startswith("Converged. chi-square")
+    assert lines[2].split()[0] == "recalled"

@@ -166,7 +166,9 @@ def complete(words: str) -> list[str]:
     parts = words.split(" ")
     environment = {
         **os.environ,
-        **{"_WEAKMIX_COMPLETE": "bash_complete", "COMP_WORDS": words, "COMP_CWORD": str(len(parts) - 1)},
+        "_WEAKMIX_COMPLETE": "bash_complete",
+        "COMP_WORDS": words,
+        "COMP_CWORD": str(len(parts) - 1),
     }
     code = "from fitcore.commands.main import main; main()"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, env=environment)

@@ -17,7 +17,7 @@ from observables import catalogue
 
 Run = Callable[..., Result]
 
-OWN = '''
+OWN = """
 from observables import Complex, Real, catalogue, quantity
 
 @quantity(unit="1", title="Ratio of our own", source="invented")
@@ -30,7 +30,7 @@ own_twist.parameter("own_shift", unit="1", start=0.0, scale=0.1, title="our shif
 @own_twist.replaces("own_ratio")
 def own_ratio_shifted(standard, own_shift) -> Real:
     return standard * (1 + own_shift)
-'''
+"""
 
 INPUTS = """
 title = "Ours"
@@ -63,10 +63,14 @@ def module(tmp_path: Path) -> Path:
     return path
 
 
-def test_own_quantity_is_found_explained_computed_and_fitted(weakmix: Run, module: Path, template: Path) -> None:
+def test_own_quantity_is_found_explained_computed_and_fitted(
+    weakmix: Run, module: Path, template: Path
+) -> None:
     assert weakmix("find", "own_ratio").exit_code == 2
     assert "own_ratio" in weakmix("find", "own_ratio", "--module", module).stdout
-    assert "return magnitude_V_ub / magnitude_V_cb" in weakmix("recipe", "own_ratio", "--module", module).stdout
+    assert (
+        "return magnitude_V_ub / magnitude_V_cb" in weakmix("recipe", "own_ratio", "--module", module).stdout
+    )
     done = weakmix(
         *("compute", "own_ratio", "magnitude_V_ub", "magnitude_V_cb", "--module", module),
         *("--start-values", "--json", "-"),
@@ -116,12 +120,18 @@ def test_own_hypothesis(weakmix: Run, module: Path) -> None:
     ("text", "words"),
     [
         ("x = 1\ny = (\n", "my_quantities.py:2: the module cannot be imported: SyntaxError"),
-        ("import no_such_module_anywhere\n", "my_quantities.py:1: the module cannot be imported: ModuleNotFoundError"),
+        (
+            "import no_such_module_anywhere\n",
+            "my_quantities.py:1: the module cannot be imported: ModuleNotFoundError",
+        ),
         ("x = 1\n\ny = 1 / 0\n", "my_quantities.py:3: the module cannot be imported: ZeroDivisionError"),
         ("raise SystemExit(0)\n", "my_quantities.py:1: the module cannot be imported: SystemExit"),
         (OWN.replace("own_ratio(", "jarlskog("), "two owners of the name 'jarlskog'"),
         (OWN.replace(" -> Real", "", 1), "must say '-> Real' or '-> Complex'"),
-        (OWN.replace("magnitude_V_ub, magnitude_V_cb", "magnitude_V_ub, magnitude_V_xx"), "'magnitude_V_xx', which nobody"),
+        (
+            OWN.replace("magnitude_V_ub, magnitude_V_cb", "magnitude_V_ub, magnitude_V_xx"),
+            "'magnitude_V_xx', which nobody",
+        ),
     ],
 )
 def test_faults_of_a_module(weakmix: Run, module: Path, template: Path, text: str, words: str) -> None:

@@ -73,7 +73,9 @@ def test_own_file_equals_the_published_set_with_that_entry_changed(
     assert own["chi2"] == pytest.approx(same["chi2"], abs=1e-6)
     assert own["degrees_of_freedom"] == same["degrees_of_freedom"] == published["degrees_of_freedom"]
     for name, estimate in same["parameters"].items():
-        assert own["parameters"][name]["value"] == pytest.approx(estimate["value"], abs=1e-4 * estimate["error"])
+        assert own["parameters"][name]["value"] == pytest.approx(
+            estimate["value"], abs=1e-4 * estimate["error"]
+        )
         assert own["parameters"][name]["error"] == pytest.approx(estimate["error"], rel=1e-4)
     (row,) = [row for row in own["measurements"] if row["id"] == "ours"]
     assert row["measured"] == pytest.approx(published_as[0] * factor, rel=1e-14)
@@ -87,7 +89,10 @@ def test_own_file_equals_the_published_set_with_that_entry_changed(
 
 def test_dropping_is_leaving_out(weakmix: Run) -> None:
     Path("own.toml").write_text('title = "Less"\ninclude = ["averages-2026"]\ndrop = ["alpha-average"]\n')
-    less, without = fitted(weakmix, "own.toml"), fitted(weakmix, "averages-2026", "--without", "alpha-average")
+    less, without = (
+        fitted(weakmix, "own.toml"),
+        fitted(weakmix, "averages-2026", "--without", "alpha-average"),
+    )
     assert less["chi2"] == pytest.approx(without["chi2"], abs=1e-9)
     assert less["parameters"] == without["parameters"]
     assert less["degrees_of_freedom"] == 8
@@ -111,15 +116,20 @@ def test_json_has_the_documented_keys(weakmix: Run) -> None:
     assert [len(row) for row in content["correlation"]["matrix"]] == [size] * size
 
 
-@pytest.mark.parametrize(
-    ("rhobar", "etabar"), [(-0.31, 0.42), (0.27, -0.55), (-0.18, -0.23), (0.6, 0.2)]
-)
-def test_compute_anywhere_agrees_with_an_independent_calculation(weakmix: Run, rhobar: float, etabar: float) -> None:
+@pytest.mark.parametrize(("rhobar", "etabar"), [(-0.31, 0.42), (0.27, -0.55), (-0.18, -0.23), (0.6, 0.2)])
+def test_compute_anywhere_agrees_with_an_independent_calculation(
+    weakmix: Run, rhobar: float, etabar: float
+) -> None:
     names = [
         *("jarlskog", "angle_alpha", "angle_beta", "angle_gamma", "magnitude_V_td", "mixing_frequency_Bd"),
         *("mixing_frequency_Bs", "epsilon_K", "sine_2beta_ccs", "branching_Bu_tau_nu", "superallowed_Ft"),
     ]
-    point = {"wolfenstein_lambda": 0.27, "wolfenstein_A": 0.71, "wolfenstein_rhobar": rhobar, "wolfenstein_etabar": etabar}
+    point = {
+        "wolfenstein_lambda": 0.27,
+        "wolfenstein_A": 0.71,
+        "wolfenstein_rhobar": rhobar,
+        "wolfenstein_etabar": etabar,
+    }
     given = [word for name, value in point.items() for word in ("--at", f"{name}={value}")]
     done = weakmix("compute", *names, "--start-values", *given, "--json", "-")
     assert done.exit_code == 0, done.stderr

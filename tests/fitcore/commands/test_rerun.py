@@ -90,7 +90,10 @@ def test_every_repeatable_command(weakmix: Run, template: Path, arguments: tuple
     ("spoil", "words"),
     [
         (lambda run: (run / "inputs.toml").unlink(), "inputs.toml: is missing"),
-        (lambda run: (run / "inputs.toml").write_text("title = 'x'\n"), "inputs.toml: was changed after the run"),
+        (
+            lambda run: (run / "inputs.toml").write_text("title = 'x'\n"),
+            "inputs.toml: was changed after the run",
+        ),
         (lambda run: (run / "result.json").unlink(), "result.json: is missing"),
         (lambda run: (run / "result.json").write_text("{"), "result.json: is not readable JSON"),
         (lambda run: (run / "result.json").write_text("[]"), "result.json: does not hold a result"),
@@ -100,7 +103,10 @@ def test_every_repeatable_command(weakmix: Run, template: Path, arguments: tuple
         (lambda run: _record(run, format_version=99), "newer weakmix"),
         (lambda run: _record(run, files=None), "is incomplete"),
         (lambda run: _record(run, command_line=["weakmix"]), "does not name the command"),
-        (lambda run: _record(run, command_line=["weakmix", "fit", "x", "--wrong"]), "options are not understood"),
+        (
+            lambda run: _record(run, command_line=["weakmix", "fit", "x", "--wrong"]),
+            "options are not understood",
+        ),
     ],
 )
 def test_unusable_folders(weakmix: Run, made: Path, spoil: Callable[[Path], Any], words: str) -> None:
@@ -141,11 +147,17 @@ def test_compare_knows_the_scale_of_each_number() -> None:
     assert where(provenance={"created": 2}) == []
     assert where(chi2=12.0 + 0.9e-6) == []
     assert where(chi2=12.0 + 1.1e-6) == ["chi2"]
-    assert where(parameters={"a": {"value": 1.0 + 1.9e-6, "error": 2.0}, "b": {"value": 5.0, "error": None}}) == []
-    assert where(parameters={"a": {"value": 1.0, "error": 2.0}, "b": {"value": 5.0 + 1e-7, "error": None}}) == [
-        "parameters.b.value"
+    assert (
+        where(parameters={"a": {"value": 1.0 + 1.9e-6, "error": 2.0}, "b": {"value": 5.0, "error": None}})
+        == []
+    )
+    assert where(
+        parameters={"a": {"value": 1.0, "error": 2.0}, "b": {"value": 5.0 + 1e-7, "error": None}}
+    ) == ["parameters.b.value"]
+    assert where(parameters={"a": {"value": 1.0, "error": 2.0}}) == [
+        "parameters.b.value",
+        "parameters.b.error",
     ]
-    assert where(parameters={"a": {"value": 1.0, "error": 2.0}}) == ["parameters.b.value", "parameters.b.error"]
     swapped = {"names": ["b", "a"], "matrix": [[1.0, 0.2], [0.2, 4.0]]}
     assert where(covariance=swapped) == []
     assert where(covariance={"names": ["a", "b"], "matrix": [[4.0, 0.3], [0.3, 1.0]]}) == ["covariance[a][b]"]

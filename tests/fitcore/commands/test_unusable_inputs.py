@@ -82,7 +82,11 @@ CASES = {
         "error must be positive, not -0.0008; write errors without sign",
     ),
     "zero-error": (TITLE + but(ONE, "0.0008", "0.0"), f"mine.toml:7: {FIRST}", "not 0; write an error that"),
-    "nan-error": (TITLE + but(ONE, "0.0008", "nan"), f"mine.toml:7: {FIRST}", "error must be finite, not nan"),
+    "nan-error": (
+        TITLE + but(ONE, "0.0008", "nan"),
+        f"mine.toml:7: {FIRST}",
+        "error must be finite, not nan",
+    ),
     "infinite-value": (TITLE + but(ONE, "0.2243", "inf"), f"mine.toml:6: {FIRST}", "value must be finite"),
     "matrix-not-symmetric": (
         TITLE + but(PAIR, "[0.2, 1.0]]", "[0.3, 1.0]]"),
@@ -99,7 +103,11 @@ CASES = {
         'mine.toml:9: [correlated 1 "pair"] ',
         "2 quantities need 2 x 2",
     ),
-    "duplicate-id": (TITLE + ONE + "\n" + ONE, 'mine.toml:12: [measurement 2 "V-us"] ', "first used in line 4"),
+    "duplicate-id": (
+        TITLE + ONE + "\n" + ONE,
+        'mine.toml:12: [measurement 2 "V-us"] ',
+        "first used in line 4",
+    ),
     "circular-include": (
         'include = ["other.toml"]\n' + TITLE + ONE,
         "other.toml:1: ",
@@ -150,7 +158,11 @@ def test_all_mistakes_are_shown_together(weakmix: Run, folder: Path) -> None:
 
 @pytest.mark.parametrize(
     ("source", "words"),
-    [("nowhere.toml", "no such file and no bundled inputs"), (".", "is a directory"), ("avrages-2026", "averages-2026")],
+    [
+        ("nowhere.toml", "no such file and no bundled inputs"),
+        (".", "is a directory"),
+        ("avrages-2026", "averages-2026"),
+    ],
 )
 def test_no_such_file(weakmix: Run, folder: Path, source: str, words: str) -> None:
     done = weakmix("fit", source, "--out", "run")
@@ -160,7 +172,7 @@ def test_no_such_file(weakmix: Run, folder: Path, source: str, words: str) -> No
 
 
 def test_bytes_that_are_no_text(weakmix: Run, folder: Path) -> None:
-    (folder / "mine.toml").write_bytes(b"title = \"\xff\xfe\"\n")
+    (folder / "mine.toml").write_bytes(b'title = "\xff\xfe"\n')
     done = weakmix("fit", "mine.toml")
     assert done.exit_code == 2
     assert "mine.toml" in done.stderr
@@ -180,14 +192,14 @@ def test_mistakes_seen_from_the_shell(folder: Path, name: str) -> None:
     assert not (folder / "weakmix-runs").exists()
 
 
-IMPOSSIBLE = '''
+IMPOSSIBLE = """
 import numpy as np
 from observables import Real, quantity
 
 @quantity(unit="1", title="A root of something negative", source="invented")
 def impossible_root(magnitude_V_us) -> Real:
     return np.sqrt(-1.0 - magnitude_V_us)
-'''
+"""
 
 
 def test_a_fit_that_cannot_converge_exits_1_and_says_why(weakmix: Run, folder: Path) -> None:

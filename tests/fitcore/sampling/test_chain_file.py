@@ -311,6 +311,18 @@ class TestTrouble:
         with ChainFile.open(finished) as chain:
             np.testing.assert_array_equal(chain.get_chain(), run(None, 43).get_chain())
 
+    def test_stale_table_entries_after_the_last_block_do_no_harm(self, finished):
+        """A writer may die between making room in a table and filling it."""
+        for value in (0, 3, 40, 10**9):
+            with h5py.File(finished, "r+") as file:
+                file["bookkeeping/block_end"].resize(6, axis=0)
+                file["bookkeeping/block_end"][5] = value
+                file["bookkeeping/closed_at"][()] = -1
+            assert verify(finished).steps == 40
+        with ChainFile.resume(finished) as chain:
+            run(chain, 3, start=chain.get_last_sample())
+        assert verify(finished).steps == 43
+
     def test_second_writer_is_refused_with_the_first_ones_host_and_process(self, finished):
         script = (
             "import sys; from fitcore.sampling.chain_file import ChainFile\n"
@@ -396,3 +408,21 @@ class TestTrouble:
         assert "parameters only in the present problem: p2" in text
         assert "parameters p1: " in text
         assert "'upper': 1.0" in text
+
+
+def test_reading_a_chain_needs_no_sampler():
+    """emcee takes a second to import; looking at a chain must not pay for it."""
+    script = (
+        "import sys\n"
+        "import fitcore.sampling.verify, fitcore.sampling.summary, fitcore.sampling.export\n"
+        "import fitcore.sampling.derive, fitcore.sampling.posterior\n"
+        "print([m for m in ('emcee', 'h5py', 'scipy', 'matplotlib') if m in sys.modules])"
+    )
+    found = subprocess.run(
+        [sys.executable, "-c", script],
+        check=True,
+        capture_output=True,
+        text=True,
+        cwd=Path(__file__).parents[3],
+    )
+    assert found.stdout.strip() == "[]"

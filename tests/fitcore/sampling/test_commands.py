@@ -155,7 +155,9 @@ def test_interrupt_during_the_pilot_run(tmp_path, monkeypatch):
     assert result.exit_code == 0
     assert "Interrupted during the pilot run" in result.stdout
     monkeypatch.undo()
-    result = run(sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--effective", 500)
+    result = run(
+        sample_command.command, "averages-2026-tree", "--chain", tmp_path / "c.h5", "--effective", 500
+    )
     assert result.exit_code == 0, result.output
 
 

@@ -56,7 +56,9 @@ def test_published_averages_add_up():
     result = budget(problem, ["wolfenstein_rhobar", "wolfenstein_A"])
     for name in result.quantities:
         total = math.sqrt(sum(row.shift**2 for row in result.entries[name]))
-        assert total == pytest.approx(result.errors[name], rel=0.02)  # asymmetric errors and curvature: not exact
+        assert total == pytest.approx(
+            result.errors[name], rel=0.02
+        )  # asymmetric errors and curvature: not exact
     # the ratio of B-mixing matrix elements drives the apex; |V_us|, through A lambda^2 = |V_cb|, drives A
     assert result.entries["wolfenstein_rhobar"][0].name == "mixing-matrix-element-ratio"
     assert result.entries["wolfenstein_A"][0].name == "V-us"

@@ -27,7 +27,11 @@ REFERENCE_TENSIONS = {
     "angle_gamma": 0.24,
     "epsilon_K": 0.03,
 }
-REFERENCE_VALUES = {"isospin_alpha": (92.2, 1.5), "sine_2beta_ccs": (0.745, 0.026), "angle_gamma": (65.6, 1.6)}
+REFERENCE_VALUES = {
+    "isospin_alpha": (92.2, 1.5),
+    "sine_2beta_ccs": (0.745, 0.026),
+    "angle_gamma": (65.6, 1.6),
+}
 TOLERANCE = 0.08  # of the uncertainty: twice what two independent calculations differ by
 
 
@@ -154,7 +158,9 @@ def test_tensions_of_the_published_averages(all_rows, name):
 def test_indirect_values_of_the_published_averages(all_rows, name):
     value, error = REFERENCE_VALUES[name]
     low, high = all_rows[name].interval_68
-    assert all_rows[name].value == pytest.approx(value, abs=TOLERANCE * error + 0.5 * 10.0 ** -len(str(value).split(".")[1]))
+    assert all_rows[name].value == pytest.approx(
+        value, abs=TOLERANCE * error + 0.5 * 10.0 ** -len(str(value).split(".")[1])
+    )
     assert 0.5 * (high - low) == pytest.approx(error, rel=TOLERANCE)
 
 

@@ -70,7 +70,10 @@ def test_the_file(linear, tmp_path):
 def test_units_and_asymmetric_errors(tmp_path):
     problem = Problem.load("averages-2026")
     path = tmp_path / "future.toml"
-    path.write_text('[future]\nmixing-matrix-element-Bs = { error = 3.0, unit = "MeV" }\nalpha-average = { error = [2.0, 1.0], unit = "deg" }\n')
+    path.write_text(
+        '[future]\nmixing-matrix-element-Bs = { error = 3.0, unit = "MeV" }\n'
+        'alpha-average = { error = [2.0, 1.0], unit = "deg" }\n'
+    )
     plan = read_future(path, problem)
     assert plan.absolute["mixing-matrix-element-Bs"] == pytest.approx((0.003, 0.003))
     assert plan.absolute["alpha-average"] == (2.0, 1.0)
