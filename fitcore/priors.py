@@ -22,7 +22,8 @@ def log_prior(parameters: Sequence[Any], theta: np.ndarray) -> np.ndarray:
     Returns
     -------
     ndarray, shape (B,)
-        -inf outside. Flat priors with two finite bounds are normalised; improper ones contribute 0 inside.
+        -inf outside. Flat priors with two finite bounds and all others are normalised inside the bounds; improper
+        ones contribute 0 inside.
     """
     total = np.zeros(theta.shape[1])
     for parameter, values in zip(parameters, theta, strict=True):
@@ -32,7 +33,7 @@ def log_prior(parameters: Sequence[Any], theta: np.ndarray) -> np.ndarray:
         with np.errstate(all="ignore"):
             if kind == "normal":
                 z = (values - prior.mean) / prior.error
-                total += -0.5 * z * z - np.log(prior.error * np.sqrt(2.0 * np.pi))
+                total += -0.5 * z * z - np.log(prior.error * np.sqrt(2.0 * np.pi)) - _log_mass(prior, lower, upper)
             elif kind == "log-uniform":
                 lower, upper = max(lower, prior.lower), min(upper, prior.upper)
                 total += -np.log(values) - np.log(np.log(upper / lower))
@@ -46,6 +47,18 @@ def log_prior(parameters: Sequence[Any], theta: np.ndarray) -> np.ndarray:
                     total -= np.log(upper - lower)
         total[~((values >= lower) & (values <= upper))] = -np.inf
     return total
+
+
+def _log_mass(prior: Any, lower: float, upper: float) -> float:
+    """Log of the part of a normal prior that lies inside the bounds."""
+    if np.isinf(lower) and np.isinf(upper):
+        return 0.0
+    from scipy.special import log_ndtr
+
+    low, high = (lower - prior.mean) / prior.error, (upper - prior.mean) / prior.error
+    if low > 0.0:  # the lower tail is where the difference of two logarithms is exact
+        low, high = -high, -low
+    return float(log_ndtr(high) + np.log1p(-np.exp(log_ndtr(low) - log_ndtr(high))))
 
 
 def proper(parameter: Any) -> bool:

@@ -504,6 +504,8 @@ class Problem:
     def with_entries(self, entries: Sequence[Entry]) -> Problem:
         """The same problem with changed numbers (values, errors) in its entries; correlations stay."""
         changed = {entry.id: _restated(entry) for entry in entries}
+        # members of an inflate_group that stay keep today's factor: it would be another one without those that change
+        changed = {e.id: _restated(e) for e in self.inputs.entries if e.inflate_group is not None} | changed
         return self.with_inputs(
             replace(self.inputs, entries=tuple(changed.get(e.id, e) for e in self.inputs.entries))
         )

@@ -221,4 +221,12 @@ def _next_active(problem: QuadraticBatch, solved: QuadraticStep, held: np.ndarra
         noise = np.maximum(noise, 1e-10 * np.sqrt(np.abs(problem.pattern.diagonal(problem.values))))
         active[(solved.active > 0) & (pull > noise)] = 0
         active[(solved.active < 0) & (pull < -noise)] = 0
+        if problem.constraint_gradient is not None and problem.constraint_target is not None:
+            # a constraint that pinned components block entirely has no multiplier to pull with
+            missing = problem.constraint_target - (problem.constraint_gradient * solved.step).sum(axis=1)
+            blocked = (solved.reach == 0.0) & (missing != 0.0)
+            if blocked.any():
+                inwards = problem.constraint_gradient * np.where(blocked, missing, 0.0)[:, None, :]
+                active[((solved.active < 0) & (inwards > 0.0).any(axis=0)) & ~held] = 0
+                active[((solved.active > 0) & (inwards < 0.0).any(axis=0)) & ~held] = 0
     return active

@@ -13,6 +13,8 @@ __all__ = ["Curvature", "curvature_at", "hessian"]
 RANK_TOLERANCE = 1e-7
 #: A parameter closer to its bound than this many of its steps sits on it.
 AT_BOUND = 1e-3
+#: Step of the differences of gradients, in standard deviations: the gradients are exact, so it can be short.
+STEP = 1e-3
 
 
 @dataclass(frozen=True)
@@ -109,8 +111,8 @@ def curvature_at(problem: Any, theta: np.ndarray) -> Curvature:
     columns = jacobian[:, moving] * unit
     gauss_newton = basis @ (columns.T @ columns) @ basis.T
     guess = np.sqrt(np.clip(np.diagonal(basis.T @ np.linalg.inv(gauss_newton) @ basis), 0.0, None)) * unit
-    steps = 0.01 * scales
-    steps[moving] = np.where(guess > 0, 0.02 * guess, steps[moving])
+    steps = STEP * scales
+    steps[moving] = np.where(guess > 0, STEP * guess, steps[moving])
     full = hessian(problem, theta, steps)
     reduced = basis @ (full[np.ix_(moving, moving)] * np.outer(unit, unit)) @ basis.T
     eigenvalues = np.linalg.eigvalsh(reduced)

@@ -269,7 +269,8 @@ def _direct(problem: Any, name: str) -> tuple[float, tuple[float, float], float]
     entries = [problem.entries[i] for i in places]
     halves = np.array([problem.ranges.get(entry.id, 0.0) for entry in entries])
     if len(entries) == 1:
-        return entries[0].value, (entries[0].plus + halves[0], entries[0].minus + halves[0]), 0.0
+        half = float(halves[0])
+        return entries[0].value, (entries[0].plus + half, entries[0].minus + half), 0.0
 
     from scipy.optimize import brentq, minimize_scalar
 
