@@ -35,6 +35,7 @@ from observables.graph import Caller, Graph, compile_graph, find_parameters
 if TYPE_CHECKING:
     from fitcore.result import FitResult
     from fitcore.scaleout import ProblemSpec
+    from fitcore.studies.calibration_result import CalibrationResult
 
 __all__ = ["FreeParameter", "Problem"]
 
@@ -538,6 +539,12 @@ class Problem:
 
         return fit(self, derived=derived, profile=profile, starts=starts, rng=rng)
 
+    def calibrate(self, toys: int = 1000, **options: Any) -> CalibrationResult:
+        """p-values, intervals and coverage from pseudo-experiments; see `fitcore.studies.calibration.calibrate`."""
+        from fitcore.studies.calibration import calibrate
+
+        return calibrate(self, toys, **options)
+
 
 def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:
     """Names and paths of modules outside the package that declare quantities or replacements."""
@@ -553,7 +560,8 @@ def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[s
             f"quantities declared in {', '.join(hidden)}, a notebook cell or prompt, do not exist in other processes; "
             "put them into a module and import it, or use one process"
         )
-    names = {Path(module.__file__): name for name, module in list(sys.modules.items()) if getattr(module, "__file__", None) and name != "__main__"}
+    loaded = {name: getattr(module, "__file__", None) for name, module in list(sys.modules.items())}
+    names = {Path(file): name for name, file in loaded.items() if file and name != "__main__"}
     return tuple((names.get(file, file.stem), str(file.resolve())) for file in outside)
 
 

@@ -29,7 +29,7 @@ from concurrent.futures import (
 )
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeVar
 
 from observables.errors import ConvergenceError, InputError, StoreError
 
@@ -44,15 +44,25 @@ __all__ = [
     "run_tasks",
 ]
 
+Key = TypeVar("Key", bound=Hashable)
+
 #: Seconds after which an address without a scheduler is given up.
 CONNECTION_TIMEOUT = 5.0
-HINT = "start one with `dask scheduler` and `dask worker ADDRESS`, check the address, or leave the cluster out"
+HINT = (
+    "start one with `dask scheduler` and `dask worker ADDRESS`, check the address, or leave the cluster out"
+)
 #: How often a task may be lost with its worker before it is blamed.
 ATTEMPTS = 4
 #: Problems kept per worker process.
 KEPT_PROBLEMS = 4
 
-_THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "BLIS_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
+_THREADS = (
+    "OMP_NUM_THREADS",
+    "OPENBLAS_NUM_THREADS",
+    "MKL_NUM_THREADS",
+    "BLIS_NUM_THREADS",
+    "VECLIB_MAXIMUM_THREADS",
+)
 
 
 # -- problems that travel ---------------------------------------------------------------------------------------------
@@ -96,8 +106,8 @@ class ProblemSpec:
         """
         from fitcore.problem import Problem
 
-        for name, path in self.modules:
-            _import_module(name, path)
+        for module, file in self.modules:
+            _import_module(module, file)
         with tempfile.TemporaryDirectory(prefix="weakmix-") as folder:
             path = Path(folder) / "inputs.toml"
             path.write_text(self.inputs_toml, encoding="utf-8")
@@ -115,7 +125,9 @@ def _import_module(name: str, path: str) -> None:
     if any(_same_file(getattr(module, "__file__", None), file) for module in list(sys.modules.values())):
         return
     if not file.exists():
-        raise InputError(f"{path}: the module {name!r} with your quantities is not on this worker; copy it there")
+        raise InputError(
+            f"{path}: the module {name!r} with your quantities is not on this worker; copy it there"
+        )
     with contextlib.suppress(ImportError, ValueError):
         found = importlib.util.find_spec(name)
         if found is not None and _same_file(found.origin, file):
@@ -154,7 +166,7 @@ def problem_from(portable_problem: Any) -> Any:
 
 
 def portable(problem: Any, executor: Executor) -> Any:
-    """What to send to tasks of an executor in place of a problem: the problem itself inside this process, else its spec."""
+    """What to send to the tasks of an executor: the problem itself inside this process, its spec elsewhere."""
     if isinstance(executor, SerialExecutor):
         return problem
     return getattr(problem, "spec", problem)
@@ -262,16 +274,17 @@ class ClusterExecutor(Executor):
 
     def __init__(self, address: str, *, timeout: float = CONNECTION_TIMEOUT) -> None:
         try:
-            from distributed import Client
+            import distributed
         except ImportError as error:
             raise InputError(
                 "--cluster needs dask: install weakmix with the extra 'cluster' (weakmix[cluster])"
             ) from error
         self.address = address
+        open_client: Any = distributed.Client
         _knock(address, timeout)
         try:
             _shake_hands(address, timeout)
-            self._client = Client(address, timeout=timeout, set_as_default=False)
+            self._client: Any = open_client(address, timeout=timeout, set_as_default=False)
         except (OSError, ValueError, TypeError) as error:
             raise InputError(
                 f"cluster {address!r}: what answers there within {timeout:g} s is no dask scheduler; {HINT}"
@@ -305,7 +318,9 @@ class ClusterExecutor(Executor):
 
 def _knock(address: str, timeout: float) -> None:
     """Raise InputError unless something listens at the address; cheaper and cleaner than a client that gives up."""
-    found = re.fullmatch(r"(?:(?P<protocol>[a-z]+)://)?\[?(?P<host>[^/\[\]]+)\]?:(?P<port>\d{1,5})/?", address)
+    found = re.fullmatch(
+        r"(?:(?P<protocol>[a-z]+)://)?\[?(?P<host>[^/\[\]]+)\]?:(?P<port>\d{1,5})/?", address
+    )
     if found is None:
         raise InputError(f"cluster {address!r}: no address of a scheduler; write it like tcp://host:8786")
     if found["protocol"] not in (None, "tcp", "tls", "ws", "wss"):
@@ -320,7 +335,9 @@ def _shake_hands(address: str, timeout: float) -> None:
     """Raise OSError unless a scheduler speaks at the address: a client that meets something silent never returns."""
     import asyncio
 
-    from distributed.core import connect
+    from distributed import core
+
+    connect: Any = core.connect
 
     async def greet() -> None:
         connection = await asyncio.wait_for(connect(address, timeout=timeout), timeout)
@@ -359,11 +376,11 @@ def open_executor(*, jobs: int = 1, cluster: str | None = None, spec: Any = None
 def run_tasks(
     executor: Executor,
     function: Callable[..., Any],
-    tasks: Mapping[Hashable, tuple[Any, ...]],
+    tasks: Mapping[Key, tuple[Any, ...]],
     *,
     patience: float | None = None,
     attempts: int = ATTEMPTS,
-) -> Iterator[tuple[Hashable, Any]]:
+) -> Iterator[tuple[Key, Any]]:
     """Run keyed, idempotent tasks and hand over their results as they come.
 
     Parameters
@@ -390,15 +407,15 @@ def run_tasks(
     Exception
         Whatever a task raised.
     """
-    waiting = list(reversed(tasks))
-    sent: dict[Hashable, int] = dict.fromkeys(tasks, 0)
-    open_futures: dict[Future[Any], Hashable] = {}
-    open_keys: set[Hashable] = set(tasks)
+    waiting: list[Key] = list(tasks)[::-1]
+    sent: dict[Key, int] = dict.fromkeys(tasks, 0)
+    open_futures: dict[Future[Any], Key] = {}
+    open_keys: set[Key] = set(tasks)
     # enough to keep every worker busy, few enough to stop quickly
     concurrency = getattr(executor, "concurrency", 8)
     window = 1 if concurrency == 1 else 2 * concurrency + 2
 
-    def send(key: Hashable) -> None:
+    def send(key: Key) -> None:
         if sent[key] >= attempts:
             raise ConvergenceError(
                 f"task {key}: its worker was lost {attempts} times; finished tasks are kept; look for workers that "
@@ -409,7 +426,9 @@ def run_tasks(
 
     try:
         while open_keys:
-            while waiting and len(open_futures) < window:
+            # futures of answered tasks may never finish: they take no place in the window
+            busy = len(open_keys.intersection(open_futures.values()))
+            for _ in range(min(len(waiting), window - busy)):
                 send(waiting.pop())
             finished, _ = wait(open_futures, timeout=patience, return_when=FIRST_COMPLETED)
             if not finished:

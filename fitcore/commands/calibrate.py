@@ -29,8 +29,8 @@ TOYS_FILE = "toys.jsonl"
 LINE_EVERY = 10.0
 
 CAUTION = (
-    "Pseudo-experiments are thrown around the fitted point, auxiliary theory inputs included, with all other parameters "
-    "at their profiled values: exact where the test does not depend on those, an approximation otherwise."
+    "Pseudo-experiments are thrown around the fitted point, auxiliary theory inputs included, with all other "
+    "parameters at their profiled values: exact where the test does not depend on those, an approximation otherwise."
 )
 
 
@@ -92,13 +92,17 @@ def command(
     problem = request.load()
     wanted = Wanted.parse(targets, cl, coverage, toys)
     announce(output, "calibration", problem)
-    result, place = calibrate_and_store(problem, request, wanted, output, work, cluster, figures=not no_figures)
+    result, place = calibrate_and_store(
+        problem, request, wanted, output, work, cluster, figures=not no_figures
+    )
     show(output, result)
     if place is not None:
         output.show(f"\nWritten to {place}")
     output.write_json(result.to_dict())
     if not result.valid:
-        click.echo(f"weakmix: the calibration cannot be trusted: {result.message or 'no reason recorded'}", err=True)
+        click.echo(
+            f"weakmix: the calibration cannot be trusted: {result.message or 'no reason recorded'}", err=True
+        )
         ctx.exit(EXIT_FELL_SHORT)
 
 
@@ -136,7 +140,9 @@ class Wanted:
             Text that is neither NAME, NAME=VALUE nor NAME=LOW:HIGH:N; more than two quantities at once; no toys.
         """
         if toys < 1:
-            raise input_error(f"--toys {toys}: at least one pseudo-experiment is needed; 1000 give a p-value to 0.016")
+            raise input_error(
+                f"--toys {toys}: at least one pseudo-experiment is needed; 1000 give a p-value to 0.016"
+            )
         values: list[tuple[str, float]] = []
         scanned: dict[str, Any] = {}
         for target in targets:
@@ -159,7 +165,9 @@ class Wanted:
                 f"{', '.join(targets)}: test one quantity at several values, or two quantities at one pair of values"
             )
         if len(scanned) > 2:
-            raise input_error(f"{', '.join(scanned)}: ask for the interval of one quantity or the region of two")
+            raise input_error(
+                f"{', '.join(scanned)}: ask for the interval of one quantity or the region of two"
+            )
         grids = tuple(scanned.values())
         if len(scanned) == 2 and (grids[0] is None) != (grids[1] is None):
             raise input_error(f"{', '.join(targets)}: give a grid for both quantities or for none")
@@ -231,7 +239,10 @@ def store_place(out: Path | None, problem: Problem, options: dict[str, Any], see
     from fitcore.commands.run_folder import DEFAULT_PARENT
 
     what = json.dumps([problem.fingerprint, options["targets"], options["cl"], options["coverage"], seed])
-    return DEFAULT_PARENT / f"calibrate-{problem.inputs.name}-{hashlib.sha256(what.encode()).hexdigest()[:8]}.{TOYS_FILE}"
+    return (
+        DEFAULT_PARENT
+        / f"calibrate-{problem.inputs.name}-{hashlib.sha256(what.encode()).hexdigest()[:8]}.{TOYS_FILE}"
+    )
 
 
 def run(
@@ -244,7 +255,10 @@ def run(
     spec = problem.spec if work.jobs > 1 and cluster is None else None
     done = [0, 0]
     try:
-        with open_executor(jobs=work.jobs, cluster=cluster, spec=spec) as executor, progress(output) as report:
+        with (
+            open_executor(jobs=work.jobs, cluster=cluster, spec=spec) as executor,
+            progress(output) as report,
+        ):
 
             def note(now: int, total: int) -> None:
                 done[:] = now, total
@@ -266,7 +280,9 @@ def run(
         kept = f"{done[0]:,} of {done[1]:,} pseudo-experiments are done"
         if store is None or not store.exists():
             fail(f"\nweakmix: interrupted; {kept} and lost: give --out DIR to keep them.", EXIT_INTERRUPTED)
-        fail(f"\nweakmix: interrupted; {kept} and kept in {store}: the same command goes on.", EXIT_INTERRUPTED)
+        fail(
+            f"\nweakmix: interrupted; {kept} and kept in {store}: the same command goes on.", EXIT_INTERRUPTED
+        )
 
 
 @contextmanager
@@ -290,7 +306,9 @@ def progress(output: Output) -> Iterator[Callable[[int, int], None]]:
         if now - last >= LINE_EVERY and done < total:
             last = now
             left = (now - began) * (total - done) / max(done - first[0], 1)
-            click.echo(f"weakmix: {done:,} of {total:,} pseudo-experiments, about {left:.0f} s to go", err=True)
+            click.echo(
+                f"weakmix: {done:,} of {total:,} pseudo-experiments, about {left:.0f} s to go", err=True
+            )
 
     yield line
 
@@ -299,7 +317,9 @@ def write_run(folder: RunFolder, problem: Problem, result: CalibrationResult, *,
     """Fill a run folder with a calibration: result, exact inputs and figures."""
     folder.write_json("result.json", result.to_dict())
     folder.write_inputs(problem.inputs.name, problem.inputs.resolved_toml())
-    folder.log("calibrated", converged=result.valid, p_value=result.p_value, toys=result.thrown, failed=result.failed)
+    folder.log(
+        "calibrated", converged=result.valid, p_value=result.p_value, toys=result.thrown, failed=result.failed
+    )
     if not figures:
         return
     from fitcore.figures import calibration
@@ -307,7 +327,9 @@ def write_run(folder: RunFolder, problem: Problem, result: CalibrationResult, *,
     revision = f" revision {problem.inputs.revision}" if problem.inputs.revision else ""
     footer = f"{problem.inputs.name}{revision} - {problem.inputs.sha256[:8]} - seed {result.seed}"
     folder.write_figure("goodness", calibration.draw_goodness(result, footer=footer))
-    named = {name for region in result.regions for name in region.names} | {row.name for row in result.coverage}
+    named = {name for region in result.regions for name in region.names} | {
+        row.name for row in result.coverage
+    }
     latex = {name: problem.latex_of(name) for name in named}
     for region in result.regions:
         name = "threshold-" + "-".join(region.names)
@@ -329,7 +351,9 @@ def show(output: Output, result: CalibrationResult) -> None:
         line.append(_p(found.value, found.error), style="bold")
         line.append(f" calibrated with {found.toys:,} pseudo-experiments", style="default")
         line.append(
-            f" ({result.asymptotic:.3g} asymptotically)" if result.asymptotic is not None else " (no asymptotic value)"
+            f" ({result.asymptotic:.3g} asymptotically)"
+            if result.asymptotic is not None
+            else " (no asymptotic value)"
         )
         output.show(line)
         output.show(f"chi-square {result.chi2:.2f} for {result.degrees_of_freedom} degrees of freedom")
@@ -356,7 +380,9 @@ def _points_table(result: CalibrationResult) -> Any:
     from fitcore.commands import tables
     from fitcore.commands.rounding import number
 
-    made = tables.table("Points tested", ("point", "whole"), ("Delta chi2", "right"), "calibrated p", "asymptotic p")
+    made = tables.table(
+        "Points tested", ("point", "whole"), ("Delta chi2", "right"), "calibrated p", "asymptotic p"
+    )
     for point in result.points:
         where = ", ".join(
             f"{name} = {number(value)} {tables.shown_unit(point.units[name])}".rstrip()

@@ -29,6 +29,8 @@ COMMANDS: dict[str, dict[str, str]] = {
     "Fit": {
         "fit": "Find the best fit, its intervals and its pulls.",
         "profile": "Scan one or two quantities: intervals, regions, each constraint as a band.",
+        "sample": "Sample the posterior into a chain file that can be stopped and resumed.",
+        "chain": "Look into chain files: verify, summary, derive, export.",
     },
     "Study": {
         "calibrate": "p-values, intervals and coverage by refitted pseudo-experiments.",

@@ -23,6 +23,8 @@ MOST_POINTS = 1_000_000
 #: Standard deviations around the best fit that a plane of bands shows, and its overview's size in such planes.
 BAND_FRAME = 14.0
 OVERVIEW_POINTS = (73, 49)
+#: A constraint that fails on more of the frame than this is not drawn.
+MOSTLY_LOST = 0.5
 
 
 @dataclass(frozen=True)
@@ -41,7 +43,7 @@ class ConstraintProfile:
 
     constraint: Constraint
     profile: Profile
-    overview: Profile
+    overview: Profile | None
     lowest: float
 
 
@@ -291,19 +293,21 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
     half = [0.5 * float(np.ptp(grid)) for grid in found.grids]
     division = divide(problem, theta, found.names, half)
     wide = _overview_grids(scan)
+    frames = (found.grids, wide) if wide else (found.grids,)
     steps = 1 + len(division.constraints)
-    # everything together is a spot at this scale: a coarse grid finds its other regions, the frame draws it
-    overview = profile(
-        problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4])
-    )
+    overview = None
+    if wide:  # everything together is a spot at this scale: a coarse grid finds its other regions, the frame draws it
+        overview = profile(
+            problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4])
+        )
     done, skipped = [], []
     for number, constraint in enumerate(division.constraints):
         report(number + 1, steps)
-        both = profile_constraint(problem, constraint, found.names, (found.grids, wide), theta)
-        if not both or not np.isfinite(both[0].chi2).any():
+        both = profile_constraint(problem, constraint, found.names, frames, theta)
+        if not both or both[0].flagged.mean() > MOSTLY_LOST:
             skipped.append(constraint.name)
             continue
-        alone, around = both
+        alone, around = both[0], both[1] if wide else None
         lowest = float(np.min(np.where(alone.converged, alone.chi2, np.inf)))
         done.append(ConstraintProfile(constraint, alone, around, lowest))
     report(steps, steps)
@@ -321,19 +325,17 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
 
 
 def _overview_grids(scan: Scan) -> list[np.ndarray]:
-    """Five frames wide, with the whole triangle where the plane is the apex's."""
+    """The whole triangle, where the plane is that of its apex; other planes have no natural whole."""
     from fitcore.commands.scan_figures import guides
 
     lines = guides(scan)
+    if not lines:
+        return []
     grids = []
-    for axis, grid in enumerate(scan.profile.grids):
-        centre, half = 0.5 * float(grid[0] + grid[-1]), 2.5 * float(np.ptp(grid))
-        low, high = centre - half, centre + half
-        if lines:
-            every = np.concatenate([line[:, axis] for line in lines])
-            margin = 0.12 if axis == 0 else 0.05
-            low, high = float(every.min()) - margin, float(every.max()) + 2.0 * margin
-            low, high = min(low, float(grid[0]) - 0.05), max(high, float(grid[-1]) + 0.08)
+    for axis, (grid, margin) in enumerate(zip(scan.profile.grids, (0.12, 0.05), strict=True)):
+        every = np.concatenate([line[:, axis] for line in lines])
+        low = min(float(every.min()) - margin, float(grid[0]) - 0.05)
+        high = max(float(every.max()) + 2.0 * margin, float(grid[-1]) + 0.08)
         grids.append(np.linspace(low, high, OVERVIEW_POINTS[axis]))
     return grids
 
@@ -354,7 +356,7 @@ def notes(scan: Scan) -> list[str]:
         )
     if scan.skipped:
         said.append(
-            f"not drawn alone, because alone they do not determine the plane: {', '.join(scan.skipped)}"
+            f"not drawn alone, because alone they do not determine most of the plane: {', '.join(scan.skipped)}"
         )
     if scan.each and any(part.profile.flagged.any() for part in scan.each):
         parts = [

@@ -123,8 +123,11 @@ def _band(scan: Scan, part: ConstraintProfile) -> Band:
 
     problem, constraint = scan.problem, part.constraint
     latex = [problem.latex_of(quantity) for quantity in constraint.quantities]
-    around = part.overview
-    delta = np.where(around.flagged, np.inf, around.chi2 - part.lowest)
+    overview = None
+    if part.overview is not None:
+        around = part.overview
+        delta = np.where(around.flagged, np.inf, around.chi2 - part.lowest)
+        overview = refine(around.grids[0], around.grids[1], delta, around.slopes)
     return Band(
         constraint.name,
         r"\,{+}\,".join(latex) if all(latex) else "",
@@ -133,5 +136,5 @@ def _band(scan: Scan, part: ConstraintProfile) -> Band:
         part.profile.grids[1],
         part.profile.chi2 - part.lowest,
         share=constraint.chi2,
-        overview=refine(around.grids[0], around.grids[1], delta, around.slopes),
+        overview=overview,
     )

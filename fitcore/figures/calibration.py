@@ -45,7 +45,9 @@ def draw_goodness(result: CalibrationResult, *, footer: str = "") -> style.Drawi
         axes.stairs(counts, edges, fill=True, color=style.tint(style.SKY_BLUE, 0.35), zorder=1)
         tail_edges = np.concatenate([[result.chi2], edges[edges > result.chi2]])
         if tail_edges.size > 1:
-            axes.stairs(counts[edges[1:] > result.chi2], tail_edges, fill=True, color=style.SKY_BLUE, zorder=2)
+            axes.stairs(
+                counts[edges[1:] > result.chi2], tail_edges, fill=True, color=style.SKY_BLUE, zorder=2
+            )
         axes.stairs(counts, edges, color=style.NAVY, lw=0.8, zorder=3)
         expected = None
         if result.asymptotic is not None:
@@ -70,7 +72,9 @@ def draw_goodness(result: CalibrationResult, *, footer: str = "") -> style.Drawi
         axes.set_xlabel(r"minimum $\chi^2$ of a pseudo-experiment", fontsize=10)
         axes.set_ylabel(f"pseudo-experiments per {edges[1]:.2g}", fontsize=10)
         _title(figure, height, "Goodness of fit, calibrated", _goodness_words(result))
-        legend = [("all pseudo-experiments, refitted", style.tint(style.SKY_BLUE, 0.35), "fill")]
+        legend: list[tuple[str, Any, str]] = [
+            ("all pseudo-experiments, refitted", style.tint(style.SKY_BLUE, 0.35), "fill")
+        ]
         legend.append(("at least as far off as the data", style.SKY_BLUE, "fill"))
         if expected is not None:
             text = rf"$\chi^2$, {result.degrees_of_freedom} degrees of freedom"
@@ -137,7 +141,9 @@ def _draw_line(region: CalibratedRegion, latex: dict[str, str], footer: str) -> 
         colour = style.tint(style.VERMILLION, SHADES[c % len(SHADES)])
         low, high = region.needed_low[c], np.minimum(region.needed_high[c], 2.0 * ceiling)
         good = np.isfinite(region.needed[c])
-        axes.fill_between(nodes[good], low[good], high[good], color=style.tint(style.VERMILLION, 0.2), lw=0, zorder=1)
+        axes.fill_between(
+            nodes[good], low[good], high[good], color=style.tint(style.VERMILLION, 0.2), lw=0, zorder=1
+        )
         axes.plot(nodes[good], region.needed[c][good], color=colour, lw=1.5, marker="o", ms=3.4, mec=style.PAPER,
                   mew=0.6, zorder=4)  # fmt: skip
         axes.plot(span, [region.assumed[c]] * 2, color=style.FAINT_INK, lw=1.1, ls=DASHES[1], zorder=3)
@@ -161,11 +167,10 @@ def _draw_line(region: CalibratedRegion, latex: dict[str, str], footer: str) -> 
     axes.set_ylabel(r"$\Delta\chi^2$", fontsize=11)
     axes.tick_params(labelbottom=False)
     _rails(figure, height, bottom, rail, region, span, _label(region, 0, latex))
-    worst = max(range(levels), key=lambda c: abs(float(np.nanmedian(region.needed[c])) / region.assumed[c] - 1.0))
-    text = (
-        f"one quantity; median needed / assumed {np.nanmedian(region.needed[worst]) / region.assumed[worst]:.2f} "
-        f"at {_percent(region.cl[worst])} %"
-    )
+    ratio = region.needed[0][np.isfinite(region.needed[0])] / region.assumed[0]
+    text = "one quantity"
+    if ratio.size:
+        text += f"; needed / assumed {ratio.min():.2f} to {ratio.max():.2f} at {_percent(region.cl[0])} %"
     _title(figure, height, "Threshold needed against threshold assumed", text)
     _legend(
         figure,
@@ -209,7 +214,9 @@ def _rails(
     for c in range(len(region.cl)):
         axes.axhline(c, color=style.RULE, lw=0.7, zorder=0)
         for low, high, *_ in region.calibrated[c]:
-            axes.plot([low, high], [c - 0.14] * 2, color=style.VERMILLION, lw=4.2, solid_capstyle="butt", zorder=2)
+            axes.plot(
+                [low, high], [c - 0.14] * 2, color=style.VERMILLION, lw=4.2, solid_capstyle="butt", zorder=2
+            )
         for low, high, *_ in region.asymptotic[c]:
             axes.plot([low, high], [c + 0.2] * 2, color=style.FAINT_INK, lw=1.6, ls=DASHES[1], zorder=2)
     axes.set_xlabel(label, fontsize=11)
@@ -243,13 +250,24 @@ def _draw_plane(region: CalibratedRegion, latex: dict[str, str], footer: str) ->
     axes.set_xlabel(_label(region, 0, latex), fontsize=11)
     axes.set_ylabel(_label(region, 1, latex), fontsize=11)
     levels = ", ".join(f"{_percent(level)} %" for level in region.cl)
-    _title(figure, height, "Calibrated region", f"{levels} regions, two parameters" if len(region.cl) > 1 else f"{levels} region, two parameters")
+    _title(
+        figure,
+        height,
+        "Calibrated region",
+        f"{levels} regions, two parameters" if len(region.cl) > 1 else f"{levels} region, two parameters",
+    )
     _legend(
         figure, height, [("calibrated", style.NAVY, "line"), ("assumed (large samples)", style.INK, "dashes")]
     )
     style.footer(figure, footer, left=0.16 / WIDTH, baseline=0.14 / height)
     rows = tuple(
-        (level, float(x[index]), float(y[index]), float(region.assumed[c]), *(float(p[c][index]) for p in _bands(region)))
+        (
+            level,
+            float(x[index]),
+            float(y[index]),
+            float(region.assumed[c]),
+            *(float(p[c][index]) for p in _bands(region)),
+        )
         for c, level in enumerate(region.cl)
         for index in np.ndindex(x.shape)
     )
@@ -257,7 +275,9 @@ def _draw_plane(region: CalibratedRegion, latex: dict[str, str], footer: str) ->
     return style.Drawing(figure, columns, rows)
 
 
-def draw_coverage(result: CalibrationResult, *, latex: dict[str, str] | None = None, footer: str = "") -> style.Drawing:
+def draw_coverage(
+    result: CalibrationResult, *, latex: dict[str, str] | None = None, footer: str = ""
+) -> style.Drawing:
     """Draw how often intervals hold the truth, one row per quantity and level.
 
     Parameters
@@ -281,31 +301,55 @@ def draw_coverage(result: CalibrationResult, *, latex: dict[str, str] | None = N
             rows = [row for row in result.coverage if row.cl == level]
             nominal = _nominal(level)
             spread = math.sqrt(nominal * (1 - nominal) / rows[0].toys)
-            axes.axvspan(nominal - 2 * spread, nominal + 2 * spread, color=style.tint(style.SKY_BLUE, 0.16), lw=0, zorder=0)
+            axes.axvspan(
+                nominal - 2 * spread,
+                nominal + 2 * spread,
+                color=style.tint(style.SKY_BLUE, 0.16),
+                lw=0,
+                zorder=0,
+            )
             axes.axvline(nominal, color=style.FAINT_INK, lw=1.0, ls=DASHES[1], zorder=1)
             colour = style.tint(style.NAVY, SHADES[c % len(SHADES)])
             for row in rows:
                 place = names.index(row.name)
                 axes.plot(row.interval, [place] * 2, color=colour, lw=1.8, zorder=3)
-                axes.plot([row.coverage], [place], "o", ms=5.0, mfc=colour, mec=style.PAPER, mew=0.8, zorder=4)
-        axes.set_yticks(range(len(names)), [symbol_text(latex.get(name, ""), name) for name in names], fontsize=8.5)
+                axes.plot(
+                    [row.coverage], [place], "o", ms=5.0, mfc=colour, mec=style.PAPER, mew=0.8, zorder=4
+                )
+        axes.set_yticks(
+            range(len(names)), [symbol_text(latex.get(name, ""), name) for name in names], fontsize=8.5
+        )
         axes.tick_params(axis="y", length=0)
         axes.spines["left"].set_visible(False)
         axes.set_ylim(len(names) - 0.4, -0.6)
         axes.set_xlabel("fraction of intervals that hold the truth", fontsize=10)
         words = ", ".join(f"{_percent(level)} %" for level in levels)
-        _title(figure, height, "Coverage", f"{words} intervals of {result.toys:,} refitted pseudo-experiments")
+        _title(
+            figure, height, "Coverage", f"{words} intervals of {result.toys:,} refitted pseudo-experiments"
+        )
         _legend(
             figure,
             height,
-            [("found, 68.3 % interval", style.NAVY, "line"), ("nominal, ± 2 statistical errors", style.FAINT_INK, "dashes")],
+            [
+                ("found, 68.3 % interval", style.NAVY, "line"),
+                ("nominal, ± 2 statistical errors", style.FAINT_INK, "dashes"),
+            ],
         )
         style.footer(figure, footer, left=0.16 / WIDTH, baseline=0.14 / height)
     data = tuple(
         (row.name, row.cl, row.coverage, *row.interval, row.toys, row.pull_mean, row.pull_width)
         for row in result.coverage
     )
-    columns = ("name", "cl", "coverage", "coverage_low", "coverage_high", "pseudo_experiments", "pull_mean", "pull_width")
+    columns = (
+        "name",
+        "cl",
+        "coverage",
+        "coverage_low",
+        "coverage_high",
+        "pseudo_experiments",
+        "pull_mean",
+        "pull_width",
+    )
     return style.Drawing(figure, columns, data)
 
 
@@ -336,7 +380,12 @@ def _percent(level: float) -> str:
 def _title(figure: Figure, height: float, title: str, words: str) -> None:
     figure.text(0.16 / WIDTH, 1 - 0.28 / height, title, fontsize=12.5, fontweight="bold", va="center")
     figure.text(
-        0.16 / WIDTH, 1 - 0.53 / height, words.replace("-", "\N{HYPHEN-MINUS}"), fontsize=8, va="center", color=style.FAINT_INK
+        0.16 / WIDTH,
+        1 - 0.53 / height,
+        words.replace("-", "\N{HYPHEN-MINUS}"),
+        fontsize=8,
+        va="center",
+        color=style.FAINT_INK,
     )
 
 
@@ -347,9 +396,13 @@ def _legend(figure: Figure, height: float, entries: list[tuple[str, Any, str]]) 
     y, x = 1 - 0.78 / height, 0.16
     for words, colour, kind in entries:
         if kind == "fill":
-            figure.add_artist(Rectangle((x / WIDTH, y - 0.05 / height), 0.26 / WIDTH, 0.1 / height, color=colour, lw=0))
+            figure.add_artist(
+                Rectangle((x / WIDTH, y - 0.05 / height), 0.26 / WIDTH, 0.1 / height, color=colour, lw=0)
+            )
         else:
             dashes = DASHES[1] if kind == "dashes" else "-"
-            figure.add_artist(Line2D([x / WIDTH, (x + 0.28) / WIDTH], [y, y], color=colour, lw=1.6, ls=dashes))
+            figure.add_artist(
+                Line2D([x / WIDTH, (x + 0.28) / WIDTH], [y, y], color=colour, lw=1.6, ls=dashes)
+            )
         figure.text((x + 0.35) / WIDTH, y, words, fontsize=7.5, va="center")
         x += 0.35 + 0.053 * len(words.replace(r"$\chi^2$", "x2")) + 0.3

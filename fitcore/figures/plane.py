@@ -153,7 +153,17 @@ def draw(
             contained = any(other.name.startswith(f"{band.name}+") for other in bands)
             _band(main, band, dashes, levels, FAINT if contained else 1.0)
         _together(main, combined, levels, best, alone=not bands)
-        _rails(sheet.page, main, box, bands, styles, exits, chi2, _overview_size(combined.overview, equal)[1])
+        _rails(
+            sheet.page,
+            main,
+            box,
+            bands,
+            styles,
+            exits,
+            chi2,
+            _overview_size(combined.overview, equal)[1],
+            0.2 + 0.06 * len(title) - sheet.left,
+        )
         _summary(sheet.page, bands, levels, chi2)
         _overview(sheet, combined, bands, levels, guides, equal)
         _texts(sheet, axes_of, title, caption, footer)
@@ -273,7 +283,7 @@ def _together(
             axes.add_patch(Polygon(line, closed=True, facecolor=style.NAVY, lw=0, zorder=6.0))
     else:
         _fill(axes, combined.grid, inner, style.NAVY, zorder=6.0)
-    draw_edge(axes, lines, combined.grid, "white", width=1.6, zorder=6.1, label="all")
+    draw_edge(axes, lines, combined.grid, "white", width=3.2, zorder=5.9, label="all")
     for _, level in levels[1:]:
         draw_edge(
             axes,
@@ -287,7 +297,7 @@ def _together(
             zorder=6.2,
         )
     if best is not None:
-        axes.plot(*best, marker="o", ms=3.2, mfc="white", mec="white", zorder=6.5)
+        axes.plot(*best, marker="o", ms=2.8, mfc="white", mec="white", zorder=6.5)
 
 
 def _rails(
@@ -299,6 +309,7 @@ def _rails(
     exits: Sequence[Exit | None],
     chi2: float | None,
     overview: float,
+    title_ends: float,
 ) -> None:
     """Names in the margins."""
     for side in ("right", "top", "left", "bottom"):
@@ -314,6 +325,8 @@ def _rails(
         room = [0.42 if upright else 1.45] * len(chosen)
         reach = (0.0, 0.1) if upright else (0.5, 0.15)
         low = origin - reach[0]
+        if side == "top":
+            low = max(low, title_ends)
         if side == "right" and overview:
             low = max(low, OVERVIEW_BOTTOM + overview + 0.12)
         placed = spread(at, room, low, origin + length + reach[1])
@@ -402,7 +415,7 @@ def _summary(
     """What fills and edges mean, and all together."""
     from matplotlib.patches import Rectangle
 
-    x, y = 6.98, HEIGHT - 0.3
+    x, y = 6.88, HEIGHT - 0.3
     page.add_patch(Rectangle((x, y - 0.075), 0.3, 0.15, facecolor=style.NAVY, lw=0))
     page.text(x + 0.4, y, f"everything: {levels[0][0]} region, two parameters", fontsize=7, va="center")
     for number, (words, _) in enumerate(levels[1:], start=1):

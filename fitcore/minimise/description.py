@@ -70,13 +70,14 @@ def estimates(
     # A flat range has no interval of interest; it is reported by its value alone unless asked for.
     ranged = {p.name for p in problem.parameters if p.is_range}
     wanted = [*wanted, *(n for n in near if n not in wanted and n not in ranged)]
-    # What leans on a parameter near its bound has no parabola either.
+    # What leans on a parameter near its bound has no parabola either; on the bound its own is gone.
     empty = (np.zeros(0), np.zeros((0, len(theta))))
     values, gradient = problem.linearise_quantities(theta, names) if names else empty
+    reach = np.where(at_bound & (sigma == 0), steps, sigma)
     leaning = {
         name
         for name, slope in zip(names, gradient, strict=True)
-        if np.any(np.abs(slope * sigma)[at_bound] > LEANING * np.linalg.norm(slope * sigma))
+        if np.any(np.abs(slope * reach)[at_bound] > LEANING * np.linalg.norm(slope * reach))
     }
     if not ranged:
         wanted += [name for name in names if name in leaning and name not in wanted]

@@ -80,6 +80,7 @@ def find_crossings(
         levels=levels,
         stop=stop,
         side=np.where(stop > inside, 1.0, -1.0),
+        stride=np.abs(guess - inside),
         origin=inside.copy(),
         origin_theta=inside_theta.copy(),
         near=inside.copy(),
@@ -134,6 +135,7 @@ class _Walk:
     levels: np.ndarray
     stop: np.ndarray
     side: np.ndarray
+    stride: np.ndarray  # length of the first step
     origin: np.ndarray
     origin_theta: np.ndarray
     near: np.ndarray  # outermost point known to be inside
@@ -160,7 +162,9 @@ class _Walk:
     def at_an_edge(self) -> np.ndarray:
         """The bracket closed on a jump: the reach of the quantity, or a step in the profile."""
         resolution = np.where(np.isinf(self.far_delta), REACH_RESOLUTION, 1e-9)
-        span = np.maximum(np.abs(self.near - self.origin), 1e-9 * np.abs(self.origin))
+        # a minimum at the very end of the reach has nothing inside but itself
+        floor = np.maximum(1e-3 * self.stride, 1e-9 * np.abs(self.origin))
+        span = np.maximum(np.abs(self.near - self.origin), floor)
         return np.asarray(np.abs(self.far - self.near) <= resolution * span)
 
     def next(self, x: np.ndarray, newton: np.ndarray, delta: np.ndarray, slope: np.ndarray) -> np.ndarray:

@@ -1,9 +1,10 @@
 """Posterior chains in an HDF5 file that survives kills, full disks and second writers.
 
 Blocks of steps are committed in two phases: the data, a flush, the number of committed steps, a flush and
-fsync (while sampling goes on; it is waited for before the next block). Nothing beyond that number is ever trusted, so a writer may die at any moment. Space for a block is
-reserved before the first byte of it is written; a full disk therefore stops a run without touching the
-file. The layout is documented in :mod:`fitcore.sampling.chain_format`.
+fsync (which runs while sampling goes on, and is waited for before the next block). Nothing beyond that number
+is ever trusted, so a writer may die at any moment. Space for a block is reserved before the first byte of it
+is written; a full disk therefore stops a run without touching the file. The layout is documented in
+:mod:`fitcore.sampling.chain_format`.
 """
 
 from __future__ import annotations
@@ -43,6 +44,7 @@ class ChainFile(ChainReader):
         self._lock = lock
         self._last_commit = time.monotonic()
         self._failed = False
+        self._storage: tuple[np.ndarray, ...] = ()
         self._sync: threading.Thread | None = None
         self._sync_error: OSError | None = None
 
@@ -262,10 +264,17 @@ class ChainFile(ChainReader):
         if state.log_prob.shape != (walkers,) or np.shape(accepted) != (walkers,):
             raise ValueError(f"invalid log probability or acceptance size; expected {walkers}")
         total = self.accepted
-        self._buffer.append(
-            (np.array(state.coords, dtype=np.float64), np.array(state.log_prob, dtype=np.float64),
-             np.array(accepted, dtype=bool))
-        )  # fmt: skip
+        if not self._storage:
+            rows = self.block_steps
+            self._storage = (
+                np.empty((rows, *self.shape)),
+                np.empty((rows, walkers)),
+                np.empty((rows, walkers), bool),
+            )
+        step = len(self._buffer)
+        chain, log_posterior, taken = (part[step] for part in self._storage)
+        chain[...], log_posterior[...], taken[...] = state.coords, state.log_prob, accepted
+        self._buffer.append((chain, log_posterior, taken))
         self._buffer_state = state.random_state
         self._accepted_total = total + accepted
         due = time.monotonic() - self._last_commit > _COMMIT_SECONDS
@@ -283,8 +292,8 @@ class ChainFile(ChainReader):
         if not self._buffer:
             return
         begin, end = self.committed_steps, self.steps
-        chain, log_posterior, accepted = (np.array(part) for part in zip(*self._buffer, strict=True))
-        accepted = accepted.astype(np.uint8)
+        chain, log_posterior, accepted = (part[: end - begin] for part in self._storage)
+        accepted = accepted.view(np.uint8)
         words = pack_state(self._buffer_state)
         number, file = len(self._block_ends), self._file
         try:

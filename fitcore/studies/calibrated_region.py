@@ -86,10 +86,14 @@ def plan_region(
     step = REFINEMENT[dof]
     fine = tuple(_refined(grid, step) for grid in nodes_of)
     best, *others = [minimum.theta for minimum in minima]
-    return RegionPlan(names, levels, nodes_of, step, profile(problem, names, fine, start=best, minima=others), limits)
+    return RegionPlan(
+        names, levels, nodes_of, step, profile(problem, names, fine, start=best, minima=others), limits
+    )
 
 
-def _ranges(problem: Any, minima: Sequence[Minimum], names: tuple[str, ...], reach: float) -> list[tuple[float, float]]:
+def _ranges(
+    problem: Any, minima: Sequence[Minimum], names: tuple[str, ...], reach: float
+) -> list[tuple[float, float]]:
     """For each quantity the span of the intervals around all minima up to Delta chi2 = `reach`."""
     ends: dict[str, list[float]] = {name: [] for name in names}
     for minimum in minima:
@@ -145,8 +149,12 @@ def finish_region(
     for c in range(len(plan.levels)):
         limit = np.sqrt(_interpolated(plan, needed[0, c]))
         if not np.isfinite(limit).all():
-            messages.append(f"too few pseudo-experiments for cl = {plan.levels[c]:g}: the threshold is infinite somewhere")
-        calibrated.append(drawn(plan, np.sqrt(np.maximum(delta, 0.0)) - np.where(np.isfinite(limit), limit, 1e6)))
+            messages.append(
+                f"too few pseudo-experiments for cl = {plan.levels[c]:g}: the threshold is infinite somewhere"
+            )
+        calibrated.append(
+            drawn(plan, np.sqrt(np.maximum(delta, 0.0)) - np.where(np.isfinite(limit), limit, 1e6))
+        )
         asymptotic.append(drawn(plan, np.sqrt(np.maximum(delta, 0.0)) - np.sqrt(assumed[c])))
     if dof == 1 and any(_cut(plan, ends) for parts in calibrated for ends in parts):
         messages.append("the interval reaches the end of the grid: give a wider one")

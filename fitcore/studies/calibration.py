@@ -15,25 +15,25 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from concurrent.futures import Executor
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from fitcore.minimise.held_quantities import HeldQuantities
-from fitcore.minimise.minima import Minimum, find_minima
-from fitcore.minimise.profile import profile, threshold
+from fitcore.minimise.minima import find_minima
+from fitcore.minimise.profile import threshold
 from fitcore.minimise.uncertainty import curvature_at
 from fitcore.scaleout import SerialExecutor, portable, run_tasks
-from fitcore.studies.calibrated_region import RegionPlan, finish_region, plan_region
+from fitcore.studies.calibrated_region import finish_region
+from fitcore.studies.calibration_plan import Plan
 from fitcore.studies.calibration_result import (
     CalibratedPValue,
     CalibrationResult,
     CoverageRow,
     TestedPoint,
 )
-from fitcore.studies.pseudo_experiments import Truth, held_fit, run_block
+from fitcore.studies.pseudo_experiments import Truth, run_block
 from fitcore.studies.toy_store import Columns, ToyStore
 from observables.errors import ConvergenceError, InputError, UnknownNameError
 
@@ -106,20 +106,24 @@ def calibrate(
     minimum; for likelihood ratios as infinitely extreme. Flat ranges are not thrown: each test is repeated with every
     range at its lower and its upper edge (the rest profiled), and the largest p-value and threshold count.
     """
-    levels = (float(cl),) if np.ndim(cl) == 0 else tuple(float(level) for level in cl)  # type: ignore[union-attr]
+    levels = tuple(float(level) for level in np.atleast_1d(cl))
     wanted_points = _checked_points(problem, points)
     wanted_regions = _checked_regions(problem, intervals)
     covered = _checked_coverage(problem, coverage)
     if toys < 1 or int(toys) != toys:
-        raise InputError(f"{toys} pseudo-experiments: at least one is needed, and 1000 for a p-value good to 0.016")
+        raise InputError(
+            f"{toys} pseudo-experiments: at least one is needed, and 1000 for a p-value good to 0.016"
+        )
     for level in levels:
         threshold(level, 1)  # raises for levels that are none
     entropy = _entropy(rng)
 
     minima = find_minima(problem)
     if not minima or not minima[0].converged:
-        raise ConvergenceError("the data cannot be fitted, so there is nothing to throw from; see weakmix fit", minima)
-    plan = _Plan(problem, minima)
+        raise ConvergenceError(
+            "the data cannot be fitted, so there is nothing to throw from; see weakmix fit", minima
+        )
+    plan = Plan(problem, minima)
     plan.add_goodness(covered)
     for values in wanted_points:
         plan.add_point(values)
@@ -161,7 +165,9 @@ def _checked_regions(problem: Any, intervals: Any) -> list[tuple[tuple[str, ...]
     for names, grids in asked:
         names = (names,) if isinstance(names, str) else tuple(names)
         if not 1 <= len(names) <= 2 or len(set(names)) < len(names):
-            raise InputError(f"an interval has one quantity and a region two different ones, not {', '.join(names)}")
+            raise InputError(
+                f"an interval has one quantity and a region two different ones, not {', '.join(names)}"
+            )
         for name in names:
             _check_name(problem, name)
         if grids is not None:
@@ -196,143 +202,15 @@ def _entropy(rng: np.random.Generator | int | None) -> int:
     return int(np.random.SeedSequence(rng).entropy)  # type: ignore[arg-type]
 
 
-# -- where pseudo-experiments are thrown from -------------------------------------------------------------------------
-
-
-@dataclass
-class _PointPlan:
-    values: dict[str, float]
-    delta_chi2: float
-    truths: list[str]
-    message: str = ""
-
-
-@dataclass
-class _Plan:
-    """Points to throw from, and which test needs which."""
-
-    problem: Any
-    minima: list[Minimum]
-    truths: dict[str, Truth] = field(default_factory=dict)
-    goodness: list[str] = field(default_factory=list)
-    points: list[_PointPlan] = field(default_factory=list)
-    regions: list[tuple[RegionPlan, list[list[str]]]] = field(default_factory=list)
-    flags: list[str] = field(default_factory=list)
-    messages: list[str] = field(default_factory=list)
-
-    def __post_init__(self) -> None:
-        self.ranges = [p for p in self.problem.parameters if getattr(p, "is_range", False)]
-        self.observed = np.array([[entry.value for entry in self.problem.entries]])
-        if self.ranges:
-            self.note(
-                "flat-ranges",
-                "flat ranges are not thrown: the largest p-value over the fit and both edges of every range is given",
-            )
-
-    @property
-    def best(self) -> np.ndarray:
-        return self.minima[0].theta
-
-    @property
-    def others(self) -> list[np.ndarray]:
-        return [minimum.theta for minimum in self.minima[1:]]
-
-    def note(self, flag: str, message: str) -> None:
-        if flag not in self.flags:
-            self.flags.append(flag)
-            self.messages.append(message)
-
-    def add_goodness(self, covered: tuple[str, ...]) -> None:
-        values = HeldQuantities(self.problem, covered).values(self.best)[0] if covered else ()
-        pairs = tuple((name, float(value)) for name, value in zip(covered, values, strict=True))
-        truth = Truth("fit", self.best, covered=pairs, starts=tuple(self.others))
-        self.truths["fit"] = truth
-        self.goodness = ["fit", *self._edges(truth)]
-
-    def add_point(self, values: dict[str, float]) -> None:
-        found = profile(
-            self.problem,
-            tuple(values),
-            [np.array([value]) for value in values.values()],
-            start=self.best,
-            minima=self.others,
-        )
-        self._lower_minimum(found)
-        theta, good = found.parameters.reshape(1, -1), bool(found.converged.ravel()[0])
-        delta, labels = self._held(values, theta[0]) if good else (np.inf, [])
-        message = "" if good else "no parameter point has these values, or none was found"
-        if not good:
-            self.note("out-of-reach", "a point to test is out of reach")
-        self.points.append(_PointPlan(values, delta, labels, message))
-
-    def add_region(self, names: tuple[str, ...], grids: Any, levels: tuple[float, ...]) -> None:
-        region = plan_region(self.problem, self.minima, names, grids, levels)
-        self._lower_minimum(region.profile)
-        nodes = []
-        for values, theta, good in region.nodes():
-            nodes.append(self._held(dict(zip(names, values, strict=True)), theta)[1] if good else [])
-        if not any(nodes):
-            raise InputError(f"{', '.join(names)}: no parameter point has any of the values of the grid; choose another")
-        self.regions.append((region, nodes))
-
-    def _lower_minimum(self, found: Any) -> None:
-        if found.better_minimum is not None:
-            raise ConvergenceError(
-                "a profile found a lower minimum than the search for the best fit: give better starts in the inputs "
-                f"file, near {dict(zip(self.problem.parameter_names, map(float, found.better_minimum), strict=True))}",
-                found.better_minimum,
-            )
-
-    def _held(self, values: Mapping[str, float], theta: np.ndarray) -> tuple[float, list[str]]:
-        """Delta chi-square of the data with quantities held, and the truths that its test needs."""
-        held = tuple((name, float(value)) for name, value in values.items())
-        label = ", ".join(f"{name} = {value!r}" for name, value in held)
-        polished, chi2, good = held_fit(self.problem, held, theta[None], self.observed)
-        if good[0]:
-            theta = polished[0]
-        delta = max(float(chi2[0]) - self.minima[0].chi2, 0.0)
-        starts = (self.best, *self.others) if self.others else ()
-        truth = Truth(label, theta, held, (), starts, self._other_held(held, theta))
-        self.truths.setdefault(label, truth)
-        return delta, [label, *self._edges(truth)]
-
-    def _other_held(self, held: tuple[tuple[str, float], ...], theta: np.ndarray) -> tuple[np.ndarray, ...]:
-        """Held minima in other valleys than the one of `theta`."""
-        if not self.others:
-            return ()
-        quantities = HeldQuantities(self.problem, [name for name, _ in held])
-        values = np.array([[value for _, value in held]])
-        starts = np.concatenate([quantities.predict(minimum, values)[0] for minimum in (self.best, *self.others)])
-        found, chi2, good = held_fit(self.problem, held, starts, np.tile(self.observed, (len(starts), 1)))
-        scale = np.array([p.scale for p in self.problem.parameters])
-        distinct: list[np.ndarray] = [theta]
-        for point in found[good & np.isfinite(chi2)]:
-            if all(np.max(np.abs(point - other) / scale) > 0.1 for other in distinct):
-                distinct.append(point)
-        return tuple(distinct[1:])
-
-    def _edges(self, truth: Truth) -> list[str]:
-        """The same truth with every flat range at either edge, the rest profiled."""
-        labels = []
-        for parameter in self.ranges:
-            for edge, value in (("lower", parameter.lower), ("upper", parameter.upper)):
-                label = f"{truth.label}; {parameter.name} at its {edge} edge"
-                held = (*truth.held, (parameter.name, float(value)))
-                theta, chi2, good = held_fit(self.problem, held, truth.theta[None], self.observed)
-                if not good[0] or not np.isfinite(chi2[0]):
-                    self.note("edge-out-of-reach", f"{label} could not be fitted and is left out")
-                    continue
-                self.truths.setdefault(label, replace(truth, label=label, theta=theta[0], covered=()))
-                labels.append(label)
-        return labels
-
-
 # -- running ----------------------------------------------------------------------------------------------------------
 
 
-def _header(problem: Any, entropy: int, plan: _Plan) -> dict[str, Any]:
+def _header(problem: Any, entropy: int, plan: Plan) -> dict[str, Any]:
+    from fitcore.provenance import versions
+
     inputs = getattr(problem, "inputs", None)
     return {
+        "weakmix": versions()["weakmix"],
         "fingerprint": problem.fingerprint,
         "hypothesis": getattr(problem, "hypothesis", ""),
         "theory_errors": getattr(problem, "theory_errors", ""),
@@ -378,7 +256,10 @@ def _run(
     """All blocks of all truths, those in the store included; columns joined per truth."""
     sent = portable(problem, executor)
     sizes = [min(BLOCK, toys - first) for first in range(0, toys, BLOCK)]
-    keys = {truth.label: [f"{truth.label} | {block} | {size}" for block, size in enumerate(sizes)] for truth in truths}
+    keys = {
+        truth.label: [f"{truth.label} | {block} | {size}" for block, size in enumerate(sizes)]
+        for truth in truths
+    }
     tasks = {
         keys[truth.label][block]: (sent, truth, size, entropy, (number, block))
         for number, truth in enumerate(truths)
@@ -390,13 +271,14 @@ def _run(
     if progress is not None:
         progress(done, total)
     for key, columns in run_tasks(executor, run_block, tasks):
-        kept.add(str(key), columns)
-        done += tasks[str(key)][2]
+        kept.add(key, columns)
+        done += tasks[key][2]
         if progress is not None:
             progress(done, total)
     return {
         label: {
-            name: np.concatenate([kept.blocks[key][name] for key in blocks]) for name in kept.blocks[blocks[0]]
+            name: np.concatenate([kept.blocks[key][name] for key in blocks])
+            for name in kept.blocks[blocks[0]]
         }
         for label, blocks in keys.items()
     }
@@ -417,7 +299,7 @@ def _largest(
 
 def _result(
     problem: Any,
-    plan: _Plan,
+    plan: Plan,
     blocks: Mapping[str, Columns],
     truths: Sequence[Truth],
     toys: int,
@@ -444,7 +326,9 @@ def _result(
         )
     if any(plan.minima[i].chi2 < chi2 + 4.0 for i in range(1, len(plan.minima))):
         flags.append("several-minima")
-        messages.append("another minimum lies within Delta chi2 = 4: pseudo-experiments are thrown from the best one")
+        messages.append(
+            "another minimum lies within Delta chi2 = 4: pseudo-experiments are thrown from the best one"
+        )
 
     points = tuple(
         TestedPoint(

@@ -259,7 +259,14 @@ class CoverageRow:
 
     @classmethod
     def count(
-        cls, name: str, unit: str, truth: float, cl: float, threshold: float, ratios: np.ndarray, pulls: np.ndarray,
+        cls,
+        name: str,
+        unit: str,
+        truth: float,
+        cl: float,
+        threshold: float,
+        ratios: np.ndarray,
+        pulls: np.ndarray,
         failed: int,
     ) -> CoverageRow:
         """Build a row from likelihood ratios at the truth and pulls."""
@@ -268,7 +275,10 @@ class CoverageRow:
         mean = width = mean_error = width_error = math.nan
         if usable.size > 1:
             mean, width = float(usable.mean()), float(usable.std(ddof=1))
-            mean_error, width_error = width / math.sqrt(usable.size), width / math.sqrt(2.0 * (usable.size - 1))
+            mean_error, width_error = (
+                width / math.sqrt(usable.size),
+                width / math.sqrt(2.0 * (usable.size - 1)),
+            )
         interval = clopper_pearson(holding, toys)
         return cls(
             name, unit, truth, cl, threshold, holding, toys, failed, interval,

@@ -90,7 +90,9 @@ def _free_fit(problem: Any, truth: Truth, data: np.ndarray) -> BatchResult:
     """Refit all parameters, from the truth and from every other minimum; keep the lowest."""
     starts = np.tile(truth.theta, (len(data), 1))
     others = [np.tile(other, (len(data), 1)) for other in truth.starts]
-    scattered = np.asarray(problem.start if hasattr(problem, "start") else [p.start for p in problem.parameters])
+    scattered = np.asarray(
+        problem.start if hasattr(problem, "start") else [p.start for p in problem.parameters]
+    )
     result = solve_with_retries(
         problem, starts, alternatives=others, extra_starts=scattered[None], data=data, tolerance=1e-8
     )
@@ -134,7 +136,9 @@ def held_fit(
     result = minimise_batch(problem, starts, **options)
     failed = np.flatnonzero(~result.converged)
     if failed.size:
-        retry(problem, result, failed, starts[failed], starts, **options, initial_damping=1.0, forget_scale=True)
+        retry(
+            problem, result, failed, starts[failed], starts, **options, initial_damping=1.0, forget_scale=True
+        )
     chi2 = np.where(result.status == Status.OUT_OF_REACH, np.inf, result.chi2)
     return result.theta, chi2, result.converged
 

@@ -71,7 +71,9 @@ class ToyStore:
         try:
             self.path.parent.mkdir(parents=True, exist_ok=True)
         except OSError as error:
-            raise StoreError(f"{self.path.parent}: cannot be made ({error.strerror}); choose another folder") from error
+            raise StoreError(
+                f"{self.path.parent}: cannot be made ({error.strerror}); choose another folder"
+            ) from error
         self._lock = WriterLock(self.path)
         try:
             self._open(self.path)
@@ -88,13 +90,17 @@ class ToyStore:
         if whole:
             self._read(path, whole.splitlines())
         elif content and not _line(self.header).startswith(content[:40]):
-            raise StoreError(f"{path}: is not a file of pseudo-experiments; nothing was touched; give another name")
+            raise StoreError(
+                f"{path}: is not a file of pseudo-experiments; nothing was touched; give another name"
+            )
         try:
             self._stream = path.open("r+b" if path.exists() else "xb")
             self._stream.truncate(len(whole))
             self._stream.seek(len(whole))
         except OSError as error:
-            raise StoreError(f"{path}: cannot be written ({error.strerror}); choose another folder") from error
+            raise StoreError(
+                f"{path}: cannot be written ({error.strerror}); choose another folder"
+            ) from error
         if not whole:
             self._append(self.header)
 
@@ -120,9 +126,13 @@ class ToyStore:
                 block = json.loads(line)
                 if block["checksum"] != _checksum(block["columns"]):
                     raise ValueError("checksum")
-                self.blocks[block["key"]] = {name: _decode(column) for name, column in block["columns"].items()}
+                self.blocks[block["key"]] = {
+                    name: _decode(column) for name, column in block["columns"].items()
+                }
             except (ValueError, KeyError, TypeError) as error:
-                raise StoreError(f"{path}: line {number} is damaged; nothing was touched; remove the file") from error
+                raise StoreError(
+                    f"{path}: line {number} is damaged; nothing was touched; remove the file"
+                ) from error
 
     def add(self, key: str, columns: Columns) -> None:
         """Keep a finished block; a second one of the same key is ignored."""
@@ -140,7 +150,9 @@ class ToyStore:
             self._stream.flush()
             os.fsync(self._stream.fileno())
         except OSError as error:
-            raise StoreError(f"{self.path}: cannot be written ({error.strerror}); what is in it is kept") from error
+            raise StoreError(
+                f"{self.path}: cannot be written ({error.strerror}); what is in it is kept"
+            ) from error
 
     def close(self) -> None:
         """Close the file and give the right to write back."""
@@ -164,7 +176,10 @@ def _line(content: Mapping[str, Any]) -> bytes:
 
 def _encode(column: np.ndarray) -> list[Any]:
     # JSON has no infinity and no nan
-    return [x if math.isfinite(x) else ("inf" if x > 0 else "nan") for x in np.asarray(column, dtype=float).tolist()]
+    return [
+        x if math.isfinite(x) else ("inf" if x > 0 else "nan")
+        for x in np.asarray(column, dtype=float).tolist()
+    ]
 
 
 def _decode(column: list[Any]) -> np.ndarray:
@@ -208,7 +223,9 @@ def _truth_differences(old: list[Any], new: list[Any], scales: np.ndarray) -> li
         distance = np.abs(np.subtract(before["theta"], now["theta"])) / scales
         covered = [[name for name, _ in truth["covered"]] for truth in (before, now)]
         if covered[0] != covered[1]:
-            moved.append(f"coverage of {', '.join(covered[0])} in the file, {', '.join(covered[1])} asked for")
+            moved.append(
+                f"coverage of {', '.join(covered[0])} in the file, {', '.join(covered[1])} asked for"
+            )
         elif before["held"] != now["held"] or (distance > SAME_TRUTH).any():
             moved.append(f"the point {now['label']!r} lies elsewhere")
     return moved

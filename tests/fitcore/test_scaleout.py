@@ -19,7 +19,14 @@ from linear_problem import LinearProblem
 from unreliable_executor import UnreliableExecutor, die, die_once, fail, square, threads
 
 from fitcore import Problem, scaleout
-from fitcore.scaleout import LocalProcesses, ProblemSpec, SerialExecutor, open_executor, problem_from, run_tasks
+from fitcore.scaleout import (
+    LocalProcesses,
+    ProblemSpec,
+    SerialExecutor,
+    open_executor,
+    problem_from,
+    run_tasks,
+)
 from fitcore.studies import calibration
 from fitcore.studies.calibration import calibrate
 from observables.errors import ConvergenceError, InputError, StoreError
@@ -89,7 +96,10 @@ def test_a_local_worker_that_dies_loses_nothing(tmp_path):
 
 
 def test_a_task_that_always_kills_its_worker_is_named():
-    with open_executor(jobs=2) as executor, pytest.raises(ConvergenceError, match="task 0: its worker was lost 2 times"):
+    with (
+        open_executor(jobs=2) as executor,
+        pytest.raises(ConvergenceError, match="task 0: its worker was lost 2 times"),
+    ):
         list(run_tasks(executor, die, {"task 0": (0,)}, attempts=2))
 
 
@@ -123,7 +133,9 @@ def test_a_spec_rebuilds_the_problem(name):
 
 def test_a_spec_remembers_selections_settings_and_theory_errors(tree):
     one, two = (entry.id for entry in tree.entries[:2])
-    problem = Problem.load("averages-2026", without=[one], settings=[f"{two}.error=0.0123"], theory_errors="flat")
+    problem = Problem.load(
+        "averages-2026", without=[one], settings=[f"{two}.error=0.0123"], theory_errors="flat"
+    )
     assert problem.spec.build().fingerprint == problem.fingerprint
 
 
@@ -195,7 +207,9 @@ def test_a_module_of_the_user_travels_along(tmp_path):
             """
         )
     )
-    done = subprocess.run([sys.executable, "main.py"], cwd=tmp_path, capture_output=True, text=True, timeout=120)
+    done = subprocess.run(
+        [sys.executable, "main.py"], cwd=tmp_path, capture_output=True, text=True, timeout=120
+    )
     assert done.stdout.split() == ["100", "my_quantities"], done.stderr
 
 

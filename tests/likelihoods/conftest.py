@@ -9,13 +9,8 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import pytest
-from hypothesis import settings
 
 from likelihoods import Inputs, load_inputs
-
-# Time limits of single examples measure the machine's load, not the code.
-settings.register_profile("no-deadline", deadline=None)
-settings.load_profile("no-deadline")
 
 
 @dataclass(frozen=True)

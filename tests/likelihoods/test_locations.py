@@ -134,7 +134,8 @@ class Writer:
         """Write a value; inside inline tables of this version of the format no line may end."""
         if isinstance(value, str):
             if may_break and self.draw(st.booleans()):
-                self.text += '"""' + value.replace("\\", "\\\\").replace('"', '\\"') + '"""'
+                # The format drops a line end right after the opening quotes.
+                self.text += '"""' + "\n" * value.startswith("\n") + value.replace("\\", "\\\\").replace('"', '\\"') + '"""'
             else:
                 self.text += self.basic(value)
         elif isinstance(value, bool):

@@ -46,11 +46,13 @@ class Measured:
 
 @lru_cache
 def _edge(variance: float, slope: float) -> float:
-    """The difference at which d / sqrt(V + V' d) is eight deviations, by bisection: no formula shared with the project."""
+    """The difference at which d / sqrt(V + V' d) is eight deviations, by Brent's method."""
     edge = -8.0 * np.sign(slope)
     low, high = sorted((0.0, -variance / slope * (1.0 - 1e-13)))
     span = abs(high - low)
-    return brentq(lambda d: d / np.sqrt(variance + slope * d) - edge, low, high, xtol=1e-15 * span, rtol=1e-14)
+    return brentq(
+        lambda d: d / np.sqrt(variance + slope * d) - edge, low, high, xtol=1e-15 * span, rtol=1e-14
+    )
 
 
 def standardised(difference: np.ndarray, plus: float, minus: float) -> np.ndarray:
@@ -115,12 +117,17 @@ class Model:
     def without(self, ids: Sequence[str]) -> Model:
         keep = [i for i, entry in enumerate(self.measured) if entry.id not in ids]
         return replace(
-            self, measured=tuple(self.measured[i] for i in keep), predict=lambda points: self.predict(points)[:, keep]
+            self,
+            measured=tuple(self.measured[i] for i in keep),
+            predict=lambda points: self.predict(points)[:, keep],
         )
 
     def with_values(self, values: Sequence[float]) -> Model:
         return replace(
-            self, measured=tuple(replace(entry, value=float(v)) for entry, v in zip(self.measured, values, strict=True))
+            self,
+            measured=tuple(
+                replace(entry, value=float(v)) for entry, v in zip(self.measured, values, strict=True)
+            ),
         )
 
     # -- the fit ------------------------------------------------------------------------------------------------
@@ -136,7 +143,9 @@ class Model:
         return predicted
 
     def whitened(self, point: np.ndarray) -> np.ndarray:
-        return np.linalg.solve(np.linalg.cholesky(self.correlation), self.standardised(self._shifted(point[None]))[0])
+        return np.linalg.solve(
+            np.linalg.cholesky(self.correlation), self.standardised(self._shifted(point[None]))[0]
+        )
 
     def chi2(self, point: np.ndarray) -> float:
         u = self.standardised(self._shifted(np.asarray(point, dtype=float)[None]))[0]
@@ -165,14 +174,24 @@ class Model:
         width = np.concatenate([self.scales, [self.measured[i].flat for i in self._flat]])
         begin = np.clip(begin, lower + 1e-6 * width, upper - 1e-6 * width)
         found = least_squares(
-            self.whitened, begin, self.jacobian, bounds=(lower, upper), x_scale=width, xtol=1e-14, ftol=1e-14, gtol=1e-13,
-            max_nfev=300, method="dogbox" if len(self._flat) else "trf",
+            self.whitened,
+            begin,
+            self.jacobian,
+            bounds=(lower, upper),
+            x_scale=width,
+            xtol=1e-14,
+            ftol=1e-14,
+            gtol=1e-13,
+            max_nfev=300,
+            method="dogbox" if len(self._flat) else "trf",
         )
         return np.asarray(found.x), float(2.0 * found.cost)
 
     def degrees_of_freedom(self, point: np.ndarray) -> int:
         jacobian = self.jacobian(point)[:, : self.start.size] * self.scales
-        return len(self.measured) - int(np.linalg.matrix_rank(jacobian, tol=1e-7 * np.linalg.norm(jacobian, 2)))
+        return len(self.measured) - int(
+            np.linalg.matrix_rank(jacobian, tol=1e-7 * np.linalg.norm(jacobian, 2))
+        )
 
     def covariance(self, point: np.ndarray) -> np.ndarray:
         """Twice the inverse of the second derivatives of chi-square, by plain central differences."""
@@ -205,8 +224,15 @@ class Model:
 
         begin = np.clip(start[free], lower[free] + 1e-9 * width[free], upper[free] - 1e-9 * width[free])
         found = least_squares(
-            lambda rest: self.whitened(full(rest)), begin, lambda rest: self.jacobian(full(rest))[:, free],
-            bounds=(lower[free], upper[free]), x_scale=width[free], xtol=1e-13, ftol=1e-13, gtol=1e-12, max_nfev=200,
+            lambda rest: self.whitened(full(rest)),
+            begin,
+            lambda rest: self.jacobian(full(rest))[:, free],
+            bounds=(lower[free], upper[free]),
+            x_scale=width[free],
+            xtol=1e-13,
+            ftol=1e-13,
+            gtol=1e-12,
+            max_nfev=200,
             method="dogbox" if len(self._flat) else "trf",
         )
         return float(2.0 * found.cost), full(found.x)
@@ -245,7 +271,9 @@ class Model:
                 lambda y, sign=sign: -sign * (quantity(best + root @ y) - centre) / size,
                 sign * np.sqrt(level) * gradient / size,
                 method="SLSQP",
-                constraints=[NonlinearConstraint(lambda y: self.chi2(best + root @ y) - minimum, -np.inf, level)],
+                constraints=[
+                    NonlinearConstraint(lambda y: self.chi2(best + root @ y) - minimum, -np.inf, level)
+                ],
                 options={"ftol": 1e-11, "maxiter": 200},
             )
             ends.append(centre - sign * found.fun * size)

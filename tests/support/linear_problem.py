@@ -42,7 +42,9 @@ class LinearProblem:
     hypothesis = "standard"
     theory_errors = "as-given"
 
-    def __init__(self, design, values, axes=None, errors=None, *, stretch=1.0, frozen=(), impossible_above=np.inf):
+    def __init__(
+        self, design, values, axes=None, errors=None, *, stretch=1.0, frozen=(), impossible_above=np.inf
+    ):
         self.design = np.array(design, dtype=float)
         self.measured = np.array(values, dtype=float)
         m, n = self.design.shape
@@ -105,3 +107,27 @@ class LinearProblem:
 
     def period_of(self, name):
         return None
+
+
+class TwoValleys(LinearProblem):
+    """x^2 and x measured: minima near +1 and -1, and pseudo-experiments that prefer either."""
+
+    def __init__(self):
+        super().__init__(
+            [[1.0], [1.0]], [1.0, 0.1], [Axis("x", start=0.9, lower=-3.0, upper=3.0)], [0.2, 1.0]
+        )
+
+    def predictions(self, theta):
+        x = np.asarray(theta)[..., 0]
+        return np.stack([x**2, x], axis=-1)
+
+    def jacobian(self, theta, data=None):
+        x = np.asarray(theta)[..., 0]
+        return np.stack([2.0 * x, np.ones_like(x)], axis=-1)[..., None] / self.errors[:, None]
+
+    def linearise(self, theta, data=None):
+        slopes = self.jacobian(theta)[..., 0]
+        gradient = 2.0 * (self.residuals(theta, data) * slopes).sum(axis=1)
+        place = np.zeros(1, dtype=int)
+        normal = SparseNormal(place, place, (slopes**2).sum(axis=1)[None])
+        return Linearisation(self.chi2(theta, data), gradient[:, None], normal)

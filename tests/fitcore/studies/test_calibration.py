@@ -10,7 +10,7 @@ import math
 
 import numpy as np
 import pytest
-from linear_problem import Axis, LinearProblem
+from linear_problem import Axis, LinearProblem, TwoValleys
 from scipy import optimize, stats
 
 from fitcore import Problem
@@ -194,7 +194,7 @@ def test_region_of_two_quantities():
     assert np.allclose(line[0], line[-1])  # closed
     problem = straight_line()
     best = np.linalg.lstsq(problem.design, problem.measured, rcond=None)[0]
-    radius = np.sqrt(((line_a - best) ** 2 @ np.diag(problem.design.T @ problem.design)))
+    radius = np.sqrt((line_a - best) ** 2 @ np.diag(problem.design.T @ problem.design))
     assert radius == pytest.approx(math.sqrt(2.296), rel=0.02)
 
 
@@ -214,7 +214,7 @@ def as_it_should_be(row):
 
 @pytest.mark.stat
 def test_coverage_and_pulls_of_published_averages():
-    """1,000 pseudo-experiments; false-alarm rate about 0.006 per quantity (pull mean and width 3 sigma, coverage 99.9 %)."""
+    """1,000 pseudo-experiments; false-alarm rate 0.006 per quantity (mean and width 3 sigma, coverage 99.9 %)."""
     result = calibrate(
         Problem.load("averages-2026"),
         1000,
@@ -255,6 +255,29 @@ def test_failed_pseudo_experiments_are_counted_conservatively():
     assert result.p_value >= clean.p_value
     assert result.points[0].calibrated.value > clean.points[0].calibrated.value
     assert result.coverage[0].coverage < clean.coverage[0].coverage
+
+
+# -- several minima ---------------------------------------------------------------------------------------------------
+
+
+def test_every_pseudo_experiment_ends_in_its_lowest_valley():
+    """Against a fine scan of each pseudo-experiment."""
+    problem = TwoValleys()
+    result = calibrate(problem, 400, rng=1, points={"x": -0.9})
+    assert "several-minima" in result.flags
+    rng = np.random.default_rng(np.random.SeedSequence(1, spawn_key=(0, 0)))
+    data = problem.pseudo_data(np.array([result.fitted["x"]]), 400, rng=rng)
+    scan = np.linspace(-3.0, 3.0, 6001)[:, None]
+    lowest = np.array([problem.chi2(scan, row[None]).min() for row in data])
+    assert result.toy_chi2 == pytest.approx(lowest, abs=2e-4)
+    assert (result.toy_chi2 <= lowest + 1e-9).all()
+    # the same for the likelihood ratio of a point in the other valley
+    rng = np.random.default_rng(np.random.SeedSequence(1, spawn_key=(1, 0)))
+    data = problem.pseudo_data(np.array([-0.9]), 400, rng=rng)
+    lowest = np.array([problem.chi2(scan, row[None]).min() for row in data])
+    ratio = problem.chi2(np.full((400, 1), -0.9), data) - lowest
+    point = result.points[0]
+    assert point.calibrated.exceeding == pytest.approx((ratio >= point.delta_chi2).sum(), abs=1)
 
 
 # -- small parts ------------------------------------------------------------------------------------------------------
@@ -358,7 +381,7 @@ def test_another_calibration_is_refused_with_the_difference(tmp_path):
     before = path.read_bytes()
     with pytest.raises(StoreError, match="seed: 5 in the file, 6 asked for"):
         calibrate(tree, 20, rng=6, store=path)
-    with pytest.raises(StoreError, match="points: fit in the file, fit, angle_beta = 22.0 asked for"):
+    with pytest.raises(StoreError, match=r"points: fit in the file, fit, angle_beta = 22\.0 asked for"):
         calibrate(tree, 20, rng=5, store=path, points={"angle_beta": 22.0})
     one = tree.entries[-1].id
     other = Problem.load("averages-2026-tree", settings=[f"{one}.error=1.23456"])
@@ -400,6 +423,12 @@ def test_a_foreign_file_is_left_alone(tmp_path, content):
 def test_mistakes_are_named(arguments, error, message):
     with pytest.raises(error, match=message):
         calibrate(Problem.load("averages-2026-tree"), **{"toys": 50, "rng": 1, **arguments})
+
+
+def test_a_problem_calibrates_itself():
+    result = Problem.load("averages-2026-tree").calibrate(50, rng=1, points={"angle_beta": 22.0})
+    assert result.toys == 50
+    assert result.thrown == 100
 
 
 def test_a_point_out_of_reach_is_flagged():
