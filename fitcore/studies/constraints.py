@@ -210,11 +210,16 @@ def _combined_error(entries: Sequence[Any], places: Sequence[int]) -> float:
 def _moves_of_frame(
     problem: Any, theta: np.ndarray, axes: np.ndarray, half_widths: Sequence[float]
 ) -> np.ndarray:
-    """Steps of the parameters (one per axis) that lead to the edge of the frame, shortest in standard deviations."""
+    """Steps of the parameters (one per axis) that lead to the edge of the frame.
+
+    Where a quantity can be moved by several parameters, those move that are known worst relative to their size: the
+    step is shortest in units of sigma^2 / |value|.
+    """
     covariance = curvature_at(problem, theta).covariance
     scales = np.array([p.scale for p in problem.parameters])
     variance = np.diagonal(covariance)
-    metric = np.where(variance > 0.0, variance, scales**2)
+    variance = np.where(variance > 0.0, variance, scales**2)
+    metric = variance**2 / np.maximum(theta**2, variance)
     inner = (axes * metric) @ axes.T
     steps = metric[:, None] * axes.T @ np.linalg.pinv(inner, hermitian=True)
     return np.asarray((steps * np.asarray(half_widths)).T)
