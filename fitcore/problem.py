@@ -14,7 +14,7 @@ import hashlib
 import math
 import sys
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -22,54 +22,26 @@ import numpy as np
 
 import observables
 from fitcore.evaluation import ChiSquare
+from fitcore.free_parameters import FreeParameter, range_name, sort_leaves
 from fitcore.minimise.derivatives import call_with_derivatives, seed, tangents_of
 from fitcore.minimise.normal_matrix import Linearisation
 from fitcore.priors import log_prior
+from fitcore.questions import Questions
 from likelihoods import Declared, Entry, Inputs, Terms, load_inputs, units
 from likelihoods.ranges import apply_scheme
 from observables import Catalogue, Hypothesis
 from observables import catalogue as public_catalogue
 from observables.errors import InputError, UnknownNameError
 from observables.graph import Caller, Graph, compile_graph, find_parameters
+from observables.nodes import Parameter
 
 if TYPE_CHECKING:
-    from fitcore.result import FitResult
     from fitcore.scaleout import ProblemSpec
-    from fitcore.studies.calibration_result import CalibrationResult
 
 __all__ = ["FreeParameter", "Problem"]
 
 
-@dataclass(frozen=True)
-class FreeParameter:
-    """One axis of theta.
-
-    Attributes
-    ----------
-    name, unit, title, latex : str
-    start, lower, upper, scale : float
-        In ``unit``; ``scale`` is about the size of the uncertainty.
-    period : float or None
-    prior : object or None
-        As the inputs file states it (posteriors only).
-    is_range : bool
-        A flat theory range: bounded, without a term of its own, not counted in degrees of freedom.
-    """
-
-    name: str
-    unit: str
-    start: float
-    lower: float
-    upper: float
-    scale: float
-    title: str = ""
-    latex: str = ""
-    period: float | None = None
-    prior: Any = None
-    is_range: bool = False
-
-
-class Problem:
+class Problem(Questions):
     """A chi-square over free parameters, evaluated on batches.
 
     Points are arrays ``theta`` of shape (B, n), or (n,) for one point, or a dict of name -> value or (B,) array;
@@ -116,12 +88,14 @@ class Problem:
         targets = tuple(dict.fromkeys(entry.quantity for entry in inputs.entries))
         self._leaves = find_parameters(self._catalogue, targets, self._hypothesis)
         measured = {entry.quantity for entry in inputs.entries}
-        self.parameters, self.fixed = self._sort_leaves(measured, scheme.bounds)
+        self.parameters, self.fixed = sort_leaves(
+            self._leaves, self.entries, measured, inputs.parameters, scheme.bounds, self.ranges
+        )
         self.parameter_names = tuple(p.name for p in self.parameters)
         self.n_parameters = len(self.parameters)
         self.n_entries = len(self.entries)
 
-        inputs_of_graph = tuple(p.name for p in self.parameters if not self._is_shift(p))
+        inputs_of_graph = tuple(p.name for p in self.parameters if not p.is_shift)
         used = tuple(dict.fromkeys(entry.quantity for entry in self.entries))
         self._graph = compile_graph(self._catalogue, used, inputs_of_graph, self.fixed, self._hypothesis)
         position = {name: i for i, name in enumerate(self.parameter_names)}
@@ -130,7 +104,7 @@ class Problem:
             self._graph,
             self.terms,
             [used.index(entry.quantity) for entry in self.entries],
-            [position.get(_range_name(e.id)) if e.id in self.ranges else None for e in self.entries],
+            [position.get(range_name(e.id)) if e.id in self.ranges else None for e in self.entries],
             self.n_parameters,
         )
         self._graphs: dict[tuple[str, ...], Graph] = {}
@@ -173,83 +147,6 @@ class Problem:
             return True
         return self._catalogue[name].kind != "quantity"
 
-    @staticmethod
-    def _is_shift(parameter: FreeParameter) -> bool:
-        return parameter.name.startswith("range:")
-
-    def _sort_leaves(
-        self, measured: set[str], bounds: Mapping[str, tuple[float, float]]
-    ) -> tuple[tuple[FreeParameter, ...], dict[str, float]]:
-        """Which leaves vary, where they start, and what the others are held at."""
-        free: list[FreeParameter] = []
-        fixed: dict[str, float] = {}
-        for name, leaf in self._leaves.items():
-            setting = self.inputs.parameters.get(name)
-            hold = getattr(leaf, "fixed", leaf.kind == "constant") and name not in measured
-            if setting is not None and setting.fixed is not None:
-                hold = setting.fixed
-            own = [e for e in self.entries if e.quantity == name]
-            value = getattr(leaf, "start", getattr(leaf, "value", 0.0))
-            # An own measurement starts the parameter; range and bound settings of the file come before it.
-            if own and not hold:
-                weights = [1.0 / (e.plus * e.minus) for e in own]
-                value = sum(w * e.value for w, e in zip(weights, own, strict=True)) / sum(weights)
-            if setting is not None and setting.start is not None:
-                value = setting.start
-            if hold:
-                # Constants at their catalogue value are no news; anything else is reported.
-                if leaf.kind == "parameter" or setting is not None:
-                    fixed[name] = float(value)
-                continue
-            lower, upper = getattr(leaf, "lower", -math.inf), getattr(leaf, "upper", math.inf)
-            if setting is not None:
-                lower = lower if setting.lower is None else setting.lower
-                upper = upper if setting.upper is None else setting.upper
-            is_range = name in bounds
-            if is_range:
-                lower, upper = max(lower, bounds[name][0]), min(upper, bounds[name][1])
-            if not lower < upper:
-                raise InputError(f"parameter {name!r}: the bounds {lower} and {upper} leave no room")
-            # A start on a bound has no room on one side: keep a thousandth of the range away.
-            if math.isfinite(lower) and math.isfinite(upper):
-                margin = 1e-3 * (upper - lower)
-                value = min(max(value, lower + margin), upper - margin)
-            value = min(max(value, lower), upper)
-            scale = min((min(e.plus, e.minus) for e in own), default=getattr(leaf, "scale", 0.0) or leaf.__dict__.get("error", 0.0))
-            if is_range:
-                scale = 0.25 * (upper - lower)
-            free.append(
-                FreeParameter(
-                    name=name,
-                    unit=leaf.unit,
-                    start=float(value),
-                    lower=float(lower),
-                    upper=float(upper),
-                    scale=float(scale) or 1.0,
-                    title=leaf.title,
-                    latex=leaf.latex,
-                    period=leaf.period,
-                    prior=None if setting is None else setting.prior,
-                    is_range=is_range,
-                )
-            )
-        for entry in self.entries:
-            if entry.id in self.ranges:
-                half = self.ranges[entry.id]
-                free.append(
-                    FreeParameter(
-                        name=_range_name(entry.id),
-                        unit=entry.unit,
-                        start=0.0,
-                        lower=-half,
-                        upper=half,
-                        scale=0.5 * half,
-                        title=f"flat theory range of {entry.id}",
-                        is_range=True,
-                    )
-                )
-        return tuple(free), fixed
-
     # -- evaluation ---------------------------------------------------------------------------------------------
 
     def theta(self, point: Any) -> tuple[np.ndarray, bool]:
@@ -275,7 +172,9 @@ class Problem:
             return np.array(np.broadcast_arrays(*map(np.atleast_1d, columns))), single
         array = np.asarray(point, dtype=float)
         if array.ndim not in (1, 2) or array.shape[-1] != self.n_parameters:
-            raise InputError(f"a point has {self.n_parameters} parameters; the array given has shape {array.shape}")
+            raise InputError(
+                f"a point has {self.n_parameters} parameters; the array given has shape {array.shape}"
+            )
         return np.ascontiguousarray(np.atleast_2d(array).T), array.ndim == 1
 
     def _data(self, data: Any, batch: int) -> np.ndarray | None:
@@ -364,9 +263,11 @@ class Problem:
         value_rows, gradient_rows = values.T, np.moveaxis(gradient, -1, 0)
         return (value_rows[0], gradient_rows[0]) if single else (value_rows, gradient_rows)
 
-    def _evaluate(self, names: tuple[str, ...], leaves: list[Any], call: Caller | None = None) -> dict[str, Any]:
+    def _evaluate(
+        self, names: tuple[str, ...], leaves: list[Any], call: Caller | None = None
+    ) -> dict[str, Any]:
         """Name -> value; the ranges among the names are parameters that the graph knows nothing of."""
-        ranges = {p.name: leaf for p, leaf in zip(self.parameters, leaves, strict=True) if self._is_shift(p)}
+        ranges = {p.name: leaf for p, leaf in zip(self.parameters, leaves, strict=True) if p.is_shift}
         computed = tuple(name for name in names if name not in ranges)
         graph = self._graph_for(computed)
         found = dict(zip(computed, graph.evaluate(leaves[: len(graph.inputs)], call), strict=True)) | ranges
@@ -376,7 +277,9 @@ class Problem:
         if names not in self._graphs:
             known = self._graph.inputs
             needed = find_parameters(self._catalogue, names, self._hypothesis)
-            default = {n: leaf.start for n, leaf in needed.items() if getattr(leaf, "fixed", False)}
+            default = {
+                n: leaf.start for n, leaf in needed.items() if isinstance(leaf, Parameter) and leaf.fixed
+            }
             absent = [
                 n
                 for n, leaf in needed.items()
@@ -524,27 +427,6 @@ class Problem:
         """The problem without these ids or groups."""
         return self.with_inputs(self.inputs.select(without=names))
 
-    # -- what to do with it -------------------------------------------------------------------------------------
-
-    def fit(
-        self,
-        *,
-        derived: Iterable[str] | None = None,
-        profile: Iterable[str] | None = None,
-        starts: int = 64,
-        rng: np.random.Generator | int | None = 0,
-    ) -> FitResult:
-        """Best fit, intervals, goodness of fit, pulls and other minima; see `fitcore.minimise.best_fit.fit`."""
-        from fitcore.minimise.best_fit import fit
-
-        return fit(self, derived=derived, profile=profile, starts=starts, rng=rng)
-
-    def calibrate(self, toys: int = 1000, **options: Any) -> CalibrationResult:
-        """p-values, intervals and coverage from pseudo-experiments; see `fitcore.studies.calibration.calibrate`."""
-        from fitcore.studies.calibration import calibrate
-
-        return calibrate(self, toys, **options)
-
 
 def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:
     """Names and paths of modules outside the package that declare quantities or replacements."""
@@ -565,10 +447,6 @@ def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[s
     return tuple((names.get(file, file.stem), str(file.resolve())) for file in outside)
 
 
-def _range_name(entry_id: str) -> str:
-    return f"range:{entry_id}"
-
-
 def _restated(entry: Entry) -> Entry:
     """The entry with its present numbers as the declared ones, so that the resolved file says what is fitted."""
     error = None if entry.errors else (entry.plus, entry.minus)
@@ -587,7 +465,10 @@ def _terms(inputs: Inputs, entries: Sequence[Entry]) -> Terms:
     kept = [place[entry.id] for entry in entries]
     before = [inputs.entries[i] for i in kept]
     shrink = np.array(
-        [math.sqrt(old.plus * old.minus / (new.plus * new.minus)) for old, new in zip(before, entries, strict=True)]
+        [
+            math.sqrt(old.plus * old.minus / (new.plus * new.minus))
+            for old, new in zip(before, entries, strict=True)
+        ]
     )
     matrix = inputs.correlation_matrix()[np.ix_(kept, kept)] * np.outer(shrink, shrink)
     np.fill_diagonal(matrix, 1.0)

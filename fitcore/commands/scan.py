@@ -25,6 +25,8 @@ BAND_FRAME = 14.0
 OVERVIEW_POINTS = (73, 49)
 #: A constraint that fails on more of the frame than this is not drawn.
 MOSTLY_LOST = 0.5
+#: Nor one whose region covers more of it than this.
+SILENT = 0.9
 
 
 @dataclass(frozen=True)
@@ -59,6 +61,7 @@ class Scan:
     division: Division | None = None
     each: tuple[ConstraintProfile, ...] = ()
     skipped: tuple[str, ...] = ()
+    silent: tuple[str, ...] = ()
     overview: Profile | None = None
     others: Mapping[str, Profile] = field(default_factory=dict)
     other_intervals: Mapping[str, tuple[tuple[Any, ...], ...]] = field(default_factory=dict)
@@ -300,7 +303,7 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
         overview = profile(
             problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4])
         )
-    done, skipped = [], []
+    done, skipped, silent = [], [], []
     for number, constraint in enumerate(division.constraints):
         report(number + 1, steps)
         both = profile_constraint(problem, constraint, found.names, frames, theta)
@@ -309,6 +312,9 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
             continue
         alone, around = both[0], both[1] if wide else None
         lowest = float(np.min(np.where(alone.converged, alone.chi2, np.inf)))
+        if (alone.chi2 - lowest < threshold(scan.levels[0], 2)).mean() > SILENT:
+            silent.append(constraint.name)
+            continue
         done.append(ConstraintProfile(constraint, alone, around, lowest))
     report(steps, steps)
     return Scan(
@@ -320,6 +326,7 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
         division,
         tuple(done),
         tuple(skipped),
+        tuple(silent),
         overview,
     )
 
@@ -357,6 +364,10 @@ def notes(scan: Scan) -> list[str]:
     if scan.skipped:
         said.append(
             f"not drawn alone, because alone they do not determine most of the plane: {', '.join(scan.skipped)}"
+        )
+    if scan.silent:
+        said.append(
+            f"not drawn alone, because alone they allow nearly all of the plane: {', '.join(scan.silent)}"
         )
     if scan.each and any(part.profile.flagged.any() for part in scan.each):
         parts = [

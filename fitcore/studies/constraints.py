@@ -97,7 +97,8 @@ def divide(problem: Any, theta: np.ndarray, names: Sequence[str], half_widths: S
     Division
     """
     theta = np.asarray(theta, dtype=float)
-    entries = problem.entries
+    # not those of the problem: with flat theory errors an input is a range there and no entry
+    entries = problem.inputs.entries
     quantities = tuple(dict.fromkeys(entry.quantity for entry in entries))
     _, slopes = problem.linearise_quantities(theta, quantities)
     slope = dict(zip(quantities, np.nan_to_num(slopes), strict=True))
@@ -131,13 +132,13 @@ def divide(problem: Any, theta: np.ndarray, names: Sequence[str], half_widths: S
         support = np.any([slope[q] != 0.0 for q in (*of, *fixing)], axis=0)
         return [s for s in serving if (support & (slope[s] != 0.0)).any()]
 
-    share = _shares(problem, theta)
+    share = dict(zip((entry.id for entry in problem.entries), _shares(problem, theta), strict=True))
 
     def make(*of: str) -> Constraint:
         own = [i for q in of for i in members[q]]
         company = [i for q in (*fixing, *needed(of)) for i in members[q] if i not in own]
         groups = dict.fromkeys(g for i in own for g in entries[i].groups)
-        chi2 = float(sum(share[i] for i in members[of[0]]))
+        chi2 = float(sum(share.get(entries[i].id, 0.0) for i in members[of[0]]))
         ids = tuple(entries[i].id for i in own)
         return Constraint(of, ids, tuple(entries[i].id for i in sorted(company)), tuple(groups), chi2)
 

@@ -79,3 +79,15 @@ def test_a_plane_of_derived_quantities(linear):
     assert found.chi2 == pytest.approx(((grids[1] - 0.93) / 0.08) ** 2, abs=1e-6)
     # one line alone says nothing about another parameter
     assert profile_constraint(linear.problem, only, ("at_one", "slope"), [grids], theta) == []
+
+
+def test_flat_theory_inputs_keep_their_ranges():
+    problem = Problem.load("averages-2026", theory_errors="flat")
+    theta = find_minima(problem)[0].theta
+    division = divide(problem, theta, APEX, (0.1, 0.1))
+    every = {constraint.name: constraint for constraint in division.constraints}
+    assert "mixing_frequency_Bd+mixing_frequency_Bs" in every
+    assert "mixing-matrix-element-ratio" in every["mixing_frequency_Bd"].company
+    alone = problem.only(*every["epsilon_K"].entries, *every["epsilon_K"].company)
+    bounds = {p.name: (p.lower, p.upper) for p in alone.parameters}
+    assert bounds["bag_K"] == pytest.approx((0.7442, 0.7624))
