@@ -64,7 +64,7 @@ def load_inputs(
     if catalogue is None:
         from observables import catalogue as public
 
-        catalogue = public
+        catalogue = public.with_hypothesis_parameters()
     path, name = find_inputs(name_or_path)
     found = resolve(path, catalogue)
     inputs = Inputs(

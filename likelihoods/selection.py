@@ -128,7 +128,7 @@ def _change_parameter(
     if catalogue is None:
         from observables import catalogue as public
 
-        catalogue = public
+        catalogue = public.with_hypothesis_parameters()
     name, _, key = target.removeprefix("parameters.").rpartition(".")
     if key not in _PARAMETER_KEYS:
         raise InputError(

@@ -427,6 +427,14 @@ class Catalogue:
             walk(name, ())
         return faults
 
+    def with_hypothesis_parameters(self) -> Catalogue:
+        """A copy that also knows the parameters of all registered hypotheses, for reading what a file sets."""
+        twin = self.copy()
+        for overlay in self._hypotheses.values():
+            for name, node in overlay.parameters.items():
+                twin._nodes.setdefault(name, node)
+        return twin
+
     def copy(self) -> Catalogue:
         """An independent catalogue with the same declarations."""
         twin = Catalogue()

@@ -10,7 +10,7 @@ import pytest
 from fitcore import Problem
 from fitcore.priors import proper
 from likelihoods import load_inputs
-from observables.catalogue import Real
+from observables.catalogue import Complex, Real
 from observables.errors import CatalogueError, InputError, UnknownNameError
 
 
@@ -590,3 +590,28 @@ def test_a_correlation_of_zero_is_none(make, tables):
     m = tables.measurement
     plain = make(m("one", "at_one", 1.3, 0.1), m("two", "at_two", 2.0, 0.2))
     assert make(block).chi2([0.9, 0.3]) == plain.chi2([0.9, 0.3])
+
+
+def test_a_file_may_set_and_measure_parameters_of_a_hypothesis(tmp_path):
+    from observables import catalogue
+
+    overlay = catalogue.hypothesis("invented-Bd", title="Something added to B_d mixing", source="invented")
+    overlay.parameter("invented_size", unit="1", start=0.0, scale=0.1, title="size of the added term")
+
+    @overlay.replaces("M12_Bd")
+    def M12_Bd(standard, invented_size) -> Complex:
+        return standard * (1.0 + invented_size)
+
+    path = tmp_path / "with.toml"
+    path.write_text(
+        'include = ["averages-2026"]\n[parameters.invented_size]\nlower = -0.5\nupper = 0.5\n'
+        '[[measurement]]\nid = "size"\nquantity = "invented_size"\nvalue = 0.1\nerror = 0.01\nunit = "1"\n'
+        'source = "invented"\n'
+    )
+    problem = Problem.load(path, "invented-Bd")
+    parameter = problem.parameters[problem.parameter_names.index("invented_size")]
+    assert (parameter.lower, parameter.upper) == (-0.5, 0.5)
+    # Dm_d fixes (1 + size) times the matrix element ratio; the measured size shows in the fit
+    assert problem.fit(derived=[]).values["invented_size"] == pytest.approx(0.1, abs=0.02)
+    with pytest.raises(UnknownNameError, match="invented_size"):
+        Problem.load(path)
