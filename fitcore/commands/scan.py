@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 POINTS = {1: 201, 2: 100}
 MOST_POINTS = 1_000_000
 #: Standard deviations around the best fit that a plane of bands shows, and its overview's size in such planes.
-BAND_FRAME = 14.0
+BAND_FRAME = 15.0
 OVERVIEW_POINTS = (73, 49)
 #: A constraint that fails on more of the frame than this is not drawn.
 MOSTLY_LOST = 0.5

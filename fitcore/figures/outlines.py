@@ -13,6 +13,10 @@ if TYPE_CHECKING:
 __all__ = ["contour_lines", "draw_edge", "height", "inward_ticks", "refine"]
 
 
+#: Stands for an impossible point.
+HIGH = 1e6
+
+
 def height(delta: np.ndarray, level: float) -> np.ndarray:
     """Square root of Delta chi-square, capped: nearly linear across an edge, and finite where nothing is possible."""
     clipped = np.clip(np.where(np.isfinite(delta), delta, np.inf), 0.0, 9.0 * level)
@@ -51,11 +55,14 @@ def refine(
     a jump spoils its own cells only.
     """
     finite = np.isfinite(delta)
-    delta = np.where(finite, delta, 1e6)
+    delta = np.where(finite, delta, HIGH)
     slopes = np.where(finite[..., None], slopes, 0.0)
     (value_x, slope_x, fine_x), (value_y, slope_y, fine_y) = _hermite(x, times), _hermite(y, times)
     surface = value_x @ delta @ value_y.T
     surface += slope_x @ slopes[..., 0] @ value_y.T + value_x @ slopes[..., 1] @ slope_y.T
+    if not finite.all():  # cells with an impossible corner: a cubic across the cliff would swing below it
+        touched = (np.abs(value_x) > 0) @ (~finite).astype(float) @ (np.abs(value_y) > 0).T > 0
+        surface[touched] = HIGH
     return fine_x, fine_y, surface
 
 

@@ -380,8 +380,8 @@ def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float
         strip_x, strip_y = (x if sign > 0 else x - STRIP - 0.24), y - 0.135
     else:
         up = side == "top"
-        x, y = at, rail + (0.24 if up else -0.24)
-        page.text(x, y + (0.055 if up else -0.05), symbol, fontsize=size, ha="center", va="center")
+        x, y = at, rail + (0.24 if up else -0.22)
+        page.text(x, y + 0.055, symbol, fontsize=size, ha="center", va="center")
         strip_x, strip_y = x - 0.5 * STRIP, y - 0.115
     sample = strip_x
     page.plot([sample, sample + 0.24], [strip_y + 0.02] * 2, color=colour, lw=1.4, ls=dashes, zorder=3)

@@ -306,18 +306,24 @@ class ChainFile(ChainReader):
                     ("log_posterior", log_posterior),
                     ("accepted", accepted),
                 ):
-                    if len(file[name]) < end:
-                        file[name].resize(end, axis=0)
-                    file[name][rows] = value
+                    data = file[name]
+                    if len(data) < end:
+                        data.resize(end, axis=0)
+                    if name == "chain" and begin % self.block_steps == 0 and len(value) == self.block_steps:
+                        # Exactly one chunk, unfiltered: its bytes go to the disk without another copy.
+                        data.id.write_direct_chunk((begin, 0, 0), value)
+                    else:
+                        data[rows] = value
                 checksum = block_checksum(begin, chain, log_posterior, accepted, words)
                 for name, entry in (
                     ("random_state", words),
                     ("bookkeeping/block_end", np.int64(end)),
                     ("bookkeeping/block_checksum", np.uint32(checksum)),
                 ):
-                    if len(file[name]) <= number:
-                        file[name].resize(number + 1, axis=0)
-                    file[name][number] = entry
+                    data = file[name]
+                    if len(data) <= number:
+                        data.resize(number + 1, axis=0)
+                    data[number] = entry
                 file.flush()
                 file["committed_steps"][()] = end
                 file.flush()

@@ -26,7 +26,7 @@ from fitcore.minimise.uncertainty import curvature_at
 __all__ = ["Constraint", "Division", "divide", "profile_constraint"]
 
 #: A quantity speaks when its prediction moves by so many of its uncertainties over half the frame.
-SPEAKS = 1.0
+SPEAKS = 0.6
 #: Shared part of the theory variance (as a correlation) from which two quantities make a pair.
 SHARED = 0.5
 

@@ -23,6 +23,7 @@ from typing import Any
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
+import sampling
 
 from fitcore import Problem
 from fitcore.minimise.batch_solver import minimise_batch
@@ -40,6 +41,7 @@ PROMISES: dict[str, tuple[float, float]] = {
     "toys_over_migrad": (1500.0, np.inf),
     "toys_over_migrad_with_gradient": (400.0, np.inf),
     "profile_peak_memory_gib": (0.0, 0.5),
+    **sampling.PROMISES,
 }
 
 
@@ -209,6 +211,7 @@ def run(which: str, *, quick: bool = False) -> dict[str, Any]:
     result |= evaluation(problem)
     result |= profiles(problem, best, sample)
     result |= toys(problem, best, max(4, sample // 3))
+    result |= sampling.measure(problem, quick=quick)
     result |= start_up()
     result |= peak_memory(which)
     result["own_peak_memory_gib"] = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024.0 / 2**30

@@ -16,16 +16,18 @@ from fitcore.sampling.posterior import sample
 from observables.errors import WeakmixError
 
 
-def write(path, until, pause=0.0):
-    """Write (or go on writing) the chain whose content the tests know."""
+def write(path, until, pause=0.0, report=None):
+    """Write (or go on writing) the chain whose content the tests know; ``report`` is called at every evaluation."""
     problem = problems.gaussian(problems.correlated(5, 0.5))
     plain = problem.log_density
 
     def slow(theta):
         time.sleep(pause)
+        if report is not None:
+            report()
         return plain(theta)
 
-    if pause:
+    if pause or report is not None:
         problem.log_density = slow
     return sample(
         problem, covariance=problems.correlated(5, 0.5), chain_path=path, until=until, walkers=16, ensembles=2,
