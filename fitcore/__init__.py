@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import importlib.util
-import os
+from pathlib import Path
 from typing import Any
 
 __all__ = ["FitResult", "Problem", "__version__"]
@@ -13,13 +13,13 @@ __version__ = "0.1.0"
 
 def _check_observables() -> None:
     """Refuse another package of that name, whose tracebacks would explain nothing; looks, but imports nothing."""
-    own = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "observables", "__init__.py")
+    own = Path(__file__).resolve().parent.parent / "observables" / "__init__.py"
     spec = importlib.util.find_spec("observables")
     found = spec.origin if spec is not None else None
     if found is None:
         raise ImportError("the package 'observables' of weakmix is missing: install weakmix again")
-    with open(found, encoding="utf-8") as file:
-        is_ours = os.path.realpath(found) == os.path.realpath(own) and "observables.catalogue import" in file.read()
+    text = Path(found).read_text(encoding="utf-8", errors="replace")
+    is_ours = Path(found).resolve() == own and "observables.catalogue import" in text
     if not is_ours:
         raise ImportError(
             f"another package called 'observables' ({found}) stands in the way of weakmix's own ({own}): "

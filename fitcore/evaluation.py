@@ -80,9 +80,7 @@ class ChiSquare:
         crossing = [pair for pair in self._pairs if pair[0] != pair[1]]
         places = {(i, i) for i in range(self.n_parameters)}
         for first, second in [*((c, c) for c in used), *crossing]:
-            places |= {
-                (max(p, q), min(p, q)) for p in self._supports[first] for q in self._supports[second]
-            }
+            places |= {(max(p, q), min(p, q)) for p in self._supports[first] for q in self._supports[second]}
         # Row by row, so that a channel's share of a row is mostly one contiguous stretch.
         ordered = sorted(places)
         slots = {place: slot for slot, place in enumerate(ordered)}
@@ -196,12 +194,21 @@ class ChiSquare:
         for start in range(0, batch, CHUNK):
             part = slice(start, start + CHUNK)
             self._linearise_chunk(
-                theta[:, part], None if data is None else data[:, part], chi2[part], gradient[:, part], normal[:, part]
+                theta[:, part],
+                None if data is None else data[:, part],
+                chi2[part],
+                gradient[:, part],
+                normal[:, part],
             )
         return Linearisation(chi2, gradient.T, SparseNormal(self._rows, self._cols, normal))
 
     def _linearise_chunk(
-        self, theta: np.ndarray, data: np.ndarray | None, chi2: np.ndarray, gradient: np.ndarray, normal: np.ndarray
+        self,
+        theta: np.ndarray,
+        data: np.ndarray | None,
+        chi2: np.ndarray,
+        gradient: np.ndarray,
+        normal: np.ndarray,
     ) -> None:
         with np.errstate(all="ignore"):
             predicted, tangents = self._differentiate(theta)

@@ -33,7 +33,9 @@ def log_prior(parameters: Sequence[Any], theta: np.ndarray) -> np.ndarray:
         with np.errstate(all="ignore"):
             if kind == "normal":
                 z = (values - prior.mean) / prior.error
-                total += -0.5 * z * z - np.log(prior.error * np.sqrt(2.0 * np.pi)) - _log_mass(prior, lower, upper)
+                total += (
+                    -0.5 * z * z - np.log(prior.error * np.sqrt(2.0 * np.pi)) - _log_mass(prior, lower, upper)
+                )
             elif kind == "log-uniform":
                 lower, upper = max(lower, prior.lower), min(upper, prior.upper)
                 total += -np.log(values) - np.log(np.log(upper / lower))

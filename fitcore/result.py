@@ -125,7 +125,7 @@ class FitResult:
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data with the documented keys; numbers that do not exist are None."""
-        return _plain(
+        data: dict[str, Any] = _plain(
             {
                 "format_version": FORMAT_VERSION,
                 "chi2": self.chi2,
@@ -171,6 +171,7 @@ class FitResult:
                 "provenance": self.provenance,
             }
         )
+        return data
 
     def to_json(self) -> str:
         """JSON text of `to_dict`; floats keep all their digits."""
@@ -211,7 +212,9 @@ class FitResult:
                 correlation_names=tuple(data["correlation"]["names"]),
                 correlation_matrix=_matrix(data["correlation"]["matrix"]),
                 covariance_matrix=_matrix(data["covariance"]["matrix"]),
-                other_minima=tuple(OtherMinimum(dict(m["parameters"]), m["chi2"]) for m in data["other_minima"]),
+                other_minima=tuple(
+                    OtherMinimum(dict(m["parameters"]), m["chi2"]) for m in data["other_minima"]
+                ),
                 notices=tuple((n["kind"], n["id"], n["text"]) for n in data["notices"]),
                 fixed=dict(data["fixed"]),
                 n_calls=dict(data["n_calls"]),
@@ -238,11 +241,17 @@ def _estimate(estimate: Estimate) -> dict[str, Any]:
 
 def _read_estimate(data: Mapping[str, Any]) -> Estimate:
     pairs = {
-        key: (tuple(_open_number(x, s) for x, s in zip(data[key], (-1, 1), strict=True)) if data[key] else None)
+        key: (
+            tuple(_open_number(x, s) for x, s in zip(data[key], (-1, 1), strict=True)) if data[key] else None
+        )
         for key in ("interval_68", "interval_95")
     }
     return Estimate(
-        value=_number(data["value"]), error=data["error"], method=data["method"], unit=data["unit"], **pairs  # type: ignore[arg-type]
+        value=_number(data["value"]),
+        error=data["error"],
+        method=data["method"],
+        unit=data["unit"],
+        **pairs,  # type: ignore[arg-type]
     )
 
 

@@ -74,9 +74,7 @@ def apply_scheme(entries: Sequence[Entry], scheme: str, is_leaf: Callable[[str],
             low = max(low, entry.value - entry.minus - half)
             high = min(high, entry.value + entry.plus + half)
             if not low < high:
-                problems.append(
-                    f"{entry.where} the flat ranges of {entry.quantity!r} do not meet"
-                )
+                problems.append(f"{entry.where} the flat ranges of {entry.quantity!r} do not meet")
             bounds[entry.quantity] = (low, high)
         else:
             kept.append(entry)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import tempfile
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,7 +13,9 @@ from fitcore.commands.options import module_option, out_option, reading_options
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
+    from fitcore.commands.posterior_comparison import Comparison
     from fitcore.problem import Problem
+    from fitcore.sampling.evidence import Evidence
 
 file_argument = click.argument("file", metavar="FILE", type=click.Path(path_type=Path))
 
@@ -61,7 +64,8 @@ def verify_command(file: Path, output: Output) -> None:
     "--against",
     metavar="RUN",
     type=click.Path(path_type=Path, exists=True, file_okay=False),
-    help="Run folder of a fit: its profile intervals stand beside the credible ones.",
+    help="Run folder of a fit or a profile: its intervals stand beside the credible ones, its contours go into a "
+    "figure with them.",
 )
 @click.option(
     "--name",
@@ -82,7 +86,14 @@ def verify_command(file: Path, output: Output) -> None:
 @click.option(
     "--discard", type=click.IntRange(min=0), default=0, show_default=True, help="First steps to leave out."
 )
+@click.option(
+    "--evidence",
+    "with_evidence",
+    is_flag=True,
+    help="Estimate the evidence (marginal likelihood) by importance sampling; every prior must be proper.",
+)
 @out_option
+@module_option
 @reading_options
 def summary_command(
     file: Path,
@@ -91,16 +102,27 @@ def summary_command(
     cl: tuple[float, ...],
     equal_tailed: bool,
     discard: int,
+    with_evidence: bool,
     out: Path | None,
+    modules: tuple[str, ...],
     output: Output,
 ) -> None:
-    """Summarise a chain: means, credible intervals, convergence; figures with --out."""
+    """Summarise a chain: means, credible intervals, convergence; figures with --out.
+
+    \b
+      weakmix chain summary world.h5 --against fit-run --out figures
+      weakmix chain summary world.h5 --evidence --json -
+    """
     from fitcore.commands import posterior_tables
+    from fitcore.commands.modules import load_modules
+    from fitcore.commands.posterior_comparison import Comparison, read_comparison
     from fitcore.sampling.chain_file import ChainFile
     from fitcore.sampling.diagnostics import diagnose
     from fitcore.sampling.summary import summarise
 
-    profile = {} if against is None else read_fit(against)
+    load_modules(modules)
+    other = Comparison() if against is None else read_comparison(against)
+    profile = other.estimates
     with ChainFile.open(file) as chain:
         made = summarise(
             chain,
@@ -110,9 +132,14 @@ def summary_command(
             start=discard,
         )
         diagnostics = diagnose(chain)
-        header, notices = chain.header, chain.notices
+        header, notices = chain.header, list(chain.notices)
+        if against is not None:
+            notices += [f"{against} differs from the chain in {what}" for what in other.differences(header)]
+        if other.plane and out is None:
+            notices.append(f"{against} is a profile in a plane: give --out to draw it over the posterior")
+        found = evidence_of(chain, file) if with_evidence else None
         if out is not None:
-            write_figures(chain, out, [row.name for row in made.rows], profile, discard)
+            write_figures(chain, out, [row.name for row in made.rows], other, discard)
     output.headline(
         "posterior", str(file), f"{made.steps} steps of {made.walkers} walkers", header.hypothesis
     )
@@ -121,40 +148,38 @@ def summary_command(
     output.show(diagnostics.verdict, *(f"  - {line}" for line in diagnostics.advice))
     output.show(posterior_tables.summary(made, profile))
     output.show(posterior_tables.diagnostics(diagnostics), posterior_tables.PRIORS)
-    output.write_json({**made.to_dict(), "diagnostics": diagnostics.to_dict(), "notices": list(notices)})
+    content = {**made.to_dict(), "diagnostics": diagnostics.to_dict(), "notices": notices}
+    if found is not None:
+        output.show(*posterior_tables.evidence(found))
+        content["evidence"] = dataclasses.asdict(found)
+    output.write_json(content)
 
 
-def read_fit(folder: Path) -> dict[str, Any]:
-    """Return the estimates of a fit's run folder, parameters and derived ones.
+def evidence_of(chain: Any, file: Path) -> Evidence:
+    """Estimate the evidence of the problem that a chain was sampled from; the same chain gives the same number."""
+    from fitcore.sampling.evidence import evidence
 
-    Raises
-    ------
-    StoreError
-        If the folder holds no fit.
-    """
-    from fitcore.result import FitResult
-    from observables.errors import StoreError
-
-    try:
-        text = (folder / "result.json").read_text(encoding="utf-8")
-        fit = FitResult.from_json(text)
-    except (OSError, KeyError, TypeError, ValueError) as error:
-        message = f"{folder}: is not the run folder of a fit; make one with weakmix fit INPUTS --out DIR"
-        raise StoreError(message) from error
-    return {**fit.parameters, **fit.derived}
+    problem = problem_of_chain(file)
+    chain.check_problem(problem)
+    return evidence(problem, chain, rng=0)
 
 
-def write_figures(chain: Any, folder: Path, names: list[str], profile: dict[str, Any], discard: int) -> None:
-    """Draw one parameter at a time and a triangle of pairs into a folder."""
+def write_figures(chain: Any, folder: Path, names: list[str], other: Comparison, discard: int) -> None:
+    """Draw one parameter at a time, a triangle of pairs, and the plane of a profile into a folder."""
     from fitcore.figures import posterior
     from fitcore.figures.style import save
     from observables.errors import StoreError
 
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        save(posterior.densities(chain, names, profile=profile, start=discard), folder, "posterior-densities")
+        drawing = posterior.densities(chain, names, profile=other.estimates, start=discard)
+        save(drawing, folder, "posterior-densities")
         if len(names) > 1:
             save(posterior.triangle(chain, names, start=discard), folder, "posterior-triangle")
+        if other.plane:
+            x, y = other.plane
+            drawing = posterior.plane(chain, x, y, profile=other.contours, start=discard)
+            save(drawing, folder, "posterior-plane")
     except OSError as error:
         if isinstance(error, StoreError):
             raise

@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from rich.table import Table
 
     from fitcore.sampling.diagnostics import Diagnostics
+    from fitcore.sampling.evidence import Evidence
     from fitcore.sampling.sample_result import SampleResult
     from fitcore.sampling.summary import PosteriorRow, PosteriorSummary
 
@@ -93,3 +94,16 @@ def diagnostics(made: Diagnostics, *, most: int = 8) -> Table:
             cells.append(f"{check.ratio[i]:.3f}")
         result.add_row(*cells)
     return result
+
+
+def evidence(made: Evidence) -> list[Text]:
+    """State an evidence, or why there is none."""
+    if not made.valid or made.log_evidence is None:
+        return [Text(f"Evidence: {made.message}", style="bold red")]
+    return [
+        Text(f"Evidence: ln Z = {with_error(made.log_evidence, made.error)} ({made.message})", style="bold"),
+        Text(
+            "Likelihood exp(-chi-square/2) times the normalised priors: compare it only between hypotheses for the "
+            "same entries, and with the priors named."
+        ),
+    ]

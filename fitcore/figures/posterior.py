@@ -22,9 +22,11 @@ __all__ = ["densities", "plane", "triangle"]
 LEVELS = (0.6827, 0.9545)
 MOST_PANELS = 30
 MOST_IN_TRIANGLE = 9
-ACROSS = 3
+#: Panels side by side, at most.
+ACROSS = 4
 PROFILE = style.VERMILLION
 POSTERIOR = style.NAVY
+CREDIBLE = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
 
 
 class _Draws:
@@ -113,26 +115,28 @@ def densities(
     profile = profile or {}
     names = list(chain.parameter_names if names is None else names)[:MOST_PANELS]
     draws = _Draws(chain, names, start)
-    down = math.ceil(len(names) / ACROSS)
-    across = min(len(names), ACROSS)
-    panel_width, panel_height, head, foot = 2.75, 1.95, 0.95, 0.35
-    width, height = max(across * panel_width + 0.2, 5.6), down * panel_height + head + foot
+    across = _panels_across(len(names))
+    down = math.ceil(len(names) / across)
+    panel_width, panel_height, head, foot = 2.5, 1.95, 0.62, 0.3
+    width, height = max(across * panel_width + 0.2, 7.2), down * panel_height + head + foot
     rows: list[tuple[Any, ...]] = []
     with style.in_style():
         figure = style.new_figure(width, height)
         for number, name in enumerate(names):
-            left = 0.1 + panel_width * (number % ACROSS) + 0.15
-            bottom = foot + panel_height * (down - 1 - number // ACROSS) + 0.45
-            axes = figure.add_axes((left / width, bottom / height, 2.45 / width, 1.4 / height))
+            left = 0.2 + panel_width * (number % across)
+            bottom = foot + panel_height * (down - 1 - number // across) + 0.45
+            axes = figure.add_axes((left / width, bottom / height, 2.25 / width, 1.4 / height))
             one = profile.get(name)
             curve = _panel(axes, draws, name, one)
             axes.set_xlabel(draws.label(name), fontsize=9, labelpad=1.5)
             rows += [(name, float(x), float(p)) for x, p in zip(*curve, strict=True)]
         _title(figure, height, width, "Posterior densities")
-        words = "dark 68.27 %, light 95.45 % credible (highest density, one quantity)"
-        if profile:
-            words += "; open bars: profile of the fit, 68.27 % and 95.0 % for one quantity"
-        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        words = "dark: 68.27 %, light: 95.45 % credible (highest density, one quantity)"
+        _subtitle(figure, height, width, words)
+        if any(name in profile for name in names):
+            at = (0.2 + 0.0525 * len(words)) / width
+            words = "open bars: profile of the fit, 68.27 % and 95.0 %, one quantity"
+            figure.text(at, 1 - 0.57 / height, words, fontsize=7, color=PROFILE, va="center")
         style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
     return style.Drawing(figure, ("name", "value", "density"), tuple(rows))
 
@@ -212,10 +216,12 @@ def plane(
         Its data are the contours.
     """
     draws = _Draws(chain, [x, y], start)
-    width, height = 5.6, 5.5
+    width, height = 6.4, 5.6
     with style.in_style():
         figure = style.new_figure(width, height)
-        axes = figure.add_axes((0.85 / width, 0.85 / height, 4.45 / width, 3.7 / height))
+        axes = figure.add_axes((0.85 / width, 0.85 / height, 5.3 / width, 3.85 / height))
+        axes.spines[["top", "right"]].set_visible(True)
+        _frame(axes, draws, x, y, [line for _, lines in profile for line in lines])
         found = _credible(axes, draws, x, y)
         axes.set_xlabel(draws.label(x), fontsize=11)
         axes.set_ylabel(draws.label(y), fontsize=11)
@@ -226,14 +232,15 @@ def plane(
                 )
                 found.append((f"profile {words}", np.asarray(line)))
         _title(figure, height, width, "Posterior regions")
-        words = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
-        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        _subtitle(figure, height, width, CREDIBLE)
         if profile:
-            listed = "; ".join(words for words, _ in profile)
+            listed = "; ".join(
+                f"{('full', 'dashed')[number % 2]} line {words}" for number, (words, _) in enumerate(profile)
+            )
             figure.text(
                 0.2 / width,
                 1 - 0.75 / height,
-                f"red lines: profile, {listed}",
+                f"profile of the fit: {listed}",
                 fontsize=7,
                 color=PROFILE,
                 va="center",
@@ -266,8 +273,9 @@ def triangle(
     names = list(chain.parameter_names if names is None else names)[:MOST_IN_TRIANGLE]
     draws = _Draws(chain, names, start)
     n, cell = len(names), 1.25
-    left, bottom, head = 0.85, 0.75, 0.95
+    left, bottom, head = 0.85, 0.8, 0.72
     width, height = max(left + n * cell + 0.2, 5.6), bottom + n * cell + head
+    left += max(0.0, 0.5 * (width - left - n * cell - 0.2))
     rows: list[tuple[Any, ...]] = []
     with style.in_style():
         figure = style.new_figure(width, height)
@@ -299,8 +307,7 @@ def triangle(
                     axes.set_ylabel(draws.label(y), fontsize=8)
         figure.align_labels()
         _title(figure, height, width, "Posterior of pairs")
-        words = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
-        figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+        _subtitle(figure, height, width, CREDIBLE)
         style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
     return style.Drawing(figure, ("x", "y", "region", "x_value", "y_value"), tuple(rows))
 
@@ -331,11 +338,6 @@ def _credible(
     with np.errstate(divide="ignore"):
         depth = np.minimum(-2.0 * np.log(density.density.T / top), 60.0)
     levels = [max(-2.0 * math.log(density.level(cl) / top), 1e-3) for cl in LEVELS]
-    if axes.get_autoscale_on():
-        low, high = np.quantile(draws.columns[x], [0.0005, 0.9995])
-        axes.set_xlim(low - 0.08 * (high - low), high + 0.08 * (high - low))
-        low, high = np.quantile(draws.columns[y], [0.0005, 0.9995])
-        axes.set_ylim(low - 0.08 * (high - low), high + 0.08 * (high - low))
     axes.contourf(
         density.x, density.y, depth.T, levels=[-1.0, levels[0]], colors=[style.tint(POSTERIOR, 0.45)]
     )
@@ -346,6 +348,28 @@ def _credible(
     edges = [line for words, line in found if words.startswith("95")]
     draw_edge(axes, edges, (density.x, density.y, depth), POSTERIOR, ticks=ticks, label=f"credible:{x}:{y}")
     return found
+
+
+def _frame(axes: Any, draws: _Draws, x: str, y: str, lines: Sequence[np.ndarray]) -> None:
+    """Set limits that hold the draws and the lines."""
+    for number, (name, limit) in enumerate(((x, axes.set_xlim), (y, axes.set_ylim))):
+        low, high = np.quantile(draws.columns[name], [0.0005, 0.9995])
+        for line in lines:
+            column = np.asarray(line)[:, number]
+            low, high = min(low, column.min()), max(high, column.max())
+        margin = 0.08 * (high - low) or 1.0
+        limit(low - margin, high + margin)
+
+
+def _panels_across(count: int) -> int:
+    """Number of panels in a row: as few empty places as possible, then as many across as possible."""
+    if count <= ACROSS:
+        return count
+    return min((ACROSS, ACROSS - 1), key=lambda across: (-count % across, -across))
+
+
+def _subtitle(figure: Any, height: float, width: float, words: str) -> None:
+    figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
 
 
 def _title(figure: Any, height: float, width: float, words: str) -> None:

@@ -2,8 +2,8 @@
 
 A `Dual` is an array together with one tangent array per parameter it depends on, and only those. Formulas written
 with NumPy's ufuncs (and ``np.where``, ``np.sum``, ``np.angle``, ``np.real``, ``np.imag``, indexing) run on it
-unchanged, through NumPy's dispatch protocols. A formula that uses anything else is differentiated by central differences in
-its own few arguments, which `call_with_derivatives` arranges.
+unchanged, through NumPy's dispatch protocols. A formula that uses anything else is differentiated by central
+differences in its own few arguments, which `call_with_derivatives` arranges.
 
 Complex arrays carry complex tangents with respect to the real parameters, so ``np.abs`` and ``np.conjugate``, which
 have no complex derivative, are no exception.

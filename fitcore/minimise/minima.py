@@ -43,8 +43,10 @@ class Minimum:
 def start_points(problem: Any, size: int = 64, *, rng: np.random.Generator | int | None = 0) -> np.ndarray:
     """Starts for a multi-start.
 
-    Low-discrepancy points inside the bounds for parameters that no entry measures directly; the others start from
-    their own terms. The first row is the problem's own start.
+    Low-discrepancy points inside the bounds for parameters that no entry measures directly. The others start from
+    their own terms: every second row at the measured value, the rest thrown around it, twice as wide as its error.
+    Parameters without a term and without bounds are thrown around their start. The first row is the problem's own
+    start.
 
     Parameters
     ----------
@@ -69,11 +71,17 @@ def start_points(problem: Any, size: int = 64, *, rng: np.random.Generator | int
         for i, p in enumerate(problem.parameters)
         if p.name not in measured and np.isfinite(p.lower) and np.isfinite(p.upper)
     ]
+    generator = np.random.default_rng(rng)
     points = np.tile(start, (size, 1))
+    rest = [i for i in range(len(start)) if i not in spread]
+    steps = np.array([p.scale * (2.0 if p.name in measured else 5.0) for p in problem.parameters])
+    thrown = start + steps * generator.standard_normal(points.shape)
+    inside = np.clip(thrown, [p.lower for p in problem.parameters], [p.upper for p in problem.parameters])
+    points[2::2, rest] = inside[2::2, rest]
     if spread:
         lower = np.array([problem.parameters[i].lower for i in spread])
         upper = np.array([problem.parameters[i].upper for i in spread])
-        unit = _kronecker(size, len(spread), np.random.default_rng(rng))
+        unit = _kronecker(size, len(spread), generator)
         points[1:, spread] = lower + unit[1:] * (upper - lower)
     return points
 

@@ -9,6 +9,7 @@ import numpy as np
 __all__ = ["Density1D", "Density2D", "density_1d", "density_2d", "highest_density", "shortest_interval"]
 
 _GRID = 2048
+_ORDER_FACTOR = 1.6
 
 
 @dataclass(frozen=True)
@@ -218,7 +219,7 @@ def density_2d(
     effective: float | None = None,
     grid: int = 160,
 ) -> Density2D:
-    """Density of two parameters, smoothed along the axes of their covariance's Cholesky factor.
+    """Density of two parameters, smoothed with a kernel of their own correlation.
 
     Parameters
     ----------
@@ -235,25 +236,38 @@ def density_2d(
 
     Notes
     -----
-    Histogram and Gaussian smoothing; bandwidth per axis as in one dimension, scaled by N^(1/5 - 1/6).
+    Histogram, then a Gaussian kernel of fourth order, exp(-a) (1 + a) of the wave number: its bias is of fourth
+    order in the bandwidth, so regions do not grow by being smoothed (M. P. Wand, M. C. Jones, "Kernel Smoothing",
+    1995, section 2.8). Bandwidth per axis as in one dimension, times N^(1/5 - 1/6) and a factor of 1.6 for the
+    higher order (tried on known densities). Where draws come close to a bound the kernel has no correlation: it is
+    reflected there.
     """
-    from scipy.fft import dctn, idctn
+    from scipy.fft import dctn, fftfreq, idctn, irfftn, rfftfreq, rfftn
 
     count = len(x) if effective is None else effective
-    axes, edges, times = [], [], []
+    axes, edges, widths, free = [], [], [], True
     for draws, (lower, upper) in zip((x, y), bounds, strict=True):
         smooth = density_1d(draws, lower=lower, upper=upper, effective=count, grid=512)
         span = float(draws.max() - draws.min()) or 1.0
         low = max(lower, float(draws.min()) - 0.1 * span)
         high = min(upper, float(draws.max()) + 0.1 * span)
+        free &= low > lower and high < upper
         edge = np.linspace(low, high, grid + 1)
         edges.append(edge)
         axes.append(0.5 * (edge[1:] + edge[:-1]))
-        times.append((smooth.bandwidth * count ** (1.0 / 5.0 - 1.0 / 6.0) / (high - low)) ** 2)
+        widths.append(_ORDER_FACTOR * smooth.bandwidth * count ** (1.0 / 5.0 - 1.0 / 6.0) / (high - low))
     mass = np.histogram2d(x, y, bins=edges)[0]
-    transform = dctn(mass)
-    k = np.arange(grid) ** 2 * np.pi**2
-    smooth2 = idctn(transform * np.exp(-0.5 * k * times[0])[:, None] * np.exp(-0.5 * k * times[1])[None, :])
+    if free:
+        with np.errstate(divide="ignore", invalid="ignore"):
+            correlation = float(np.nan_to_num(np.corrcoef(x, y)[0, 1]))
+        first = 2.0 * np.pi * widths[0] * fftfreq(grid, 1.0 / grid)[:, None]
+        second = 2.0 * np.pi * widths[1] * rfftfreq(grid, 1.0 / grid)[None, :]
+        a = 0.5 * (first**2 + 2.0 * correlation * first * second + second**2)
+        smooth2 = irfftn(rfftn(mass) * np.exp(-a) * (1.0 + a), s=mass.shape)
+    else:
+        k = np.pi * np.arange(grid)
+        a = 0.5 * ((widths[0] * k[:, None]) ** 2 + (widths[1] * k[None, :]) ** 2)
+        smooth2 = idctn(dctn(mass) * np.exp(-a) * (1.0 + a))
     density = np.maximum(smooth2.T, 0.0)
     area = (axes[0][1] - axes[0][0]) * (axes[1][1] - axes[1][0])
     return Density2D(axes[0], axes[1], density / (density.sum() * area))

@@ -118,12 +118,14 @@ class StudentMixture:
             "lower": self.scales.lower,
             "upper": self.scales.upper,
             "kinds": self.scales.kinds.astype(np.float64),
+            "shear": self.scales.shear,
         }
 
     @classmethod
     def from_arrays(cls, arrays: Mapping[str, np.ndarray]) -> StudentMixture:
         """The mixture back from :meth:`arrays`."""
-        scales = Scales(arrays["kinds"].astype(np.int64), arrays["lower"], arrays["upper"])
+        shear = arrays.get("shear", np.zeros((0, 0)))
+        scales = Scales(arrays["kinds"].astype(np.int64), arrays["lower"], arrays["upper"], shear)
         return cls(
             arrays["weights"], arrays["means"], arrays["covariances"], float(arrays["degrees"]), scales
         )
@@ -176,7 +178,7 @@ class StudentMixture:
         width = draws.std(axis=0)
         # As if every parameter could come this low: a logarithm must not meet zero.
         lowest = np.minimum(draws.mean(axis=0), draws.min(axis=0) + 4.0 * width)
-        scales = chosen_scales(lowest, width, lower, upper)
+        scales = chosen_scales(lowest, width, lower, upper).sheared(draws, labels)
         y, _ = scales.scaled(draws)
         spread = np.maximum(y.std(axis=0), 1e-300)
         weights, means, covariances = [], [], []

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -26,17 +26,23 @@ class Scales:
     y = Phi^-1((x - lower)/(upper - lower)): a uniform parameter becomes a unit Gaussian, and nothing falls
     outside its range.
 
+    A parameter that a measurement ties to boxed ones follows them linearly in x, not in y. So the others are taken
+    relative to a polynomial of the boxed ones, ``y -= features @ shear``; a triangular change, its Jacobian is one.
+
     Attributes
     ----------
     kinds : ndarray (n,) of int
         0 linear, 1 logarithmic, 2 boxed.
     lower, upper : ndarray (n,)
         Bounds; finite for boxed parameters.
+    shear : ndarray (2 x number of boxed parameters, n)
+        Coefficients of :meth:`features`; zero in the columns of boxed parameters. An empty array means none.
     """
 
     kinds: np.ndarray
     lower: np.ndarray
     upper: np.ndarray
+    shear: np.ndarray = field(default_factory=lambda: np.zeros((0, 0)))
 
     @classmethod
     def linear(cls, n: int) -> Scales:
@@ -52,6 +58,27 @@ class Scales:
     def logarithmic(self) -> np.ndarray:
         """Logarithmic parameters (n,) of bool."""
         return np.asarray(self.kinds == LOGARITHMIC)
+
+    def features(self, theta: np.ndarray) -> np.ndarray:
+        """Position of the boxed parameters in their ranges from -1/2 to 1/2, then its square less 1/12."""
+        k = self.boxed
+        share = (theta[:, k] - self.lower[k]) / (self.upper[k] - self.lower[k]) - 0.5
+        return np.concatenate([share, share**2 - 1.0 / 12.0], axis=1)
+
+    def sheared(self, theta: np.ndarray, labels: np.ndarray) -> Scales:
+        """The same scales with the shear that fits draws (B, n) best, up to a constant per label (B,)."""
+        boxed = self.boxed
+        features = self.features(theta)
+        if boxed.all() or len(theta) < 20 * (features.shape[1] or len(theta)):
+            return self
+        y = replace(self, shear=np.zeros((0, 0))).scaled(theta)[0]
+        for label in np.unique(labels):
+            members = labels == label
+            features[members] -= features[members].mean(axis=0)
+            y[members] -= y[members].mean(axis=0)
+        shear = np.linalg.lstsq(features, y, rcond=1e-10)[0]
+        shear[:, boxed] = 0.0
+        return replace(self, shear=shear)
 
     def scaled(self, theta: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Scaled parameters (B, n) of ``theta`` (B, n), and ln |dy/dx| summed over the parameters (B,)."""
@@ -69,21 +96,25 @@ class Scales:
             z = ndtri(np.clip((y[:, k] - self.lower[k]) / size, _EDGE, 1.0 - _EDGE))
             y[:, k] = z
             log_jacobian += (0.5 * z**2 + 0.5 * np.log(2.0 * np.pi) - np.log(size)).sum(axis=1)
+        if self.shear.size:
+            y -= self.features(np.asarray(theta, dtype=np.float64)) @ self.shear
         return y, log_jacobian
 
     def unscaled(self, y: np.ndarray) -> np.ndarray:
         """Inverse of :meth:`scaled`."""
         theta = np.array(y, dtype=np.float64)
-        k = np.flatnonzero(self.logarithmic)
-        if len(k):
-            # A far draw must stay finite; the posterior rejects it anyway.
-            theta[:, k] = np.exp(np.clip(theta[:, k], -700.0, 700.0))
         k = np.flatnonzero(self.boxed)
         if len(k):
             from scipy.special import ndtr
 
             share = np.clip(ndtr(theta[:, k]), _EDGE, 1.0 - _EDGE)
             theta[:, k] = self.lower[k] + (self.upper[k] - self.lower[k]) * share
+            if self.shear.size:
+                theta += self.features(theta) @ self.shear
+        k = np.flatnonzero(self.logarithmic)
+        if len(k):
+            # A far draw must stay finite; the posterior rejects it anyway.
+            theta[:, k] = np.exp(np.clip(theta[:, k], -700.0, 700.0))
         return theta
 
 

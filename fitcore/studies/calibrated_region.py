@@ -112,7 +112,7 @@ def _ranges(
 
 def _refined(grid: np.ndarray, step: int) -> np.ndarray:
     position = np.arange(step * (grid.size - 1) + 1) / step
-    fine = np.interp(position, np.arange(grid.size), grid)
+    fine = np.asarray(np.interp(position, np.arange(grid.size), grid))
     fine[::step] = grid
     return fine
 
@@ -196,7 +196,7 @@ def _interpolated_line(line: np.ndarray, grid: np.ndarray, fine: np.ndarray) -> 
     known = ~np.isnan(line)
     if not known.any():
         return np.full(fine.size, np.nan)
-    return np.interp(fine, grid[known], line[known])
+    return np.asarray(np.interp(fine, grid[known], line[known]))
 
 
 def _draw_intervals(plan: RegionPlan, height: np.ndarray) -> list[tuple[float, float, bool, bool]]:
@@ -221,11 +221,11 @@ def _crossing(x: np.ndarray, height: np.ndarray, outside: int, inside: int) -> f
     return float(x[inside] + share * (x[outside] - x[inside]))
 
 
-def _cut(plan: RegionPlan, ends: tuple[float, float, bool, bool]) -> bool:
+def _cut(plan: RegionPlan, ends: Any) -> bool:
     """Whether the grid, rather than a natural limit, ended an interval."""
     low, high, low_open, high_open = ends
     (natural_low, natural_high) = plan.limits[0]
-    return (low_open and low > natural_low) or (high_open and high < natural_high)
+    return bool((low_open and low > natural_low) or (high_open and high < natural_high))
 
 
 def _draw_polylines(plan: RegionPlan, height: np.ndarray) -> list[np.ndarray]:

@@ -254,7 +254,7 @@ def outlook(
     entries, same = [], []
     changed = []
     for entry in problem.inputs.entries:
-        value = predicted[entry.id]
+        value = predicted.get(entry.id, entry.value)  # a range of a parameter that is held has no say
         factor = plan.factors.get(entry.id, 1.0)
         plus, minus = plan.absolute.get(entry.id, (entry.plus * factor, entry.minus * factor))
         if (plus, minus) != (entry.plus, entry.minus):

@@ -182,10 +182,20 @@ def likelihood_ratio(
     with np.errstate(invalid="ignore"):
         ratio = np.maximum(chi2 - free.chi2, 0.0)
     ratio[~free.converged | ~np.isfinite(ratio)] = np.inf
-    return ratio
+    return np.asarray(ratio)
 
 
-def _keep_lower(problem, held, rows, starts, data, theta, chi2, good) -> None:
+def _keep_lower(
+    problem: Any,
+    held: Any,
+    rows: np.ndarray,
+    starts: np.ndarray,
+    data: np.ndarray,
+    theta: np.ndarray,
+    chi2: np.ndarray,
+    good: np.ndarray,
+) -> None:
+    """Fit rows again from other starts and keep, in place, what is better."""
     again, again_chi2, again_good = held_fit(problem, held, starts, data[rows])
     better = (again_good & ~good[rows]) | ((again_chi2 < chi2[rows]) & (again_good == good[rows]))
     pick = rows[better]

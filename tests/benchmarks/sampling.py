@@ -61,7 +61,7 @@ def _smallest(chain: np.ndarray) -> float:
 
 
 def chain_file_overhead(
-    problem: Problem, modes: Any, *, steps: int = 1000, repeats: int = 5
+    problem: Problem, modes: Any, *, steps: int = 1000, repeats: int = 4
 ) -> dict[str, float]:
     """Extra time of sampling into a file over sampling into memory, same seed, so the same steps.
 
@@ -93,4 +93,4 @@ def measure(problem: Problem, *, quick: bool = False) -> dict[str, float]:
     """All numbers of this module."""
     modes = modes_of_fit(problem, problem.fit())
     plain = against_plain_emcee(problem, modes, plain_steps=150 if quick else 400)
-    return plain | chain_file_overhead(problem, modes, repeats=3 if quick else 5)
+    return plain | chain_file_overhead(problem, modes, repeats=2 if quick else 4)

@@ -228,7 +228,9 @@ def broken(result: dict[str, Any]) -> list[str]:
 
 
 def main() -> int:
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("--set", default="world-2026", help="bundled set or inputs file")
     parser.add_argument("--quick", action="store_true", help="fewer MIGRAD samples")
     parser.add_argument("--json", type=Path, help="write the numbers here")

@@ -318,7 +318,7 @@ def test_two_solutions_of_a_square(make, tables, catalogue):
     assert "several-minima" in result.flags
 
 
-def test_starts_spread_only_where_nothing_is_measured(make, tables, catalogue):
+def test_starts_spread_where_nothing_is_measured_and_from_the_terms_elsewhere(make, tables, catalogue):
     catalogue.parameter("side", unit="1", start=1.0, lower=-5.0, upper=5.0, scale=0.1, title="side")
 
     def area(side, slope, width) -> Real:
@@ -332,13 +332,41 @@ def test_starts_spread_only_where_nothing_is_measured(make, tables, catalogue):
     assert points.shape == (64, 3)
     assert np.array_equal(points[0], problem.start)
     slope, width, side = points.T
-    assert (slope == slope[0]).all(), "no finite bounds"
-    assert (width == width[0]).all(), "measured"
+    assert (width[1::2] == 2.0).all(), "every second one at the measured value"
+    assert 0.1 < np.std(width[2::2]) < 0.4, "the others around it, about twice its error wide"
+    assert (slope[1::2] == slope[0]).all()
+    assert np.std(slope[2::2]) > 0, "no term and no bounds: around the start"
     assert ((side >= -5.0) & (side <= 5.0)).all()
     # One point in every sixteenth of the range: an even sequence.
     assert len(np.unique(np.floor((side[1:] + 5.0) / 10.0 * 16))) == 16
     assert np.array_equal(points, start_points(problem, 64))
     assert not np.array_equal(points, start_points(problem, 64, rng=5))
+
+
+def test_a_second_minimum_in_measured_parameters_is_found(make, tables, catalogue):
+    """height * depth and height + depth measured, with a vague height: the two may change places."""
+    for name in ("height", "depth"):
+        catalogue.parameter(name, unit="1", start=1.0, lower=0.0, upper=5.0, scale=0.1, title=name)
+
+    def area_hd(height, depth) -> Real:
+        return height * depth
+
+    def sum_hd(height, depth) -> Real:
+        return height + depth
+
+    for function in (area_hd, sum_hd):
+        catalogue.quantity(unit="1", title=function.__name__, source="invented")(function)
+    result = make(
+        tables.measurement("p", "area_hd", 2.0, 0.02),
+        tables.measurement("t", "sum_hd", 3.0, 0.02),
+        tables.measurement("h", "height", 1.0, 0.55),
+        tables.measurement("d", "depth", 2.0, 0.6),
+    ).fit(derived=[])
+    assert result.valid
+    assert result.values["height"] == pytest.approx(1.0, abs=0.05)
+    # Delta chi2 = (1/0.55)^2 + (1/0.6)^2 if the two change places exactly
+    assert [m.parameters["height"] for m in result.other_minima] == pytest.approx([2.0], abs=0.05)
+    assert result.other_minima[0].chi2 - result.chi2 == pytest.approx(0.55**-2 + 0.6**-2, rel=0.1)
 
 
 def test_minima_of_an_angle_are_told_apart_modulo_its_period(make, tables):

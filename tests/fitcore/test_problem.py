@@ -262,7 +262,9 @@ def test_log_posterior_is_prior_minus_half_chi2(make, tables):
         # normalised inside the bounds of the width, 0 and 10: the lower one is four deviations below the mean
         (
             {"kind": "normal", "mean": 2.0, "error": 0.5},
-            -0.5 * 4.0 - math.log(0.5 * math.sqrt(2 * math.pi)) - math.log(0.5 * math.erfc(-4 / math.sqrt(2))),
+            -0.5 * 4.0
+            - math.log(0.5 * math.sqrt(2 * math.pi))
+            - math.log(0.5 * math.erfc(-4 / math.sqrt(2))),
         ),
         ({"kind": "uniform", "lower": 1.0, "upper": 5.0}, -math.log(4.0)),
         ({"kind": "log-uniform", "lower": 1.0, "upper": 5.0}, -math.log(3.0) - math.log(math.log(5.0))),

@@ -135,7 +135,12 @@ class Writer:
         if isinstance(value, str):
             if may_break and self.draw(st.booleans()):
                 # The format drops a line end right after the opening quotes.
-                self.text += '"""' + "\n" * value.startswith("\n") + value.replace("\\", "\\\\").replace('"', '\\"') + '"""'
+                self.text += (
+                    '"""'
+                    + "\n" * value.startswith("\n")
+                    + value.replace("\\", "\\\\").replace('"', '\\"')
+                    + '"""'
+                )
             else:
                 self.text += self.basic(value)
         elif isinstance(value, bool):

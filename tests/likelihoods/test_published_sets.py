@@ -99,7 +99,9 @@ def test_groups_keep_to_the_vocabulary(inputs):
 def test_theory_inputs_are_marked_as_such(inputs):
     for entry in inputs.entries:
         family = (set(entry.groups) & FAMILIES).pop()
-        if family in THEORY_FAMILIES and entry.id != "top-mass":  # a measured mass, whatever its conversion costs
+        if (
+            family in THEORY_FAMILIES and entry.id != "top-mass"
+        ):  # a measured mass, whatever its conversion costs
             assert entry.kind == "theory", entry.id
         elif family != "form-factor-shape":
             assert entry.kind == "experiment", entry.id

@@ -11,7 +11,13 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from fitcore.minimise import derivatives
-from fitcore.minimise.derivatives import Dual, UnsupportedOperationError, call_with_derivatives, seed, tangents_of
+from fitcore.minimise.derivatives import (
+    Dual,
+    UnsupportedOperationError,
+    call_with_derivatives,
+    seed,
+    tangents_of,
+)
 
 POINTS = np.array([0.3, 0.55, 0.9])
 

@@ -2,15 +2,20 @@
 
 import json
 
+import numpy as np
 import pytest
 from click.testing import CliRunner
 
 pytest.importorskip("emcee")
 
 from fitcore.commands import chain as chain_command
+from fitcore.commands import fit as fit_command
+from fitcore.commands import profile as profile_command
 from fitcore.commands import sample as sample_command
+from fitcore.commands import show as show_command
 from fitcore.commands.errors import report_errors
 from fitcore.commands.progress import describe, duration
+from fitcore.sampling.chain_file import ChainFile
 from fitcore.sampling.sample_result import Progress
 
 
@@ -111,7 +116,101 @@ def test_chain_derive_and_summary(chain, tmp_path):
     assert {p.suffix for p in out.iterdir()} == {".pdf", ".png", ".csv"}
     result = run(chain_command.command, "summary", chain[0], "--against", tmp_path)
     assert result.exit_code == 2
-    assert "is not the run folder of a fit" in result.stderr
+    assert "is not the run folder of a fit or a profile" in result.stderr
+
+
+class TestSummaryAgainst:
+    NAMES = ("--name", "wolfenstein_rhobar", "--name", "wolfenstein_etabar")
+
+    def test_fit(self, chain, tmp_path):
+        fit = run(fit_command.command, "averages-2026-tree", "--out", tmp_path / "fit", "--no-figures")
+        assert fit.exit_code == 0, fit.output
+        result = run(chain_command.command, "summary", chain[0], "--against", tmp_path / "fit", *self.NAMES)
+        assert result.exit_code == 0, result.output
+        assert "profile 68.27 %" in result.stdout
+        assert "differs from the chain" not in result.stdout
+
+    def test_profile_of_one_quantity(self, chain, tmp_path):
+        grid = "wolfenstein_rhobar=0.08:0.25:41"
+        made = run(
+            profile_command.command, "averages-2026-tree", grid, "--out", tmp_path / "p", "--no-figures"
+        )
+        assert made.exit_code == 0, made.output
+        result = run(chain_command.command, "summary", chain[0], "--against", tmp_path / "p", *self.NAMES)
+        assert result.exit_code == 0, result.output
+        # Near the published-inputs value .1655 +206-196 of the tree-level fit.
+        lines = result.stdout.splitlines()
+        assert "[0.146, 0.186]" in next(line for line in lines if line.startswith("wolfenstein_rhobar"))
+        assert " - " in next(line for line in lines if line.startswith("wolfenstein_etabar"))
+
+    def test_profile_in_a_plane_is_drawn_over_the_posterior(self, chain, tmp_path):
+        grids = ("wolfenstein_rhobar=0.08:0.25:30", "wolfenstein_etabar=0.28:0.47:30")
+        made = run(
+            profile_command.command, "averages-2026-tree", *grids, "--out", tmp_path / "p", "--no-figures"
+        )
+        assert made.exit_code == 0, made.output
+        result = run(
+            chain_command.command, "summary", chain[0], "--against", tmp_path / "p", *self.NAMES,
+            "--out", tmp_path / "figures",
+        )  # fmt: skip
+        assert result.exit_code == 0, result.output
+        regions = {line.split(",")[0] for line in _data_rows(tmp_path / "figures" / "posterior-plane.csv")}
+        assert '"profile 68.27 %' in regions
+        assert "68.27 %" in regions
+        result = run(chain_command.command, "summary", chain[0], "--against", tmp_path / "p", *self.NAMES)
+        assert "give --out to draw it" in result.stdout
+
+    def test_other_problem_is_pointed_out(self, chain, tmp_path):
+        entry = json.loads(run(show_command.command, "averages-2026-tree", "--json", "-").stdout)["entries"][
+            0
+        ]
+        settings = ("--set", f"{entry['id']}.inflate=1.5")
+        fit = run(
+            fit_command.command, "averages-2026-tree", *settings, "--out", tmp_path / "f", "--no-figures"
+        )
+        assert fit.exit_code == 0, fit.output
+        result = run(chain_command.command, "summary", chain[0], "--against", tmp_path / "f", *self.NAMES)
+        assert "differs from the chain in its inputs" in result.stdout
+
+
+def _data_rows(path):
+    return path.read_text(encoding="utf-8").splitlines()[1:]
+
+
+def test_chain_summary_with_evidence(chain):
+    result = run(chain_command.command, "summary", chain[0], "--evidence", "--json", "-")
+    assert result.exit_code == 0, result.output
+    found = json.loads(result.stdout)["evidence"]
+    assert found["valid"]
+    assert found["error"] < 0.02
+    assert found["pareto_k"] < 0.7
+    shown = run(chain_command.command, "summary", chain[0], "--evidence").stdout
+    assert f"ln Z = {found['log_evidence']:.2f}"[:-1] in shown
+
+
+def test_derive_a_quantity_of_a_users_module(chain, tmp_path):
+    module = tmp_path / "my_ratio.py"
+    module.write_text(
+        "from observables.catalogue import Real, quantity\n\n\n"
+        '@quantity(unit="1", title="ratio of magnitudes", cp="even", source="invented")\n'
+        "def my_own_ratio(magnitude_V_ub, magnitude_V_cb) -> Real:\n"
+        "    return magnitude_V_ub / magnitude_V_cb\n"
+    )
+    copy = tmp_path / "copy.h5"
+    copy.write_bytes(chain[0].read_bytes())
+    result = run(chain_command.command, "derive", copy, "my_own_ratio")
+    assert result.exit_code == 2
+    result = run(chain_command.command, "derive", copy, "my_own_ratio", "magnitude_V_ub", "--module", module)
+    assert result.exit_code == 0, result.output
+    assert run(chain_command.command, "derive", copy, "magnitude_V_cb").exit_code == 0
+    with ChainFile.open(copy) as stored:
+        (block, *_) = stored.blocks(derived=("my_own_ratio", "magnitude_V_ub", "magnitude_V_cb"))
+    found = block.derived
+    np.testing.assert_allclose(found["my_own_ratio"], found["magnitude_V_ub"] / found["magnitude_V_cb"])
+    # Looking at what is stored needs no module.
+    shown = run(chain_command.command, "summary", copy, "--name", "my_own_ratio")
+    assert shown.exit_code == 0, shown.output
+    assert "my_own_ratio" in shown.stdout
 
 
 def test_chain_export(chain, tmp_path):

@@ -36,7 +36,7 @@ def test_profile_contours_lie_on_the_same_axes(chain):
     circle = np.stack([np.cos(np.linspace(0, 6.3, 50)), np.sin(np.linspace(0, 6.3, 50))], axis=1)
     drawing = posterior.plane(chain, "p0", "p1", profile=[("68.27 %, two parameters", [circle])])
     assert any(row[0] == "profile 68.27 %, two parameters" for row in drawing.rows)
-    assert any("red lines" in t.get_text() for t in drawing.figure.texts)
+    assert any("profile of the fit" in t.get_text() for t in drawing.figure.texts)
 
 
 def test_densities_show_credible_and_profile_intervals(chain):

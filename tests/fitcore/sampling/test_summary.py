@@ -116,11 +116,32 @@ class TestDensity:
         assert inside == pytest.approx(np.pi * stats.chi2(2).ppf(cl) * 0.6, rel=0.08)
         assert found.density.sum() * area == pytest.approx(1.0)
 
+    @pytest.mark.stat
+    @pytest.mark.parametrize("correlation", [0.0, 0.8, -0.99])
+    def test_regions_of_few_draws_are_not_too_large(self, correlation):
+        """True content of regions from 2,000 draws: smoothing must not blow them up."""
+        covariance = [[1.0, correlation], [correlation, 1.0]]
+        contents = []
+        for _ in range(8):
+            found = density_2d(*self.rng.multivariate_normal([0, 0], covariance, 2000).T)
+            points = np.stack(np.meshgrid(found.x, found.y), axis=-1)
+            true = stats.multivariate_normal([0, 0], covariance).pdf(points)
+            true /= true.sum()
+            contents.append([true[found.density >= found.level(cl)].sum() for cl in (0.6827, 0.9545)])
+        np.testing.assert_allclose(np.mean(contents, axis=0), [0.6827, 0.9545], atol=0.025)
+
+    def test_plane_at_an_edge_keeps_its_height(self):
+        x, y = self.rng.random(200_000), self.rng.standard_normal(200_000)
+        found = density_2d(x, y, bounds=((0.0, 1.0), (-np.inf, np.inf)))
+        middle = found.density[np.abs(found.y).argmin()]
+        np.testing.assert_allclose(middle, stats.norm.pdf(0.0), rtol=0.05)
+
 
 @pytest.mark.slow
 def test_two_gibibytes_are_summarised_and_drawn_in_less_than_one(tmp_path):
     script = """
 import resource, sys
+from pathlib import Path
 import numpy as np
 from emcee.state import State
 from fitcore.figures import posterior
@@ -136,7 +157,7 @@ def peak():
             return next(int(line.split()[1]) for line in status if line.startswith("VmHWM")) * 1024
     return resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * (1 if sys.platform == "darwin" else 1024)
 walkers, n = 256, 30
-path, folder = sys.argv[1:]
+path, folder = sys.argv[1], Path(sys.argv[2])
 header = ChainHeader(
     tuple(f"p{i}" for i in range(n)), tuple(np.repeat([0, 1, 2, 3], 64)), "f", parameter_units=("1",) * n
 )
@@ -162,8 +183,9 @@ print(*peaks)
     path = tmp_path / "long.h5"
     run = subprocess.run(
         [sys.executable, "-c", script, str(path), str(tmp_path)],
-        check=True, capture_output=True, text=True, cwd=Path(__file__).parents[3],
+        capture_output=True, text=True, cwd=Path(__file__).parents[3],
     )  # fmt: skip
+    assert run.returncode == 0, run.stderr
     written, summarised, drawn = (int(v) for v in run.stdout.split())
     print(f"peak MiB: written {written >> 20}, summarised {summarised >> 20}, drawn {drawn >> 20}")
     assert path.stat().st_size > 2**31
