@@ -23,11 +23,12 @@ import numpy as np
 import observables
 from fitcore.evaluation import ChiSquare
 from fitcore.free_parameters import FreeParameter, range_name, sort_leaves
+from fitcore.influence import influential
 from fitcore.minimise.derivatives import call_with_derivatives, seed, tangents_of
 from fitcore.minimise.normal_matrix import Linearisation
 from fitcore.priors import log_prior
 from fitcore.questions import Questions
-from likelihoods import Declared, Entry, Inputs, Terms, load_inputs, units
+from likelihoods import Declared, Entry, Inputs, ParameterSetting, Terms, load_inputs, units
 from likelihoods.ranges import apply_scheme
 from observables import Catalogue, Hypothesis
 from observables import catalogue as public_catalogue
@@ -91,22 +92,14 @@ class Problem(Questions):
         self.parameters, self.fixed = sort_leaves(
             self._leaves, self.entries, measured, inputs.parameters, scheme.bounds, self.ranges
         )
-        self.parameter_names = tuple(p.name for p in self.parameters)
-        self.n_parameters = len(self.parameters)
         self.n_entries = len(self.entries)
-
-        inputs_of_graph = tuple(p.name for p in self.parameters if not p.is_shift)
-        used = tuple(dict.fromkeys(entry.quantity for entry in self.entries))
-        self._graph = compile_graph(self._catalogue, used, inputs_of_graph, self.fixed, self._hypothesis)
-        position = {name: i for i, name in enumerate(self.parameter_names)}
         self.terms = _terms(inputs, self.entries)
-        self._chi_square = ChiSquare(
-            self._graph,
-            self.terms,
-            [used.index(entry.quantity) for entry in self.entries],
-            [position.get(range_name(e.id)) if e.id in self.ranges else None for e in self.entries],
-            self.n_parameters,
-        )
+        self._used = tuple(dict.fromkeys(entry.quantity for entry in self.entries))
+        #: Parameters that cancel in everything measured: no unknowns, and never used as if they were known.
+        self.idle: dict[str, float] = {}
+        self._compile()
+        self._check_functions()
+        self._leave_out_idle(measured)
         self._graphs: dict[tuple[str, ...], Graph] = {}
 
     @classmethod
@@ -141,6 +134,36 @@ class Problem(Questions):
         return cls(inputs, hypothesis, theory_errors=theory_errors)
 
     # -- set-up -------------------------------------------------------------------------------------------------
+
+    def _compile(self) -> None:
+        self.parameter_names = tuple(p.name for p in self.parameters)
+        self.n_parameters = len(self.parameters)
+        inputs_of_graph = tuple(p.name for p in self.parameters if not p.is_shift)
+        self._graph = compile_graph(
+            self._catalogue, self._used, inputs_of_graph, self.fixed | self.idle, self._hypothesis
+        )
+        position = {name: i for i, name in enumerate(self.parameter_names)}
+        self._chi_square = ChiSquare(
+            self._graph,
+            self.terms,
+            [self._used.index(entry.quantity) for entry in self.entries],
+            [position.get(range_name(e.id)) if e.id in self.ranges else None for e in self.entries],
+            self.n_parameters,
+        )
+
+    def _check_functions(self) -> None:
+        """Meet a user's faulty formula here, by its name, and not inside a minimiser."""
+        start = self.start[: len(self._graph.inputs), None]
+        self._graph.verify(list(np.repeat(start, 2, axis=1)))
+
+    def _leave_out_idle(self, measured: set[str]) -> None:
+        leaves = [p for p in self.parameters if not p.is_shift]
+        felt = influential(self._graph, leaves)
+        idle = [p for i, p in enumerate(leaves) if i not in felt and p.name not in measured]
+        if idle:
+            self.idle = {p.name: p.start for p in idle}
+            self.parameters = tuple(p for p in self.parameters if p.name not in self.idle)
+            self._compile()
 
     def _is_leaf(self, name: str) -> bool:
         if name in self._hypothesis.parameters:
@@ -277,22 +300,28 @@ class Problem(Questions):
         if names not in self._graphs:
             known = self._graph.inputs
             needed = find_parameters(self._catalogue, names, self._hypothesis)
-            default = {
-                n: leaf.start for n, leaf in needed.items() if isinstance(leaf, Parameter) and leaf.fixed
-            }
-            absent = [
+            held = {n: leaf.start for n, leaf in needed.items() if isinstance(leaf, Parameter) and leaf.fixed}
+            held |= self.fixed
+            absent = tuple(
                 n
                 for n, leaf in needed.items()
-                if leaf.kind == "parameter" and n not in known and n not in self.fixed and n not in default
-            ]
-            if absent:
-                raise InputError(
-                    f"{', '.join(names)}: nothing in {self.inputs.name} determines {', '.join(absent)}; "
-                    "add a measurement of it, or give it a value with [parameters.NAME] fixed = true"
-                )
-            self._graphs[names] = compile_graph(
-                self._catalogue, names, known, default | self.fixed, self._hypothesis
+                if leaf.kind == "parameter" and n not in known and n not in held
             )
+            if absent:
+                # What has no value here may still cancel in what is asked for.
+                leaves = [p for p in self.parameters if not p.is_shift] + [needed[n] for n in absent]
+                graph = compile_graph(self._catalogue, names, (*known, *absent), held, self._hypothesis)
+                felt = influential(graph, leaves)
+                missing = [n for i, n in enumerate(absent, len(known)) if i in felt]
+                if missing:
+                    raise InputError(
+                        f"{', '.join(names)}: nothing in {self.inputs.name} determines {', '.join(missing)}; "
+                        "add a measurement of it, or give it a value with [parameters.NAME] fixed = true"
+                    )
+                held |= {
+                    n: leaf.start for n, leaf in needed.items() if isinstance(leaf, Parameter) and n in absent
+                }
+            self._graphs[names] = compile_graph(self._catalogue, names, known, held, self._hypothesis)
         return self._graphs[names]
 
     def pseudo_data(
@@ -423,9 +452,24 @@ class Problem(Questions):
         """The problem with just these ids or groups."""
         return self.with_inputs(self.inputs.select(only=names))
 
-    def without(self, *names: str) -> Problem:
-        """The problem without these ids or groups."""
-        return self.with_inputs(self.inputs.select(without=names))
+    def without(self, *names: str, keep_free: bool = False) -> Problem:
+        """The problem without these ids or groups.
+
+        Parameters
+        ----------
+        *names : str
+        keep_free : bool
+            Parameters that vary here vary there too. Otherwise those that the catalogue holds unless measured (lifetimes,
+            radiative corrections) are held at their start once their entry is gone, which is information.
+        """
+        inputs = self.inputs.select(without=names)
+        if keep_free:
+            free = {p.name for p in self.parameters if not p.is_shift}
+            settings = dict(inputs.parameters)
+            for name in free:
+                settings[name] = replace(settings.get(name, ParameterSetting()), fixed=False)
+            inputs = replace(inputs, parameters=settings)
+        return self.with_inputs(inputs)
 
 
 def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:

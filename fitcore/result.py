@@ -55,6 +55,8 @@ class MeasurementRow:
     share : float
         Contribution to chi-square (for correlated entries u (R^-1 u), which may be negative).
     groups : tuple of str
+    source : str
+        Where the value is from.
     """
 
     id: str
@@ -69,6 +71,7 @@ class MeasurementRow:
     groups: tuple[str, ...] = ()
     fitted_error: float | None = None
     share: float = math.nan
+    source: str = ""
 
 
 @dataclass(frozen=True)
@@ -159,6 +162,7 @@ class FitResult:
                         "unit": row.unit,
                         "kind": row.kind,
                         "groups": row.groups,
+                        "source": row.source,
                     }
                     for row in self.measurements
                 ],
@@ -270,6 +274,7 @@ def _read_row(data: Mapping[str, Any]) -> MeasurementRow:
         unit=data["unit"],
         kind=data["kind"],
         groups=tuple(data["groups"]),
+        source=data.get("source", ""),
     )
 
 

@@ -153,8 +153,8 @@ class Entry:
 
     @property
     def names(self) -> frozenset[str]:
-        """Every word that selects this entry: its id, its block and its groups."""
-        return frozenset((self.id, *self.groups, *((self.block,) if self.block else ())))
+        """Every word that selects this entry: its id, its block, its groups and its kind."""
+        return frozenset((self.id, self.kind, *self.groups, *((self.block,) if self.block else ())))
 
     def restated(self, declared: Declared, inflate: float | None = None) -> Entry:
         """Give the same entry with other numbers.

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import math
 import re
 import tomllib
 from collections.abc import Iterable
@@ -20,6 +21,10 @@ if TYPE_CHECKING:
 
 _KEYS = ("value", "error", "errors.SOURCE", "flat_halfwidth", "inflate")
 _PARAMETER_KEYS = ("start", "lower", "upper", "fixed")
+#: A number that changes by more than this is pointed out: it may be in another unit than meant.
+SUSPICIOUS_FACTOR = 10.0
+_PAIR = re.compile(r"(\[.*\])\s*([^\s\]].*)?")
+_LIKE_A_PAIR = re.compile(r"\(?\s*[-+]?[\d.]+(?:[eE][-+]?\d+)?\s*(?:[,/:;]|\s(?=[-+])|(?=[-+]))\s*[-+]?[\d.]+(?:[eE][-+]?\d+)?\s*\)?")
 _WITH_UNIT = re.compile(r"([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)")
 
 
@@ -73,7 +78,7 @@ def _change_entry(inputs: Inputs, setting: str, target: str, written: str) -> In
     changed = entry.restated(declared)
     if key == "inflate":
         changed = replace(changed, inflate_group=None)
-    notice = Notice("changed", entry.id, f"{key} set to {written}")
+    notice = Notice("changed", entry.id, _what_changed(inputs, entry, declared, key))
     return replace(
         inputs,
         entries=tuple(changed if other is entry else other for other in inputs.entries),
@@ -122,6 +127,53 @@ def _changed_numbers(entry: Entry, setting: str, key: str, written: str) -> Decl
     raise InputError(f'setting "{setting}": unknown key "{key}"; use one of {", ".join(_KEYS)}')
 
 
+def _what_changed(inputs: Inputs, entry: Entry, new: Declared, key: str) -> str:
+    """Say what a setting did: old -> new in the unit of the file, lost named sources, a suspicious size."""
+    old, unit = entry.declared, "" if key == "inflate" or entry.declared.unit == "1" else entry.declared.unit
+    pairs = [_numbers_of(old, key), _numbers_of(new, key)]
+    shown = " -> ".join(_written(numbers) for numbers in pairs)
+    parts = [f"{key} {shown}" + (f" (in units of {unit})" if unit[:1].isdigit() else f" {unit}" if unit else "")]
+    if key == "error" and old.errors:
+        lost = [name for name in entry.shared_errors if _is_shared(inputs, entry, name)]
+        parts.append(f"replaces the named errors {', '.join(old.errors)}")
+        if lost:
+            parts.append(f"NO LONGER SHARES {', '.join(lost)} with other entries")
+    factors = [abs(b / a) for a, b in zip(*pairs, strict=True) if a and b]
+    strange = [f for f in factors if not 1.0 / SUSPICIOUS_FACTOR <= f <= SUSPICIOUS_FACTOR]
+    if strange:
+        size = float(f"{max(strange[0], 1 / strange[0]):.2g}")
+        much = f"{size:,.0f} times {'larger' if strange[0] > 1 else 'smaller'}"
+        hint = f'; a number alone is in the unit of the file, "{old.unit}"' if key != "inflate" else ""
+        other = "deg" if old.unit == "rad" else "1"
+        hint += f'; write another behind it, such as "{key}=NUMBER {other}"' if _is_scaled(old.unit) and hint else ""
+        parts.append(f"CAUTION: {much} than before{hint}")
+    return "; ".join(parts)
+
+
+def _is_scaled(unit: str) -> bool:
+    """Whether a unit is a pure number other than 1, which is easily forgotten."""
+    return unit in ("%", "percent") or (unit != "1" and _is_number(unit))
+
+
+def _is_shared(inputs: Inputs, entry: Entry, source: str) -> bool:
+    return any(source in other.shared_errors for other in inputs.entries if other is not entry)
+
+
+def _numbers_of(declared: Declared, key: str) -> tuple[float, float]:
+    """The number that a key stands for, twice, or the upward and downward error."""
+    if key == "error":
+        both = declared.error
+        return (math.hypot(*declared.errors.values()),) * 2 if both is None else both
+    source = key.removeprefix("errors.")
+    number = declared.errors[source] if key != source else getattr(declared, key)
+    return (float(number),) * 2
+
+
+def _written(numbers: tuple[float, float]) -> str:
+    plus, minus = numbers
+    return f"{plus:.6g}" if plus == minus else f"[{plus:.6g}, {minus:.6g}]"
+
+
 def _change_parameter(
     inputs: Inputs, setting: str, target: str, written: str, catalogue: CatalogueLike | None
 ) -> Inputs:
@@ -153,8 +205,17 @@ def _change_parameter(
         )
     if changed.lower is not None and changed.upper is not None and changed.lower >= changed.upper:
         raise InputError(f'setting "{setting}": lower must be below upper')
-    notice = Notice("changed", name, f"{key} set to {written}")
+    before = getattr(inputs.parameters.get(name, ParameterSetting()), key)
+    if before is None:
+        before = getattr(node, "value" if node.kind == "constant" and key == "start" else key, None)
+    notice = Notice("changed", name, _parameter_changed(key, before, value, node.unit))
     return replace(inputs, parameters=inputs.parameters | {name: changed}, history=(*inputs.history, notice))
+
+
+def _parameter_changed(key: str, old: Any, new: Any, unit: str) -> str:
+    old, new = (f"{x:.6g}" if isinstance(x, float) else str(x).lower() for x in (old, new))
+    unit = "" if key == "fixed" or unit == "1" else f" {unit}"
+    return f"{key} set to {new}{unit}" if old == "none" else f"{key} {old} -> {new}{unit}"
 
 
 def _number(setting: str, written: str, unit: str) -> float:
@@ -182,18 +243,24 @@ def _is_number(text: str) -> bool:
 
 
 def _error(setting: str, written: str, unit: str) -> tuple[float, float]:
-    if not written.startswith("["):
-        single = _positive(setting, _number(setting, written, unit))
-        return single, single
-    try:
-        pair = tomllib.loads(f"pair = {written}")["pair"]
-    except tomllib.TOMLDecodeError:
-        raise InputError(f'setting "{setting}": write error=NUMBER or error=[PLUS, MINUS]') from None
-    numbers = [real(item) for item in pair]
-    if len(numbers) != 2 or any(isinstance(number, str) for number in numbers):
-        raise InputError(f'setting "{setting}": write error=[PLUS, MINUS], not {describe(pair)}')
-    plus, minus = (_positive(setting, number) for number in numbers if isinstance(number, float))
-    return plus, minus
+    """Read one error, or ``[PLUS, MINUS]``, either with a unit behind it."""
+    how = "write error=NUMBER or error=[PLUS, MINUS], both positive, with or without a unit behind"
+    if written.startswith("["):
+        found = _PAIR.fullmatch(written)
+        try:
+            pair = tomllib.loads(f"pair = {found[1] if found else written}")["pair"]
+        except tomllib.TOMLDecodeError:
+            raise InputError(f'setting "{setting}": {how}') from None
+        numbers = [real(item) for item in pair]
+        if len(numbers) != 2 or any(isinstance(number, str) for number in numbers):
+            raise InputError(f'setting "{setting}": write error=[PLUS, MINUS], not {describe(pair)}')
+        own_unit = (found[2] if found else None) or unit
+        plus, minus = (_positive(setting, _number(setting, f"{number!r} {own_unit}", unit)) for number in numbers)
+        return plus, minus
+    if _LIKE_A_PAIR.fullmatch(written):
+        raise InputError(f'setting "{setting}": "{written}" is not one number; {how}')
+    single = _positive(setting, _number(setting, written, unit))
+    return single, single
 
 
 def _positive(setting: str, number: float) -> float:

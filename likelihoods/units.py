@@ -52,6 +52,11 @@ _COMMON: dict[str, tuple[str, float, int]] = {
     "mrad": ("angle", 1.0, -3),
     "deg": ("angle", math.pi / 180.0, 0),
 }
+#: CODATA 2022, exact in the revised SI: hbar = 6.582119569e-25 GeV s.
+HBAR_HINT = (
+    ": one is an energy, the other a rate; divide the energy by hbar = 6.582119569e-13 GeV ps and write the "
+    'unit "1/ps" ("hbar/ps" means the same)'
+)
 # Powers are kept small and unchained, so that no string can make the parser compute for minutes.
 _POWER = re.compile(r"\*\*|\^")
 _TAME_POWER = re.compile(r"(?:[A-Za-z]|(?<![\d.])10)\s*(?:\*\*|\^)\s*[-+]?\d{1,2}(?![\d.]|\s*(?:\*\*|\^))")
@@ -123,12 +128,15 @@ def factor(unit: str, target: str) -> float:
     if unit in _COMMON and target in _COMMON:
         (dimension, mantissa, power), (wanted, target_mantissa, target_power) = _COMMON[unit], _COMMON[target]
         if dimension != wanted:
-            raise UnitError(f'unit "{unit}" cannot be converted to "{target}"')
+            hint = HBAR_HINT if {dimension, wanted} == {"energy", "1/time"} else ""
+            raise UnitError(f'unit "{unit}" cannot be converted to "{target}"{hint}')
         return mantissa / target_mantissa * float(f"1e{power - target_power}")
     scale, target_scale = _scale(unit), _scale(target)
     if scale is not None and target_scale is not None:
         return scale / target_scale
     have, want = _parse(unit), _parse(target)
     if have.dimensionality != want.dimensionality:
-        raise UnitError(f'unit "{unit}" cannot be converted to "{target}"')
+        kinds = {str(have.dimensionality), str(want.dimensionality)}
+        hint = HBAR_HINT if kinds == {"[energy]", "1 / [time]"} else ""
+        raise UnitError(f'unit "{unit}" cannot be converted to "{target}"{hint}')
     return float(have.magnitude) / float(want.magnitude)

@@ -53,6 +53,7 @@ class Graph:
     supports: dict[str, tuple[int, ...]]
     _folded: tuple[tuple[int, Any], ...]
     _steps: tuple[tuple[Callable[..., Any], tuple[int, ...], int, tuple[int, ...]], ...]
+    _step_names: tuple[tuple[str, bool], ...]
     _target_slots: tuple[int, ...]
     _n_slots: int
 
@@ -83,6 +84,41 @@ class Graph:
                 for source in spent:  # lets a long batch run in the memory of its widest layer
                     slots[source] = None
         return [slots[slot] for slot in self._target_slots]
+
+    def verify(self, leaves: list[Any]) -> None:
+        """Run every formula once and name the one that fails or returns what it did not declare.
+
+        Parameters
+        ----------
+        leaves : list
+            As for `evaluate`; batches of at least two points.
+
+        Raises
+        ------
+        CatalogueError
+            A formula that raises, or that declares ``-> Real`` and returns complex numbers.
+        """
+        steps = iter(self._step_names)
+
+        def call(function: Callable[..., Any], arguments: list[Any]) -> Any:
+            name, is_complex = next(steps)
+            code = getattr(function, "__code__", None)
+            place = f"{code.co_filename}:{code.co_firstlineno}: " if code is not None else ""
+            try:
+                result = function(*arguments)
+            except Exception as error:
+                raise CatalogueError(
+                    f"{place}the formula of {name!r} fails on arrays: {type(error).__name__}: {error}; use NumPy's "
+                    "functions (np.sin, not math.sin) and np.where instead of if"
+                ) from error
+            if np.iscomplexobj(result) and not is_complex:
+                raise CatalogueError(
+                    f"{place}{name!r} declares '-> Real' but returns complex numbers; declare '-> Complex', or take "
+                    "the real part, magnitude or phase"
+                )
+            return result
+
+        self.evaluate(leaves, call)
 
 
 def find_parameters(
@@ -182,6 +218,7 @@ def compile_graph(
         supports={name: supports.get(name, ()) for name in targets},
         _folded=tuple((slot[name], value) for name, value in values.items()),
         _steps=steps,
+        _step_names=tuple((name, rules[name].is_complex) for name in varying),
         _target_slots=tuple(slot[name] for name in targets),
         _n_slots=len(slot),
     )
@@ -210,6 +247,7 @@ def compute(
     graph = compile_graph(catalogue, names, tuple(given), fixed, hypothesis)
     arrays = [np.asarray(v) for v in given.values()]
     arrays = [a.astype(complex if np.iscomplexobj(a) else float)[()] for a in arrays]
+    graph.verify([np.atleast_1d(array) for array in arrays])
     results = graph.evaluate(arrays)
     shape = np.broadcast_shapes(*(np.shape(a) for a in arrays))
     return {

@@ -238,8 +238,12 @@ def test_a_foreign_observables_written_over_ours_is_named(tmp_path):
 def test_a_missing_observables_is_named(tmp_path):
     for package in ("fitcore", "likelihoods"):
         shutil.copytree(ROOT / package, tmp_path / package, ignore=shutil.ignore_patterns("__pycache__"))
-    code = f"import sys\nsys.path = [p for p in sys.path if p != {str(ROOT)!r}]\nsys.meta_path = " \
-           "[f for f in sys.meta_path if 'editable' not in repr(f).lower()]\nimport fitcore"  # fmt: skip
+    code = (
+        "import os, sys\n"
+        "sys.path = [p for p in sys.path if not os.path.isdir(os.path.join(p, 'observables'))]\n"
+        "sys.meta_path = [f for f in sys.meta_path if 'editable' not in repr(f).lower()]\n"
+        "import fitcore"
+    )
     done = python(code, tmp_path, cwd=tmp_path)
     assert "the package 'observables' of weakmix is missing" in done.stderr.strip().splitlines()[-1]
 

@@ -127,7 +127,7 @@ def print_fit(output: Output, problem: Problem, result: FitResult, place: Path |
     others = tables.other_minima(result)
     if others is not None:
         output.show(others)
-    output.show(tables.CAUTION)
+    output.show(tables.caution(result))
     if place is not None:
         output.show(f"\nWritten to {place}")
 
@@ -197,6 +197,6 @@ def write_run(run: RunFolder, problem: Problem, result: FitResult, *, figures: b
         footer = f"{problem.inputs.name} revision {problem.inputs.revision} - {result.inputs_sha256[:8]}"
         latex = {row.quantity: problem.latex_of(row.quantity) for row in result.measurements}
         run.write_figure("measured-against-fitted", dumbbell.draw(result, latex=latex, footer=footer))
-        if len(result.correlation_names) > 1:
+        if len(correlation.defined(result)) > 1:
             latex = {name: problem.latex_of(name) for name in result.correlation_names}
             run.write_figure("correlation", correlation.draw(result, latex=latex, footer=footer))

@@ -89,7 +89,7 @@ def _profile(content: Mapping[str, Any]) -> Comparison:
     from fitcore.result import Estimate
 
     names = tuple(content["names"])
-    origin = {
+    origin: dict[str, Any] = {
         "inputs_sha256": str(content["inputs"]["sha256"]),
         "hypothesis": str(content["hypothesis"]),
         "theory_errors": str(content["theory_errors"]),

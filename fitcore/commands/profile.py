@@ -59,18 +59,18 @@ def command(
     """
     from dataclasses import replace
 
-    from fitcore.commands import run_folder, scan
+    from fitcore.commands import run_folder, scan, scan_axes, scan_report
     from fitcore.commands.fit import announce
     from fitcore.commands.progress_bar import progress_bar
 
-    axes = scan.parse_axes(names)
+    axes = scan_axes.parse_axes(names)
     if each and len(axes) != 2:
         raise input_error("--each draws bands in a plane: give two names")
     if compare_theory_errors and (len(axes) != 1 or request.theory_errors != "as-given"):
         raise input_error("--compare-theory-errors takes one name, and no --theory-errors beside it")
-    scan.check_levels(levels, len(axes))
+    scan_axes.check_levels(levels, len(axes))
     problem = request.load()
-    scan.check_names(problem, axes)
+    scan_axes.check_names(problem, axes)
     announce(output, "profile", problem)
     others = {}
     if compare_theory_errors:
@@ -99,7 +99,7 @@ def command(
             "profile", problem.inputs.name, out=output.out, options=options, seed=work.seed
         ) as run:
             found = work_through()
-            run.write_json("result.json", scan.to_dict(found))
+            run.write_json("result.json", scan_report.to_dict(found))
             run.write_inputs(problem.inputs.name, problem.inputs.resolved_toml())
             run.log("profiled", minimum=found.profile.minimum, flagged=int(found.profile.flagged.sum()))
             if not no_figures:
@@ -111,8 +111,8 @@ def command(
     _print(output, found)
     if place is not None:
         output.show(f"\nWritten to {place}")
-    output.write_json(scan.to_dict(found))
-    problems = scan.shortcomings(found)
+    output.write_json(scan_report.to_dict(found))
+    problems = scan_report.shortcomings(found)
     if problems:
         click.echo(f"weakmix: {'; '.join(problems)}", err=True)
         ctx.exit(EXIT_FELL_SHORT)
@@ -121,7 +121,7 @@ def command(
 def _print(output: Output, found: Scan) -> None:
     from rich.text import Text
 
-    from fitcore.commands import scan, scan_tables
+    from fitcore.commands import scan_report, scan_tables
 
     profile = found.profile
     if profile.better_minimum is not None:
@@ -130,7 +130,7 @@ def _print(output: Output, found: Scan) -> None:
     line = f"lowest chi-square {profile.minimum:.3f} at " + ", ".join(
         f"{name} = {scan_tables.number(value)}" for name, value in zip(profile.names, found.best, strict=True)
     )
-    output.show(Text(line), *(Text(f"  {note}", style="yellow") for note in scan.notes(found)), "")
+    output.show(Text(line), *(Text(f"  {note}", style="yellow") for note in scan_report.notes(found)), "")
     output.show(*scan_tables.regions(found))
     words: dict[str, Any] = {"quantity": "one quantity", "dof": 1} if len(profile.names) == 1 else {}
     output.show(scan_tables.caution(len(profile.names)) if words or len(profile.names) == 2 else "")

@@ -69,7 +69,7 @@ def _one(scan: Scan) -> style.Drawing:
 
 
 def _plane(scan: Scan) -> style.Drawing:
-    from fitcore.commands.scan import same_scale
+    from fitcore.commands.scan_axes import same_scale
     from fitcore.figures.plane import Band, PlaneAxis, draw
 
     problem, found = scan.problem, scan.profile

@@ -66,7 +66,7 @@ def _ends(low_open: bool, high_open: bool) -> str:
 
 
 def _plane(scan: Scan) -> Table:
-    from fitcore.commands.scan import region_minimum
+    from fitcore.commands.scan_report import region_minimum
 
     first, second = scan.profile.names
     made = tables.table(

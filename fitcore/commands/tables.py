@@ -12,7 +12,14 @@ from rich import box
 from rich.table import Table
 from rich.text import Text
 
-from fitcore.commands.rounding import interval, number, with_error
+from fitcore.commands.rounding import (
+    interval,
+    like_error,
+    number,
+    shared_power,
+    significant,
+    with_error,
+)
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -26,14 +33,6 @@ NOTICE_ORDER = ("replaced", "dropped", "changed", "inflated", "shared", "recalle
 SHORTEST_NAME = 14
 #: Text columns are not squeezed below this where a spare column can go instead.
 READABLE = 24
-
-CAUTION = (
-    "Intervals are those of chi-square differences of 1.000 (68.27 %) and 3.841 (95.0 %) for one quantity at "
-    "a time: they hold as far as such differences follow their large-sample distribution (Wilks' theorem), "
-    "every error is Gaussian as written, and correlations that the inputs do not state are absent. 'linear' "
-    "intervals are propagated from the covariance matrix, 'profile' ones are not."
-)
-
 
 class HouseTable(Table):
     """A table that gives up its least columns, then folds names, before it breaks a number.
@@ -224,22 +223,56 @@ def p_value(value: float | None) -> str:
     """Write a p-value, or why there is none."""
     if value is None:
         return "no p-value (calibrate it: flat ranges, limits or no degree of freedom left)"
-    return f"p-value {value:.2g}" if value >= 1e-4 else f"p-value {value:.1e}"
+    return f"p-value {significant(value)}"
+
+
+def caution(result: FitResult) -> str:
+    """Say what the intervals of a fit assume; flat ranges change it."""
+    if any(one.method == "range" for one in result.parameters.values()):
+        errors = (
+            "flat theory errors are ranges inside which no value is preferred and outside which none is allowed, "
+            "every other error is Gaussian as written"
+        )
+        more = " Under flat ranges neither a p-value nor a covariance matrix describes the fit."
+    else:
+        errors, more = "every error is Gaussian as written", ""
+    return (
+        "Intervals are those of chi-square differences of 1.000 (68.27 %) and 3.841 (95.0 %) for one quantity at "
+        "a time: they hold as far as such differences follow their large-sample distribution (Wilks' theorem), "
+        f"{errors}, and correlations that the inputs do not state are absent. 'linear' "
+        f"intervals are propagated from the covariance matrix, 'profile' ones are not.{more}"
+    )
 
 
 def estimate(one: Estimate) -> str:
-    """Write an estimate with its 68 % errors."""
-    if one.interval_68 is not None and None not in one.interval_68:
-        low, high = (float(end) for end in one.interval_68)
-        plus, minus = high - one.value, one.value - low
-        if plus >= 0 and minus >= 0 and math.isfinite(plus + minus):
-            return with_error(one.value, plus, minus)
+    """Write an estimate with its 68 % errors, or the range that a flat theory error allows."""
+    if one.method == "range" and one.interval_68 is not None:
+        return f"range {interval(*one.interval_68)}"
+    sides = _sides(one)
+    if sides is not None:
+        return with_error(one.value, *sides, power=_power(one))
     if one.error is not None:
         return with_error(one.value, one.error)
     bounded = one.interval_68 is not None and any(
         end is not None and math.isfinite(end) for end in one.interval_68
     )
     return f"{number(one.value)} ({'open on one side' if bounded else 'unconstrained'})"
+
+
+def _sides(one: Estimate) -> tuple[float, float] | None:
+    """Upward and downward 68 % errors, if both ends exist and hold the value."""
+    if one.interval_68 is None or None in one.interval_68:
+        return None
+    low, high = (float(end) for end in one.interval_68)
+    plus, minus = high - one.value, one.value - low
+    return (plus, minus) if plus >= 0 and minus >= 0 and math.isfinite(plus + minus) else None
+
+
+def _power(one: Estimate) -> int:
+    """Power of ten of the whole row: value and interval ends share it."""
+    sides = _sides(one) or ((one.error, one.error) if one.error is not None else ())
+    positive = [side for side in sides if side is not None and side > 0]
+    return shared_power(one.value, *positive, error=min(positive, default=None))
 
 
 def estimates(title: str, rows: Mapping[str, Estimate]) -> Table:
@@ -257,8 +290,7 @@ def estimates(title: str, rows: Mapping[str, Estimate]) -> Table:
         made.add_row(
             name,
             estimate(one),
-            _interval(one.interval_68, one),
-            _interval(one.interval_95, one),
+            *("-" if one.method == "range" else _interval(ends, one) for ends in (one.interval_68, one.interval_95)),
             shown_unit(one.unit),
             one.method if one.interval_68 is not None else "-",
         )
@@ -273,7 +305,7 @@ def _interval(ends: Sequence[float | None] | None, one: Estimate) -> str:
         low, high = (float(end) for end in one.interval_68)
         sides = [side for side in (high - one.value, one.value - low) if math.isfinite(side) and side > 0]
         error = min(sides, default=error)
-    return interval(ends[0], ends[1], error)
+    return interval(ends[0], ends[1], error, _power(one) if error else None)
 
 
 def measurements(rows: Sequence[MeasurementRow]) -> Table:
@@ -288,10 +320,14 @@ def measurements(rows: Sequence[MeasurementRow]) -> Table:
         caption="pull = (measured - fitted) / measured error",
     )
     for row in by_pull(rows):
+        power = shared_power(
+            *(row.measured, row.fitted, row.error_plus, row.error_minus),
+            error=min(row.error_plus, row.error_minus, row.fitted_error or math.inf),
+        )
         made.add_row(
             row.id,
-            with_error(row.measured, row.error_plus, row.error_minus),
-            fitted_value(row),
+            with_error(row.measured, row.error_plus, row.error_minus, power=power),
+            fitted_value(row, power),
             shown_unit(row.unit),
             pull(row.pull),
         )
@@ -305,14 +341,11 @@ def by_pull(rows: Sequence[MeasurementRow]) -> list[MeasurementRow]:
     )
 
 
-def fitted_value(row: MeasurementRow) -> str:
-    """Write a fitted value with as many decimals as the measurement has, or its own error if known."""
+def fitted_value(row: MeasurementRow, power: int | None = None) -> str:
+    """Write a fitted value with its own error if known, else with as many decimals as the measurement has."""
     if row.fitted_error:
-        return with_error(row.fitted, row.fitted_error)
-    text = with_error(row.fitted, row.error_plus, row.error_minus)
-    if text.startswith("("):
-        return text[1:].split(" ")[0] + text[text.rindex(")") + 1 :]
-    return text.split(" ")[0]
+        return with_error(row.fitted, row.fitted_error, power=power)
+    return like_error(row.fitted, min(row.error_plus, row.error_minus), power)
 
 
 def pull(value: float | None) -> Text:

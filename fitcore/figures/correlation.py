@@ -7,7 +7,8 @@ other triangle has the numbers.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from fitcore.figures import style
@@ -25,15 +26,36 @@ WORTH_A_NUMBER = 0.05
 WORTH_A_BAR = 0.02
 
 
-def chosen(matrix: tuple[tuple[float, ...], ...], most: int = MOST) -> list[int]:
-    """Return the positions to draw, in order: all, or those with the largest coefficients."""
-    size = len(matrix)
-    if size <= most:
-        return list(range(size))
-    largest = [
-        max((abs(matrix[i][j] or 0.0) for j in range(size) if j != i), default=0.0) for i in range(size)
+def defined(result: FitResult) -> list[int]:
+    """Return the positions of the parameters that have a coefficient with another one.
+
+    Flat ranges and unconstrained parameters have none.
+    """
+    matrix = result.correlation_matrix
+    free = [
+        i
+        for i, name in enumerate(result.correlation_names)
+        if (one := result.parameters.get(name)) is None
+        or (one.method != "range" and (one.error is not None or one.interval_68 is not None))
     ]
-    return sorted(sorted(range(size), key=lambda i: -largest[i])[:most])
+    return [i for i in free if any(_known(matrix[i][j]) for j in free if j != i)]
+
+
+def _known(value: float | None) -> bool:
+    return value is not None and math.isfinite(value)
+
+
+def chosen(
+    matrix: tuple[tuple[float, ...], ...], most: int = MOST, among: Sequence[int] | None = None
+) -> list[int]:
+    """Return the positions to draw, in order: all, or those with the largest coefficients."""
+    pool = list(range(len(matrix)) if among is None else among)
+    if len(pool) <= most:
+        return pool
+    largest = {
+        i: max((abs(matrix[i][j]) for j in pool if j != i and _known(matrix[i][j])), default=0.0) for i in pool
+    }
+    return sorted(sorted(pool, key=lambda i: -largest[i])[:most])
 
 
 def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: str = "") -> style.Drawing:
@@ -42,7 +64,8 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
     Parameters
     ----------
     result : FitResult
-        Its `correlation_names` and `correlation_matrix` are drawn; undefined coefficients stay empty.
+        Its `correlation_names` and `correlation_matrix` are drawn. Undefined coefficients stay empty;
+        parameters without any (flat ranges, unconstrained ones) are left out.
     latex : mapping, optional
         Parameter -> latex symbol.
     footer : str
@@ -56,7 +79,8 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
 
     latex = latex or {}
     names, matrix = result.correlation_names, result.correlation_matrix
-    shown = chosen(matrix)
+    pool = defined(result)
+    shown = chosen(matrix, among=pool)
     n = len(shown)
     side = n * CELL
     left, right, top, bottom = 3.0, 0.3, 1.0, 0.42
@@ -83,7 +107,7 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
             style.draw_symbol(axes, diagonal, middle, symbol, "", size=7.5, room=CELL - 0.04, align=0.5)
             for column, j in enumerate(shown):
                 value = matrix[i][j]
-                if column == row or value is None or value != value:
+                if column == row or not _known(value):
                     continue
                 x = column * CELL + CELL / 2
                 if column > row:
@@ -123,12 +147,14 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
         )
         axes.text(x + 2.09, key, "negative, from the right", fontsize=7.5, va="center")
         axes.text(x + 3.5, key, "full cell 100 %; numbers in %", fontsize=7.5, va="center")
-        note = "" if n == len(names) else f"  -  the {n} most correlated of {len(names)} parameters"
+        note = "" if n == len(pool) else f"  -  the {n} most correlated of {len(pool)} parameters"
+        if len(pool) < len(names):
+            note += f"  -  {len(names) - len(pool)} without correlations (flat ranges or unconstrained) left out"
         style.footer(figure, footer + note, left=0.16 / width, baseline=0.14 / height)
     rows = tuple(
         (names[i], names[j], matrix[i][j])
         for i in range(len(names))
         for j in range(i)
-        if matrix[i][j] is not None
+        if _known(matrix[i][j])
     )
     return style.Drawing(figure, ("parameter", "with", "correlation"), rows)

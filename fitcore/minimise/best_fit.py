@@ -19,6 +19,7 @@ from fitcore.minimise.description import (
     estimates,
     goodness,
     identity,
+    known_covariance,
     measurement_rows,
     named,
     tuples,
@@ -162,6 +163,7 @@ def _fit_once(
             "several-minima",
             "another minimum lies within Delta chi2 = 3.84: intervals belong to the best one only",
         )
+    known = known_covariance(problem, curvature)
     return FitResult(
         valid=bool(ok),
         flags=tuple(notes.flags),
@@ -174,8 +176,8 @@ def _fit_once(
         measurements=measurement_rows(problem, theta, curvature.covariance),
         parameter_names=problem.parameter_names,
         correlation_names=problem.parameter_names,
-        correlation_matrix=tuples(correlation(curvature.covariance)),
-        covariance_matrix=tuples(curvature.covariance),
+        correlation_matrix=tuples(correlation(known)),
+        covariance_matrix=tuples(known),
         other_minima=others,
         n_calls=notes.calls,
     )
@@ -240,15 +242,23 @@ def _migrad(problem: Any, best: Minimum, minima: Sequence[Minimum], notes: Notes
                 break
         return engine
 
+    # Last resort where MIGRAD falls into another valley on its way: two steps from the minimum in every direction.
+    aside = best.theta + 2.0 * scales * np.where(np.arange(len(scales)) % 2, -1.0, 1.0)
+    aside = np.clip(aside, [p.lower for p in problem.parameters], [p.upper for p in problem.parameters])
     tried: list[np.ndarray] = []
-    for start in (problem.start, best.start):
+    engine: Minuit | None = None
+    for start in (problem.start, best.start, aside):
         if any(np.array_equal(start, other) for other in tried) or not math.isfinite(problem.chi2(start)):
             continue
         tried.append(start)
-        engine = attempt(start)
-        theta = start + np.array(engine.values) * scales
+        latest = attempt(start)
+        if engine is None or latest.fval < engine.fval:
+            engine, theta = latest, start + np.array(latest.values) * scales
         if engine.fval < best.chi2 + 1e-3:
             break
+    if engine is None:
+        notes.add("migrad-not-converged", "MIGRAD has no possible point to start from")
+        return best.theta, False
     notes.calls |= calls
     # MIGRAD's own criterion is far below what matters; next to a bound it cannot be met.
     ok = bool(engine.valid or engine.fmin.edm < NEAR_ENOUGH)
@@ -292,7 +302,7 @@ def _trust_region(
 def _twin(problem: Any, theta: np.ndarray, minima: Sequence[Minimum]) -> Minimum:
     """The minimum of the search to compare with: of several equally low ones (mirror images) the nearest."""
     scales = np.array([p.scale for p in problem.parameters])
-    lowest = [m for m in minima if m.chi2 < minima[0].chi2 + 1e-4]
+    lowest = [m for m in minima if m.chi2 <= minima[0].chi2 + 1e-4]
     return min(lowest, key=lambda m: float(np.sum((_difference(problem, theta, m.theta) / scales) ** 2)))
 
 

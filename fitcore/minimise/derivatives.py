@@ -22,6 +22,9 @@ __all__ = ["Dual", "UnsupportedOperationError", "call_with_derivatives", "seed",
 
 Support = tuple[int, ...]
 
+#: Two terms that cancel to less than this share of their size have cancelled.
+NOISE = 32 * np.finfo(float).eps
+
 
 class UnsupportedOperationError(TypeError):
     """An operation that has no derivative rule here."""
@@ -290,8 +293,20 @@ def _absolute(x: Dual) -> Dual:
     if np.iscomplexobj(x.value):
         # d|z| = Re(z* dz)/|z|; at z = 0 there is no slope and nan says so.
         phase = x.value / value
-        return Dual(value, x.support, phase.real * x.tangents.real + phase.imag * np.imag(x.tangents))
+        return Dual(
+            value, x.support, _remainder(phase.real * x.tangents.real, phase.imag * np.imag(x.tangents))
+        )
     return Dual(value, x.support, np.sign(x.value) * x.tangents)
+
+
+def _remainder(a: Any, b: Any) -> Any:
+    """a + b, and zero where the two cancel to rounding.
+
+    A real factor of z does not turn it, a phase does not stretch it: what rounding leaves of such a derivative would be
+    taken for information.
+    """
+    total = a + b
+    return np.where(np.abs(total) <= NOISE * (np.abs(a) + np.abs(b)), 0.0, total)
 
 
 def _times(slope: Any, tangents: Any, out: Any = None) -> Any:
@@ -415,7 +430,7 @@ def _angle(z: Dual, deg: bool = False) -> Dual:
     value = np.angle(z.value, deg=deg)
     square = z.value.real**2 + np.imag(z.value) ** 2
     if np.iscomplexobj(z.value):
-        slope = (z.value.real * z.tangents.imag - z.value.imag * z.tangents.real) / square
+        slope = _remainder(z.value.real * z.tangents.imag, -z.value.imag * z.tangents.real) / square
     else:
         slope = np.zeros(np.shape(z.tangents))
     return Dual(value, z.support, np.rad2deg(slope) if deg else slope)

@@ -18,6 +18,7 @@ __all__ = [
     "estimates",
     "goodness",
     "identity",
+    "known_covariance",
     "measurement_rows",
     "named",
     "tuples",
@@ -87,6 +88,12 @@ def estimates(
 
     parameters = {}
     for i, parameter in enumerate(problem.parameters):
+        if parameter.is_range:  # what is allowed, not what is likely
+            bounds = (float(parameter.lower), float(parameter.upper))
+            parameters[parameter.name] = Estimate(
+                float(theta[i]), None, bounds, bounds, "range", parameter.unit
+            )
+            continue
         loose = bool(curvature.unconstrained[i])
         error = None if loose or at_bound[i] or sigma[i] == 0 else float(sigma[i])
         parameters[parameter.name] = _estimate(
@@ -181,16 +188,24 @@ def identity(problem: Any) -> dict[str, Any]:
     }
 
 
+def known_covariance(problem: Any, curvature: Curvature) -> np.ndarray:
+    """The covariance matrix as far as it means anything: nan for unconstrained parameters and with flat ranges."""
+    matrix = curvature.covariance.copy()
+    if any(p.is_range for p in problem.parameters):
+        matrix[:] = np.nan
+    matrix[curvature.unconstrained] = np.nan
+    matrix[:, curvature.unconstrained] = np.nan
+    return matrix
+
+
 def measurement_rows(problem: Any, theta: np.ndarray, covariance: np.ndarray) -> tuple[MeasurementRow, ...]:
+    """Every entry, measured against fitted; no fitted error with flat ranges, where it is no parabola's."""
     quantities = tuple(dict.fromkeys(entry.quantity for entry in problem.entries))
-    _, gradient = problem.linearise_quantities(theta, quantities)
-    spread = dict(
-        zip(
-            quantities,
-            np.sqrt(np.clip(np.einsum("qi,ij,qj->q", gradient, covariance, gradient), 0.0, None)),
-            strict=True,
-        )
-    )
+    spread: dict[str, float | None] = dict.fromkeys(quantities)
+    if not any(p.is_range for p in problem.parameters):
+        _, gradient = problem.linearise_quantities(theta, quantities)
+        variances = np.clip(np.einsum("qi,ij,qj->q", gradient, covariance, gradient), 0.0, None)
+        spread = {name: float(error) for name, error in zip(quantities, np.sqrt(variances), strict=True)}
     predicted = problem.predictions(theta)
     u = problem.terms.standardised(predicted[:, None])[:, 0]
     pulled = u.copy()
@@ -215,8 +230,9 @@ def measurement_rows(problem: Any, theta: np.ndarray, covariance: np.ndarray) ->
                 unit=entry.unit,
                 kind=entry.kind,
                 groups=tuple(entry.groups),
-                fitted_error=float(spread[entry.quantity]),
+                fitted_error=spread[entry.quantity],
                 share=float(share),
+                source=getattr(entry, "source", "") or "",
             )
         )
     return tuple(rows)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -143,23 +144,29 @@ class StudentMixture:
         """Mixture from (point, covariance, weight) of each mode.
 
         Parameters that fill their range get a uniform marginal instead of the fit's: near a bound the
-        covariance says nothing about them.
+        covariance says nothing about them. It does say how the others follow them.
         """
         points = np.array([p for p, _, _ in modes], dtype=np.float64)
         covariances = [regularised(np.asarray(c, dtype=np.float64), spread) for _, c, _ in modes]
         widths = np.sqrt(np.max([np.diagonal(c) for c in covariances], axis=0))
         scales = chosen_scales(points.min(axis=0), widths, lower, upper)
         boxed, logarithmic = scales.boxed, scales.logarithmic
-        means, scaled = [], []
+        size = np.where(boxed, scales.upper - scales.lower, 1.0)
+        prepared = []
         for point, covariance in zip(points, covariances, strict=True):
-            mean, covariance = point.copy(), covariance.copy()
+            mean = point.copy()
             mean[logarithmic] = np.log(point[logarithmic])
-            slope = np.where(logarithmic, 1.0 / np.where(logarithmic, point, 1.0), 1.0)
-            covariance *= np.outer(slope, slope)
+            slope = np.where(logarithmic, 1.0 / np.where(logarithmic, point, 1.0), 1.0) / size
+            prepared.append((mean, *_given_boxed(covariance * np.outer(slope, slope), boxed)))
+        if boxed.any():
+            # The others follow the boxed ones as at the weightiest mode.
+            _, _, slopes = prepared[int(np.argmax([w for _, _, w in modes]))]
+            scales = replace(scales, shear=np.concatenate([slopes, np.zeros_like(slopes)]))
+        means, scaled = [], []
+        for point, (mean, covariance, _) in zip(points, prepared, strict=True):
+            if scales.shear.size:
+                mean -= (scales.features(point[None]) @ scales.shear)[0]
             mean[boxed] = 0.0
-            covariance[boxed, :] = 0.0
-            covariance[:, boxed] = 0.0
-            covariance[boxed, boxed] = 1.0
             means.append(mean)
             scaled.append(covariance)
         return cls([w for _, _, w in modes], means, scaled, degrees, scales)
@@ -194,6 +201,21 @@ class StudentMixture:
             weights, means = [1], [y.mean(axis=0)]
             covariances = [regularised(np.atleast_2d(np.cov(y, rowvar=False)), spread)]
         return cls(weights, means, covariances, degrees, scales)
+
+
+def _given_boxed(covariance: np.ndarray, boxed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Covariance of the others at given boxed parameters, one for the boxed; and the others' slopes (boxed, n)."""
+    given = np.zeros_like(covariance)
+    given[boxed, boxed] = 1.0
+    slopes = np.zeros((int(boxed.sum()), len(covariance)))
+    other = ~boxed
+    if other.any():
+        width = np.sqrt(np.diagonal(covariance))
+        precision = np.linalg.inv(covariance / np.outer(width, width)) / np.outer(width, width)
+        inner = np.linalg.inv(precision[np.ix_(other, other)])
+        given[np.ix_(other, other)] = 0.5 * (inner + inner.T)
+        slopes[:, other] = -precision[np.ix_(boxed, other)] @ inner
+    return given, slopes
 
 
 def regularised(covariance: np.ndarray, spread: np.ndarray) -> np.ndarray:

@@ -25,6 +25,8 @@ Mode = tuple[np.ndarray, np.ndarray, float]
 
 _DEGREES = (4.0, 8.0, 16.0, 32.0, 100.0)
 _NAN_SHARE = 0.1
+# Share of the best acceptance that a heavier tail must keep: in a tail too light a walker sits for long.
+_TAIL_PRICE = 0.8
 PILOT_STEPS = 150
 
 
@@ -171,7 +173,7 @@ def start_points(
 def best_degrees(
     target: Target, density: StudentMixture, coords: np.ndarray, log_prob: np.ndarray, random: Any
 ) -> tuple[StudentMixture, float]:
-    """The degrees of freedom with the best predicted acceptance, and that acceptance.
+    """The heaviest tail that costs next to no acceptance, and its predicted acceptance.
 
     Predicted as the mean of min(1, w(q)/w(x)) over pairs of a proposal q and a chain point x, with
     w = posterior/proposal.
@@ -189,16 +191,15 @@ def best_degrees(
     density : StudentMixture
     acceptance : float
     """
-    best, best_acceptance = density, -1.0
+    tried = []
     for degrees in _DEGREES:
         trial = density.with_degrees(degrees)
         proposal = trial.draw(len(coords), random)
         weight_now = log_prob - trial.log_density(coords)
         weight_new = target(proposal) - trial.log_density(proposal)
-        acceptance = float(np.exp(np.minimum(weight_new - weight_now, 0.0)).mean())
-        if acceptance > best_acceptance:
-            best, best_acceptance = trial, acceptance
-    return best, best_acceptance
+        tried.append((trial, float(np.exp(np.minimum(weight_new - weight_now, 0.0)).mean())))
+    enough = _TAIL_PRICE * max(acceptance for _, acceptance in tried)
+    return next((trial, acceptance) for trial, acceptance in tried if acceptance >= enough)
 
 
 def refitted(
@@ -209,14 +210,23 @@ def refitted(
     lower: np.ndarray,
     upper: np.ndarray,
     random: Any,
+    *,
+    held_out: np.ndarray | None = None,
 ) -> tuple[StudentMixture, float]:
     """The mixture that imitates chain points (B, n) best, and its predicted acceptance.
 
-    One component per component of ``previous``.
+    One component per component of ``previous``. The degrees of freedom and the acceptance are judged on the points
+    ``held_out`` (B,) of bool, by a mixture fitted to the others: on its own points a fit looks better than it is.
     """
-    fitted = StudentMixture.from_draws(coords, previous.nearest(coords), lower, upper)
-    pick = (random.random(min(2000, len(coords))) * len(coords)).astype(np.int64)
-    return best_degrees(target, fitted, coords[pick], log_prob[pick], random)
+    labels = previous.nearest(coords)
+    fitted = StudentMixture.from_draws(coords, labels, lower, upper)
+    judged, tests = fitted, np.arange(len(coords))
+    if held_out is not None:
+        judged = StudentMixture.from_draws(coords[~held_out], labels[~held_out], lower, upper)
+        tests = np.flatnonzero(held_out)
+    pick = tests[(random.random(min(2000, len(tests))) * len(tests)).astype(np.int64)]
+    best, acceptance = best_degrees(target, judged, coords[pick], log_prob[pick], random)
+    return fitted.with_degrees(best.degrees), acceptance
 
 
 @dataclass(frozen=True)

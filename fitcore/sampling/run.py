@@ -31,7 +31,7 @@ from observables.errors import InputError
 __all__ = ["Run"]
 
 _LOG = logging.getLogger(__name__)
-_PILOT_ROUNDS = 5
+_PILOT_ROUNDS = 12
 _CHECK_VALUES = 1 << 22
 _MOST_STEPS = 200_000
 
@@ -71,7 +71,7 @@ class Run:
         snooker = SnookerMove(self.n_ensembles)
         if density is None:
             return [(evolution, 0.8), (snooker, 0.2)]
-        share = 0.7 if acceptance > 0.2 else 0.5 if acceptance > 0.05 else 0.2
+        share = 0.7 if acceptance > 0.65 else 0.5 if acceptance > 0.05 else 0.2
         return [
             (evolution, 0.8 * (1.0 - share)),
             (snooker, 0.2 * (1.0 - share)),
@@ -137,21 +137,33 @@ class Run:
         counts = tuple(int(c) * self.n_ensembles for c in shares(density.weights, self.per_ensemble))
         state = State(coords, log_prob=log_prob, random_state=random.get_state())
         acceptance, steps = 0.3, 0
-        for _ in range(_PILOT_ROUNDS):
+        rounds: list[tuple[np.ndarray, np.ndarray]] = []
+        climbed = float(np.mean(log_prob))
+        for number in range(_PILOT_ROUNDS):
             store = self.memory()
             sampler = self.sampler(self.moves(density, acceptance), store)
             for step in sampler.sample(state, iterations=PILOT_STEPS, skip_initial_state_check=True):
                 last = step
             state = last
             steps += PILOT_STEPS
-            half = store.get_chain(discard=PILOT_STEPS // 2, flat=True)
-            half_log_prob = store.get_log_prob(discard=PILOT_STEPS // 2, flat=True)
+            discard = 0 if number else PILOT_STEPS // 2
+            rounds.append(
+                (store.get_chain(discard=discard, thin=3), store.get_log_prob(discard=discard, thin=3))
+            )
+            # The later half of what there is so far: enough draws for a fit, the way from the start forgotten.
+            draws, log_prob = (np.concatenate(part) for part in zip(*rounds[len(rounds) // 2 :], strict=True))
+            # The last ensemble is independent of those before it.
+            held_out = np.tile(self.chain.ensembles == self.n_ensembles - 1, len(draws))
             random.set_state(state.random_state)
             density, achieved = refitted(
-                self.target, density, half, half_log_prob, self.lower, self.upper, random
-            )
+                self.target, density, draws.reshape(-1, draws.shape[2]), log_prob.reshape(-1),
+                self.lower, self.upper, random, held_out=held_out,
+            )  # fmt: skip
             state.random_state = random.get_state()
-            settled = achieved < 1.1 * acceptance and achieved > 0.2
+            # While walkers still climb, the proposal imitates where they were.
+            height = float(rounds[-1][1].mean())
+            settled = achieved < 1.1 * acceptance and achieved > 0.2 and height < climbed + 1.0
+            climbed = height
             acceptance = achieved
             _LOG.debug("pilot: %d steps, predicted acceptance %.2f", steps, acceptance)
             if self.progress is not None:

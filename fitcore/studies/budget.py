@@ -110,7 +110,7 @@ def budget(
     ConvergenceError
         The fit, or the refit of a shifted entry, did not converge.
     InputError
-        A quantity that the inputs do not determine.
+        A quantity that the inputs do not determine, or flat theory ranges in the problem.
 
     Notes
     -----
@@ -120,6 +120,11 @@ def budget(
     from fitcore.minimise.batch_solver import minimise_batch
 
     wanted = tuple(names)
+    if any(getattr(p, "is_range", False) for p in problem.parameters):
+        raise InputError(
+            "an error budget divides Gaussian errors, and flat ranges are none: take theory errors gaussian "
+            "(--theory-errors gaussian)"
+        )
     problem.linearise_quantities(problem.start, wanted)  # unknown names fail before any work
     minima = find_minima(problem, size=starts, rng=rng)
     if not minima or not minima[0].converged:

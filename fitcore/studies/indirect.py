@@ -168,7 +168,7 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
     elif own:
         flags.append("direct-is-a-range")
     try:
-        rest = problem.without(*left_out) if left_out else problem
+        rest = problem.without(*left_out, keep_free=True) if left_out else problem
         # A free direction would let the quantity run to anything: then nothing else determines it.
         determined = rest.determines(name) and is_determined(rest, _near(rest, known, problem), name)
     except (InputError, UnknownNameError):
@@ -251,7 +251,7 @@ def _excess_without_overlap(
     """chi2(everything but the overlapping entries) - chi2(rest) - chi2(own alone)."""
     from fitcore.minimise.batch_solver import minimise_batch
 
-    reduced = problem.without(*sorted(overlapping))
+    reduced = problem.without(*sorted(overlapping), keep_free=True)
     starting = np.tile(reduced.start, (len(known), 1))
     for i, parameter in enumerate(reduced.parameter_names):
         if parameter in problem.parameter_names:

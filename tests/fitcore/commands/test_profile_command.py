@@ -8,7 +8,7 @@ import json
 import numpy as np
 import pytest
 
-from fitcore.commands import scan
+from fitcore.commands import scan_axes, scan_report
 from observables.errors import InputError
 
 
@@ -161,10 +161,10 @@ def test_unusable_requests(weakmix, arguments, message):
 
 
 def test_axes_are_read():
-    assert scan.parse_axes(["a=1:2:3", "b"]) == (scan.Axis("a", 1.0, 2.0, 3), scan.Axis("b"))
-    assert scan.parse_axes(["a=-1e-3:2e-3"]) == (scan.Axis("a", -1e-3, 2e-3),)
+    assert scan_axes.parse_axes(["a=1:2:3", "b"]) == (scan_axes.Axis("a", 1.0, 2.0, 3), scan_axes.Axis("b"))
+    assert scan_axes.parse_axes(["a=-1e-3:2e-3"]) == (scan_axes.Axis("a", -1e-3, 2e-3),)
     with pytest.raises(InputError, match="more than"):
-        scan.parse_axes(["a=0:1:2000", "b=0:1:2000"])
+        scan_axes.parse_axes(["a=0:1:2000", "b=0:1:2000"])
 
 
 def test_a_lower_minimum_is_said_loudly(weakmix, monkeypatch):
@@ -197,4 +197,4 @@ def test_a_lower_minimum_is_said_loudly(weakmix, monkeypatch):
 def test_points_inside_a_polygon():
     square = np.array([[0.0, 0.0], [2.0, 0.0], [2.0, 2.0], [0.0, 2.0], [0.0, 0.0]])
     points = np.array([[1.0, 1.0], [3.0, 1.0], [-1.0, 1.0], [1.0, -0.1], [0.1, 1.9]])
-    assert scan.inside_polygon(points, square).tolist() == [True, False, False, False, True]
+    assert scan_report.inside_polygon(points, square).tolist() == [True, False, False, False, True]

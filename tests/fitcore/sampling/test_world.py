@@ -97,6 +97,16 @@ def test_published_bayesian_fit_with_b_mixing_of_three_flavours(tmp_path):
         assert abs(summary[name].mean - value) < 0.7 * error, name
 
 
+@pytest.mark.stat
+def test_flat_theory_errors_mix_well():
+    """Ranges that a precise measurement ties to other parameters: a valley across a box."""
+    problem = Problem.load("averages-2026", theory_errors="flat")
+    result = sample(problem, modes=modes_of_fit(problem, problem.fit()), effective=5000, rng=1)
+    assert result.valid, result.diagnostics.advice
+    assert result.diagnostics.autocorrelation_time.max() < 15
+    assert result.diagnostics.acceptance > 0.3
+
+
 @pytest.mark.slow
 def test_many_times_faster_than_emcee_the_ordinary_way():
     """Effective samples per second, slowest parameter, both in this run and from the same start.
