@@ -41,3 +41,8 @@ def __getattr__(name: str) -> Any:
 
         return FitResult
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    # What is imported on demand is there all the same.
+    return sorted({*globals(), *__all__})

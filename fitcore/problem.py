@@ -133,6 +133,12 @@ class Problem(Questions):
         inputs = load_inputs(source, only=only, without=without, settings=settings)
         return cls(inputs, hypothesis, theory_errors=theory_errors)
 
+    def __repr__(self) -> str:
+        return (
+            f"<Problem {self.inputs.name!r}: {self.n_entries} entries, {self.n_parameters} free parameters, "
+            f"hypothesis {self.hypothesis!r}, theory errors {self.theory_errors}>"
+        )
+
     # -- set-up -------------------------------------------------------------------------------------------------
 
     def _compile(self) -> None:
@@ -250,8 +256,8 @@ class Problem(Questions):
             result = self._chi_square.predictions(points).T
         return result[0] if single else result
 
-    def values(self, theta: Any, names: Iterable[str]) -> dict[str, Any]:
-        """Any quantities or parameters at given points, real or complex, each of shape (B,).
+    def values(self, theta: Any, names: str | Iterable[str]) -> dict[str, Any]:
+        """Any quantities or parameters at given points, real or complex, each of shape (B,); by name.
 
         Raises
         ------
@@ -260,7 +266,7 @@ class Problem(Questions):
         InputError
             It rests on parameters that this problem does not have.
         """
-        wanted = tuple(names)
+        wanted = _names(names)
         points, single = self.theta(theta)
         shaped = {}
         for name, result in self._evaluate(wanted, list(points)).items():
@@ -268,9 +274,9 @@ class Problem(Questions):
             shaped[name] = array[0] if single else array
         return shaped
 
-    def linearise_quantities(self, theta: Any, names: Iterable[str]) -> tuple[np.ndarray, np.ndarray]:
+    def linearise_quantities(self, theta: Any, names: str | Iterable[str]) -> tuple[np.ndarray, np.ndarray]:
         """Real quantities and their exact gradients: shapes (B, q) and (B, q, n)."""
-        wanted = tuple(names)
+        wanted = _names(names)
         points, single = self.theta(theta)
         batch = points.shape[1]
         everything = tuple(range(self.n_parameters))
@@ -459,8 +465,8 @@ class Problem(Questions):
         ----------
         *names : str
         keep_free : bool
-            Parameters that vary here vary there too. Otherwise those that the catalogue holds unless measured (lifetimes,
-            radiative corrections) are held at their start once their entry is gone, which is information.
+            Parameters that vary here vary there too. Otherwise those that the catalogue holds unless measured
+            (lifetimes, radiative corrections) are held at their start once their entry is gone, which is information.
         """
         inputs = self.inputs.select(without=names)
         if keep_free:
@@ -470,6 +476,11 @@ class Problem(Questions):
                 settings[name] = replace(settings.get(name, ParameterSetting()), fixed=False)
             inputs = replace(inputs, parameters=settings)
         return self.with_inputs(inputs)
+
+
+def _names(names: str | Iterable[str]) -> tuple[str, ...]:
+    """One name alone is meant as a name, not as its letters."""
+    return (names,) if isinstance(names, str) else tuple(names)
 
 
 def _user_modules(catalogue: Catalogue, hypothesis: Hypothesis) -> tuple[tuple[str, str], ...]:

@@ -14,6 +14,8 @@ __all__ = ["Estimate", "FitResult", "MeasurementRow", "OtherMinimum"]
 
 Interval = tuple[float, float]
 FORMAT_VERSION = 1
+#: Parameters that a fit shows when it is printed.
+SHOWN = 4
 
 
 @dataclass(frozen=True)
@@ -29,7 +31,8 @@ class Estimate:
     interval_68, interval_95 : (float, float) or None
         Delta chi2 = 1.000 (68.27 %) and 3.841 (95.0 %).
     method : str
-        ``"profile"``: every other parameter refitted; ``"linear"``: propagated with the covariance matrix.
+        ``"profile"``: every other parameter refitted; ``"linear"``: propagated with the covariance matrix;
+        ``"range"``: the bounds of a flat theory error, inside which no value is preferred.
     unit : str
     """
 
@@ -39,6 +42,31 @@ class Estimate:
     interval_95: Interval | None = None
     method: str = "linear"
     unit: str = "1"
+
+    @property
+    def sides(self) -> tuple[float, float] | None:
+        """Upward and downward 68.27 % errors, if both ends of the interval exist and hold the value."""
+        if self.interval_68 is None or None in self.interval_68:
+            return None
+        low, high = (float(end) for end in self.interval_68)
+        plus, minus = high - self.value, self.value - low
+        return (plus, minus) if plus >= 0 and minus >= 0 and math.isfinite(plus + minus) else None
+
+    def __str__(self) -> str:
+        """Value with its 68.27 % errors and unit, such as ``65.8 +- 1.4 deg``."""
+        from fitcore.rounding import interval, number, shared_power, with_error
+
+        unit = "" if self.unit == "1" else f" {self.unit}"
+        if self.method == "range" and self.interval_68 is not None:
+            return f"range {interval(*self.interval_68)}{unit}"
+        sides = self.sides or ((self.error, self.error) if self.error is not None else None)
+        if sides is not None:
+            smallest = min((side for side in sides if side > 0), default=None)
+            return (
+                with_error(self.value, *sides, power=shared_power(self.value, *sides, error=smallest)) + unit
+            )
+        bounded = any(end is not None and math.isfinite(end) for end in self.interval_68 or ())
+        return f"{number(self.value)}{unit} ({'open on one side' if bounded else 'unconstrained'})"
 
 
 @dataclass(frozen=True)
@@ -125,6 +153,29 @@ class FitResult:
     def values(self) -> dict[str, float]:
         """Best-fit values of the free parameters."""
         return {name: estimate.value for name, estimate in self.parameters.items()}
+
+    def __str__(self) -> str:
+        """Verdict and first four parameters, for a prompt; `weakmix fit` and `to_dict` say everything."""
+        from fitcore.rounding import significant
+
+        head = "converged" if self.valid else f"NOT CONVERGED: {self.message or 'no reason recorded'}"
+        p = "no p-value" if self.p_value is None else f"p-value {significant(self.p_value)}"
+        lines = [
+            f"Fit of {self.inputs_name or 'inputs without a name'}, hypothesis {self.hypothesis}: {head}",
+            f"  chi-square {self.chi2:.2f} for {self.degrees_of_freedom} degrees of freedom, {p}",
+        ]
+        if self.flags:
+            lines.append(f"  flags: {', '.join(self.flags)}")
+        shown = list(self.parameters)[:SHOWN]
+        width = max(map(len, shown), default=0)
+        lines += [f"  {name:<{width}}  {self.parameters[name]}" for name in shown]
+        more = len(self.parameters) - len(shown)
+        if more or self.derived:
+            lines.append(
+                f"  and {more} more parameters, {len(self.derived)} derived quantities, "
+                f"{len(self.measurements)} measurements"
+            )
+        return "\n".join(lines)
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data with the documented keys; numbers that do not exist are None."""

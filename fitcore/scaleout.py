@@ -223,7 +223,7 @@ class LocalProcesses(Executor):
 
     def submit(self, fn: Callable[..., Any], /, *args: Any, **kwargs: Any) -> Future[Any]:
         """Queue a task."""
-        with _single_threaded():  # workers start here and inherit it
+        with _single_threaded(), _interrupts_held():  # workers start here and inherit both
             try:
                 return self._pool.submit(fn, *args, **kwargs)
             except BrokenExecutor:
@@ -240,6 +240,19 @@ def _start_worker(spec: Any) -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # an interrupt is the parent's to handle
     if spec is not None:
         problem_from(spec)
+
+
+@contextlib.contextmanager
+def _interrupts_held() -> Iterator[None]:
+    """Hold back interrupts while a worker starts: it would print a traceback before it can ignore them."""
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
 
 
 @contextlib.contextmanager

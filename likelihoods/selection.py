@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 from likelihoods import units
 from likelihoods.entries import UNSHARED_SOURCES, Declared, Entry, Notice, ParameterSetting
-from likelihoods.fields import describe, real
+from likelihoods.fields import real
 from observables.errors import InputError, UnknownNameError
 
 if TYPE_CHECKING:
@@ -24,8 +24,9 @@ _PARAMETER_KEYS = ("start", "lower", "upper", "fixed")
 #: A number that changes by more than this is pointed out: it may be in another unit than meant.
 SUSPICIOUS_FACTOR = 10.0
 _PAIR = re.compile(r"(\[.*\])\s*([^\s\]].*)?")
-_LIKE_A_PAIR = re.compile(r"\(?\s*[-+]?[\d.]+(?:[eE][-+]?\d+)?\s*(?:[,/:;]|\s(?=[-+])|(?=[-+]))\s*[-+]?[\d.]+(?:[eE][-+]?\d+)?\s*\)?")
-_WITH_UNIT = re.compile(r"([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(\S.*)")
+_NUMBER = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?"
+_LIKE_A_PAIR = re.compile(rf"\(?\s*{_NUMBER}\s*(?:[,/:;]|(?=[-+]))\s*{_NUMBER}\s*\)?")
+_WITH_UNIT = re.compile(rf"({_NUMBER})\s*(\S.*)")
 
 
 def close(name: str, known: Iterable[str]) -> list[str]:
@@ -132,7 +133,9 @@ def _what_changed(inputs: Inputs, entry: Entry, new: Declared, key: str) -> str:
     old, unit = entry.declared, "" if key == "inflate" or entry.declared.unit == "1" else entry.declared.unit
     pairs = [_numbers_of(old, key), _numbers_of(new, key)]
     shown = " -> ".join(_written(numbers) for numbers in pairs)
-    parts = [f"{key} {shown}" + (f" (in units of {unit})" if unit[:1].isdigit() else f" {unit}" if unit else "")]
+    parts = [
+        f"{key} {shown}" + (f" (in units of {unit})" if unit[:1].isdigit() else f" {unit}" if unit else "")
+    ]
     if key == "error" and old.errors:
         lost = [name for name in entry.shared_errors if _is_shared(inputs, entry, name)]
         parts.append(f"replaces the named errors {', '.join(old.errors)}")
@@ -145,7 +148,11 @@ def _what_changed(inputs: Inputs, entry: Entry, new: Declared, key: str) -> str:
         much = f"{size:,.0f} times {'larger' if strange[0] > 1 else 'smaller'}"
         hint = f'; a number alone is in the unit of the file, "{old.unit}"' if key != "inflate" else ""
         other = "deg" if old.unit == "rad" else "1"
-        hint += f'; write another behind it, such as "{key}=NUMBER {other}"' if _is_scaled(old.unit) and hint else ""
+        hint += (
+            f'; write another behind it, such as "{key}=NUMBER {other}"'
+            if _is_scaled(old.unit) and hint
+            else ""
+        )
         parts.append(f"CAUTION: {much} than before{hint}")
     return "; ".join(parts)
 
@@ -253,9 +260,11 @@ def _error(setting: str, written: str, unit: str) -> tuple[float, float]:
             raise InputError(f'setting "{setting}": {how}') from None
         numbers = [real(item) for item in pair]
         if len(numbers) != 2 or any(isinstance(number, str) for number in numbers):
-            raise InputError(f'setting "{setting}": write error=[PLUS, MINUS], not {describe(pair)}')
+            raise InputError(f'setting "{setting}": write error=[PLUS, MINUS], two positive numbers')
         own_unit = (found[2] if found else None) or unit
-        plus, minus = (_positive(setting, _number(setting, f"{number!r} {own_unit}", unit)) for number in numbers)
+        plus, minus = (
+            _positive(setting, _number(setting, f"{number!r} {own_unit}", unit)) for number in numbers
+        )
         return plus, minus
     if _LIKE_A_PAIR.fullmatch(written):
         raise InputError(f'setting "{setting}": "{written}" is not one number; {how}')

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import os
+import signal
+import threading
 from collections.abc import Iterator
 
 import pytest
@@ -13,6 +15,10 @@ from hypothesis import settings
 settings.register_profile("repeatable", deadline=None, derandomize=True, database=None)
 settings.register_profile("explore", deadline=None)
 settings.load_profile("explore" if os.environ.get("WEAKMIX_EXPLORE") else "repeatable")
+
+# A shell starts its background jobs with interrupts ignored, and so would the processes that tests interrupt be.
+if threading.current_thread() is threading.main_thread() and signal.getsignal(signal.SIGINT) is signal.SIG_IGN:
+    signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 @pytest.fixture(autouse=True)

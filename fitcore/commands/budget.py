@@ -23,8 +23,10 @@ MOST = 25
 CAUTION = (
     "shift: change of the quantity when the measured value moves up by one standard deviation and everything is "
     "refitted; squares of shifts add up to the square of the whole uncertainty (with correlations where stated). "
-    "removal: root of sigma^2 - sigma'^2, sigma' being the uncertainty if what the entry measures were known exactly, "
-    "by linear propagation; removals do not add up. Groups may share entries."
+    "if exact: the part of the uncertainty that would vanish if what the entry measures were known exactly, the root "
+    "of sigma^2 - sigma'^2 with sigma' the uncertainty then left, by linear propagation; these parts do not add up. It "
+    "exceeds the shift where other entries measure the same thing. Groups may share entries; `experiment` and "
+    "`theory` are the kinds of the entries. --only and --without take groups and kinds as well as ids."
 )
 
 
@@ -76,10 +78,6 @@ def command(
     for name in result.quantities:
         output.show(*tables_of(result, name))
     output.show(CAUTION)
-    if result.flat:
-        output.show(
-            f"Flat ranges have no standard deviation and are not in these budgets: {', '.join(result.flat)}"
-        )
     if place is not None:
         output.show(f"\nWritten to {place}")
     output.write_json(result.to_dict())
@@ -88,7 +86,7 @@ def command(
 def tables_of(result: BudgetResult, name: str) -> list[Table]:
     """Tabulate the entries and the groups of one quantity's budget."""
     from fitcore.commands import tables
-    from fitcore.commands.rounding import with_error
+    from fitcore.rounding import with_error
 
     whole = f"{name}: {with_error(result.values[name], result.errors[name])} {tables.shown_unit(result.units[name])}"
     rows = result.entries[name]
@@ -100,7 +98,7 @@ def tables_of(result: BudgetResult, name: str) -> list[Table]:
             ("input" if part is not result.groups[name] else "group", "whole"),
             ("shift", "right"),
             ("of the uncertainty", "right"),
-            ("removal", "right"),
+            ("if exact", "right"),
             caption=caption,
         )
         for row in part:
@@ -110,8 +108,14 @@ def tables_of(result: BudgetResult, name: str) -> list[Table]:
 
 
 def _cells(row: BudgetRow, error: float, *, signed: bool) -> tuple[str, str, str]:
-    shift = f"{row.shift:+.2g}" if signed else f"{row.shift:.2g}"
-    return shift, f"{100 * abs(row.shift) / error:.0f} %" if error else "-", f"{row.removal:.2g}"
+    from fitcore.rounding import share, shared_power
+
+    power = shared_power(error)  # one for the whole table
+    return (
+        share(row.shift, error, sign=signed, power=power),
+        f"{100 * abs(row.shift) / error:.0f} %" if error else "-",
+        share(row.removal, error, power=power),
+    )
 
 
 def _drawings(problem: Problem, result: BudgetResult) -> Mapping[str, Drawing]:

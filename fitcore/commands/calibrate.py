@@ -28,11 +28,6 @@ TOYS_FILE = "toys.jsonl"
 #: Seconds between lines of progress where there is no terminal.
 LINE_EVERY = 10.0
 
-CAUTION = (
-    "Pseudo-experiments are thrown around the fitted point, auxiliary theory inputs included, with all other "
-    "parameters at their profiled values: exact where the test does not depend on those, an approximation otherwise."
-)
-
 
 @click.command("calibrate")
 @problem_options
@@ -87,15 +82,16 @@ def command(
       weakmix calibrate averages-2026 wolfenstein_rhobar=0.15 wolfenstein_etabar=0.36
       weakmix calibrate averages-2026 --coverage all --toys 1000 --json coverage.json
     """
+    from fitcore.commands import calibration_tables
     from fitcore.commands.fit import announce
 
-    problem = request.load()
     wanted = Wanted.parse(targets, cl, coverage, toys)
+    problem = request.load()
     announce(output, "calibration", problem)
     result, place = calibrate_and_store(
         problem, request, wanted, output, work, cluster, figures=not no_figures
     )
-    show(output, result)
+    calibration_tables.show(output, result)
     if place is not None:
         output.show(f"\nWritten to {place}")
     output.write_json(result.to_dict())
@@ -143,6 +139,11 @@ class Wanted:
             raise input_error(
                 f"--toys {toys}: at least one pseudo-experiment is needed; 1000 give a p-value to 0.016"
             )
+        for level in cl:
+            if not 0.0 < level < 1.0:
+                raise input_error(
+                    f"--cl: confidence level {level:g} is not between 0 and 1; give for example 0.683"
+                )
         values: list[tuple[str, float]] = []
         scanned: dict[str, Any] = {}
         for target in targets:
@@ -336,111 +337,3 @@ def write_run(folder: RunFolder, problem: Problem, result: CalibrationResult, *,
         folder.write_figure(name, calibration.draw_thresholds(region, latex=latex, footer=footer))
     if result.coverage:
         folder.write_figure("coverage", calibration.draw_coverage(result, latex=latex, footer=footer))
-
-
-# -- tables -----------------------------------------------------------------------------------------------------------
-
-
-def show(output: Output, result: CalibrationResult) -> None:
-    """Print a calibration for a person, the goodness of fit first."""
-    from rich.text import Text
-
-    found = result.goodness
-    if found is not None:
-        line = Text("p-value ", style="bold")
-        line.append(_p(found.value, found.error), style="bold")
-        line.append(f" calibrated with {found.toys:,} pseudo-experiments", style="default")
-        line.append(
-            f" ({result.asymptotic:.3g} asymptotically)"
-            if result.asymptotic is not None
-            else " (no asymptotic value)"
-        )
-        output.show(line)
-        output.show(f"chi-square {result.chi2:.2f} for {result.degrees_of_freedom} degrees of freedom")
-    for flag in result.flags:
-        output.show(Text(f"  flag: {flag}", style="yellow"))
-    if result.message:
-        output.show(result.message)
-    if result.points:
-        output.show(_points_table(result))
-    for region in result.regions:
-        output.show(_region_table(region))
-        if region.message:
-            output.show(region.message)
-    if result.coverage:
-        output.show(_coverage_table(result))
-    output.show(CAUTION)
-
-
-def _p(value: float, error: float) -> str:
-    return f"{value:.3g} +- {error:.1g}"
-
-
-def _points_table(result: CalibrationResult) -> Any:
-    from fitcore.commands import tables
-    from fitcore.commands.rounding import number
-
-    made = tables.table(
-        "Points tested", ("point", "whole"), ("Delta chi2", "right"), "calibrated p", "asymptotic p"
-    )
-    for point in result.points:
-        where = ", ".join(
-            f"{name} = {number(value)} {tables.shown_unit(point.units[name])}".rstrip()
-            for name, value in point.values.items()
-        )
-        found = point.calibrated
-        made.add_row(
-            where,
-            f"{point.delta_chi2:.3f}" if found else "-",
-            _p(found.value, found.error) if found else point.message,
-            f"{point.asymptotic:.3g}" if found else "-",
-        )
-    return made
-
-
-def _region_table(region: Any) -> Any:
-    import numpy as np
-
-    from fitcore.commands import tables
-    from fitcore.commands.rounding import interval
-
-    if len(region.names) == 1:
-        title = f"Interval of {region.names[0]} {tables.shown_unit(region.units[0])}".rstrip()
-    else:
-        title = f"Region of {region.names[0]} and {region.names[1]}"
-    made = tables.table(title, "cl", "calibrated", "asymptotic", "threshold needed", "assumed")
-    for c, level in enumerate(region.cl):
-        shown = []
-        for parts in (region.calibrated[c], region.asymptotic[c]):
-            if len(region.names) == 1:
-                shown.append(" and ".join(interval(low, high) for low, high, *_ in parts) or "empty")
-            else:
-                shown.append(f"{len(parts)} outline{'' if len(parts) == 1 else 's'}")
-        needed = region.needed[c][np.isfinite(region.needed[c])]
-        span = f"{needed.min():.2f} to {needed.max():.2f}" if needed.size else "-"
-        made.add_row(f"{100 * level:.4g} %", *shown, span, f"{region.assumed[c]:.2f}")
-    return made
-
-
-def _coverage_table(result: CalibrationResult) -> Any:
-    from fitcore.commands import tables
-
-    made = tables.table(
-        "Coverage of the Delta chi-square intervals",
-        ("name", "whole"),
-        "cl",
-        ("coverage", "whole"),
-        ("pull mean", "whole"),
-        ("pull width", "whole"),
-        caption="pull = (fitted - true) / error from the curvature of each pseudo-experiment",
-    )
-    for row in result.coverage:
-        low, high = row.interval
-        made.add_row(
-            row.name,
-            f"{100 * row.cl:.4g} %",
-            f"{100 * row.coverage:.1f} +{100 * (high - row.coverage):.1f} -{100 * (row.coverage - low):.1f} %",
-            f"{row.pull_mean:+.3f} +- {row.pull_mean_error:.3f}" if row.pulls > 1 else "-",
-            f"{row.pull_width:.3f} +- {row.pull_width_error:.3f}" if row.pulls > 1 else "-",
-        )
-    return made

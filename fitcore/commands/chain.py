@@ -17,6 +17,9 @@ if TYPE_CHECKING:
     from fitcore.problem import Problem
     from fitcore.sampling.evidence import Evidence
 
+#: What exported files are called.
+ENDINGS = {"netcdf": ".nc", "csv": ".csv", "npz": ".npz"}
+
 file_argument = click.argument("file", metavar="FILE", type=click.Path(path_type=Path))
 
 
@@ -122,7 +125,6 @@ def summary_command(
 
     load_modules(modules)
     other = Comparison() if against is None else read_comparison(against)
-    profile = other.estimates
     with ChainFile.open(file) as chain:
         made = summarise(
             chain,
@@ -146,7 +148,7 @@ def summary_command(
     for notice in notices:
         output.show(f"note: {notice}")
     output.show(diagnostics.verdict, *(f"  - {line}" for line in diagnostics.advice))
-    output.show(posterior_tables.summary(made, profile))
+    output.show(posterior_tables.summary(made, other.estimates))
     output.show(posterior_tables.diagnostics(diagnostics), posterior_tables.PRIORS)
     content = {**made.to_dict(), "diagnostics": diagnostics.to_dict(), "notices": notices}
     if found is not None:
@@ -172,7 +174,7 @@ def write_figures(chain: Any, folder: Path, names: list[str], other: Comparison,
 
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        drawing = posterior.densities(chain, names, profile=other.estimates, start=discard)
+        drawing = posterior.densities(chain, names, fit=other.estimates, start=discard)
         save(drawing, folder, "posterior-densities")
         if len(names) > 1:
             save(posterior.triangle(chain, names, start=discard), folder, "posterior-triangle")
@@ -233,7 +235,10 @@ def problem_of_chain(file: Path) -> Problem:
 @command.command("export")
 @file_argument
 @click.option(
-    "--format", "format_", type=click.Choice(("netcdf", "csv", "npz")), required=True, help="What to write."
+    "--format",
+    "format_",
+    type=click.Choice(tuple(ENDINGS)),
+    help="What to write.  [default: by the ending of --to: .nc, .csv or .npz]",
 )
 @click.option(
     "--to",
@@ -250,17 +255,35 @@ def problem_of_chain(file: Path) -> Problem:
 @click.option("--overwrite", is_flag=True, help="Replace an existing file.")
 @reading_options
 def export_command(
-    file: Path, format_: str, to: Path | None, thin: int, discard: int, overwrite: bool, output: Output
+    file: Path, format_: str | None, to: Path | None, thin: int, discard: int, overwrite: bool, output: Output
 ) -> None:
-    """Write a chain for other programs: netCDF (readable by ArviZ), CSV, or a NumPy archive."""
+    """Write a chain for other programs: netCDF (readable by ArviZ), CSV, or a NumPy archive.
+
+    A complex derived quantity becomes two columns, NAME_re and NAME_im; the NumPy archive keeps it complex.
+
+    \b
+      weakmix chain export world.h5 --to world.nc
+      weakmix chain export world.h5 --format csv --thin 10
+    """
     from typing import cast
 
     from fitcore.sampling.chain_file import ChainFile
     from fitcore.sampling.export import Format, export
 
-    ending = {"netcdf": ".nc", "csv": ".csv", "npz": ".npz"}[format_]
-    to = file.with_suffix(ending) if to is None else to
+    format_ = _export_format(format_, to)
+    to = file.with_suffix(ENDINGS[format_]) if to is None else to
     with ChainFile.open(file) as chain:
         export(chain, to, format=cast("Format", format_), thin=thin, start=discard, overwrite=overwrite)
     output.show(f"written to {to}")
     output.write_json({"written": str(to), "format": format_})
+
+
+def _export_format(format_: str | None, to: Path | None) -> str:
+    """Format asked for, or the one that the ending of the new file's name says."""
+    by_ending = {ending: name for name, ending in ENDINGS.items()}
+    said = None if to is None else by_ending.get(to.suffix.lower())
+    if format_ is None and said is None:
+        raise click.UsageError("say what to write: --format netcdf, csv or npz, or --to a name in .nc, .csv or .npz")
+    if format_ is not None and said is not None and format_ != said:
+        raise click.UsageError(f"--format {format_} and --to {to} ask for different formats; drop one of them")
+    return format_ or str(said)

@@ -78,8 +78,8 @@ def command(
 
     Parameters come from --at, else from --from, else (with --start-values) from the catalogue; one without a
     value from anywhere is an error. --from RUN takes the best fit and propagates its covariance linearly to
-    68.27 % intervals; --from INPUTS fits the inputs first, with the given hypothesis. A fitted parameter that
-    --at moves leaves no intervals: they would belong to another point.
+    68.27 % intervals, with the modules that the run had; --from INPUTS fits the inputs first, with the given
+    hypothesis. A fitted parameter that --at moves leaves no intervals: they would belong to another point.
 
     A run folder is written only with --out.
 
@@ -89,14 +89,20 @@ def command(
       weakmix compute asymmetry_CP_even_DK --start-values --at strong_phase_DK=128.5deg
     """
     from fitcore.commands import tables
-    from fitcore.commands.modules import load_modules
-    from fitcore.commands.rounding import number
+    from fitcore.commands.modules import check_hypotheses, load_modules, modules_of_run
+    from fitcore.commands.options import refuse_chain
+    from fitcore.rounding import number
     from observables import catalogue
 
+    if source is not None:
+        refuse_chain(source)
+        modules = (*modules, *modules_of_run(Path(source), modules))
     load_modules(modules)
+    check_hypotheses(hypothesis)
     names = tuple(dict.fromkeys(quantities))
     point = Point() if source is None else point_from(source, hypothesis)
     chosen = "+".join(hypothesis) or point.hypothesis
+    check_hypotheses(chosen.split("+"))
     overlay = catalogue.get_hypothesis(chosen)
     nodes = known_nodes(names, overlay)
     given = read_assignments(assignments, overlay)
@@ -125,6 +131,11 @@ def command(
     output.show(rows)
     if errors:
         output.show("+- is the 68.27 % interval, propagated linearly from the covariance matrix of the fit.")
+    elif point.fitted and not moved:
+        output.show(
+            "No intervals: the fit has no covariance matrix for the parameters used (flat ranges, or one at a bound or "
+            "unconstrained); `weakmix fit INPUTS --derived NAME` gives profile intervals."
+        )
     for name in moved:
         output.show(f"No intervals: --at moved {name} away from its best fit.")
     unused = [name for name in given if name not in leaves]
@@ -412,7 +423,7 @@ def _scaled(covariance: np.ndarray) -> np.ndarray:
 
 def shown_value(value: Any, error: float | None) -> str:
     """Write a computed value, real or complex, with its error if it has one."""
-    from fitcore.commands.rounding import number, with_error
+    from fitcore.rounding import number, with_error
 
     if isinstance(value, complex) or getattr(getattr(value, "dtype", None), "kind", "") == "c":
         return f"{value.real:.6g} {'-' if value.imag < 0 else '+'} {abs(value.imag):.6g} i"

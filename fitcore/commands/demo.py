@@ -100,7 +100,7 @@ def against_truth(result: FitResult, truth: dict[str, float]) -> dict[str, dict[
 def truth_table(rows: dict[str, dict[str, Any]]) -> Table:
     """Tabulate truth against intervals."""
     from fitcore.commands import tables
-    from fitcore.commands.rounding import fixed, interval, last_decimal
+    from fitcore.rounding import interval, like_error, shared_power
 
     made = tables.table(
         "Where the truth lies",
@@ -116,11 +116,11 @@ def truth_table(rows: dict[str, dict[str, Any]]) -> Table:
     for name, row in rows.items():
         low, high = row["interval_68"]
         half = (high - low) / 2
-        small = max(abs(low), abs(high)) < 1e-3
+        power = shared_power(row["value"], low, high)
         made.add_row(
             name,
-            f"{row['truth']:.4g}" if small or not half > 0 else fixed(row["truth"], last_decimal(half)),
-            interval(low, high),
+            like_error(row["truth"], half, power),
+            interval(low, high, power=power),
             tables.shown_unit(row["unit"]),
             "-" if row["distance"] is None else f"{row['distance']:+.2f}",
             "holds it" if row["in_68"] else "misses",

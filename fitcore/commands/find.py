@@ -47,7 +47,19 @@ SYNONYMS = {
 }
 
 
-@click.command("find")
+#: What stands between the two sides of a decay.
+ARROW = re.compile(r"\s*(?:->|-->|\u2192|\\to\b)\s*")
+
+
+class SearchCommand(click.Command):
+    """A command whose words may be the arrow of a decay, which would be taken for an option."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        arrow = "\N{RIGHTWARDS ARROW}"
+        return super().parse_args(ctx, [arrow if word in ("->", "-->") else word for word in args])
+
+
+@click.command("find", cls=SearchCommand)
 @click.argument("words", nargs=-1, required=True)
 @click.option("--kind", type=click.Choice(KINDS), help="Show only this kind.")
 @click.option(
@@ -72,6 +84,7 @@ def command(
       weakmix find "Delta m"
       weakmix find V_cb
       weakmix find sin2b
+      weakmix find "B -> tau nu"
     """
     from fitcore.commands import tables
     from fitcore.commands.modules import load_modules
@@ -114,7 +127,10 @@ def search(nodes: Iterable[Node], words: Iterable[str]) -> list[Node]:
     list of Node
         Those that match, best first; equals keep the order quantity, parameter, constant, name.
     """
-    wanted = [re.sub(r"\|([^|]+)\|", r"magnitude\1", word) for text in words for word in text.split()]
+    typed = " ".join(words)
+    decay = [side.split() for side in ARROW.split(typed)] if len(ARROW.split(typed)) == 2 else None
+    wanted = [re.sub(r"\|([^|]+)\|", r"magnitude\1", word) for word in ARROW.sub(" ", typed).split()]
+    wanted = [word for word in wanted if squeeze(word)]
     scored = []
     for node in nodes:
         texts = [_Text(node.name), _Text(node.latex), _Text(node.title)]
@@ -123,9 +139,25 @@ def search(nodes: Iterable[Node], words: Iterable[str]) -> list[Node]:
         if len(wanted) > 1:
             together = _score(squeeze(" ".join(wanted)), texts)
             score = max(score, 100.0 + together if together else 0.0)  # words in a row beat scattered ones
+        if score and decay is not None:
+            score += _decay_score(decay, node.title)
         if score:
             scored.append((-score, KINDS.index(node.kind), len(node.name), node.name, node))
     return [entry[-1] for entry in sorted(scored, key=lambda entry: entry[:-1])]
+
+
+def _decay_score(decay: list[list[str]], title: str) -> float:
+    """Score a title such as `Branching fraction of B+ -> tau nu` for having the right side of its arrow right."""
+    parts = ARROW.split(title)
+    if len(parts) < 2 or not decay[0] or not parts[0].split():
+        return 0.0
+    parent, meant = (
+        re.sub(r"[+\-0*]+$", "", side.split()[-1].replace("_", "")) for side in (parts[0], decay[0][-1])
+    )
+    after = {squeeze(word) for word in parts[1].split()}
+    if not {squeeze(word) for word in decay[1]} <= after:
+        return 0.0
+    return 200.0 if parent == meant else 100.0 if parent.startswith(meant) else 0.0
 
 
 class _Text:
@@ -165,5 +197,7 @@ def _variants(word: str) -> list[tuple[str, float]]:
 
 def squeeze(text: str) -> str:
     """Reduce text to lower-case letters and digits; latex loses its commands' marks and its fonts."""
-    text = re.sub(r"\\(mathrm|mathcal|text|bar|overline|left|right|operatorname)\b", "", text)
+    text = re.sub(
+        r"\\(mathrm|mathcal|text|bar|overline|hat|widehat|tilde|left|right|operatorname)\b", "", text
+    )
     return re.sub(r"[^a-z0-9+']", "", text.lower())

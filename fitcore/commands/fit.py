@@ -26,7 +26,12 @@ if TYPE_CHECKING:
     multiple=True,
     metavar="NAME",
     shell_complete=complete_names,
-    help="Derive this quantity too, with its interval; repeatable.",
+    help="Derive this quantity too, with its profile interval; repeatable.",
+)
+@click.option(
+    "--profile-intervals",
+    is_flag=True,
+    help="Find every interval by refitting everything else, not only those of the Wolfenstein parameters and of --derived.",
 )
 @click.option(
     "--compare-theory-errors",
@@ -41,6 +46,7 @@ def command(
     ctx: click.Context,
     request: ProblemRequest,
     derived: tuple[str, ...],
+    profile_intervals: bool,
     compare_theory_errors: bool,
     no_figures: bool,
     output: Output,
@@ -59,7 +65,14 @@ def command(
     problem = request.load()
     announce(output, "fit", problem, notices=False)
     result, place = fit_and_store(
-        problem, request, output, work, command="fit", derived=derived, figures=not no_figures
+        problem,
+        request,
+        output,
+        work,
+        command="fit",
+        derived=derived,
+        profile_intervals=profile_intervals,
+        figures=not no_figures,
     )
     print_fit(output, problem, result, place)
     content = result.to_dict()
@@ -88,6 +101,7 @@ def fit_and_store(
     *,
     command: str,
     derived: tuple[str, ...] = (),
+    profile_intervals: bool = False,
     figures: bool = True,
 ) -> tuple[FitResult, Path | None]:
     """Fit, and write the run folder unless only JSON on stdout is wanted; shared by `fit` and `demo`.
@@ -102,13 +116,19 @@ def fit_and_store(
     from fitcore.commands import run_folder
 
     names = derived_names(problem, derived)
+    profiled = (*problem.parameter_names, *names) if profile_intervals else derived
     if output.json_on_stdout and output.out is None:
-        return problem.fit(derived=names, rng=work.seed), None
-    options = {**request.describe(), "derived": list(derived), "figures": figures}
+        return problem.fit(derived=names, profile=profiled, rng=work.seed), None
+    options = {
+        **request.describe(),
+        "derived": list(derived),
+        "profile_intervals": profile_intervals,
+        "figures": figures,
+    }
     with run_folder.writing(
         command, problem.inputs.name, out=output.out, options=options, seed=work.seed
     ) as run:
-        result = problem.fit(derived=names, rng=work.seed)
+        result = problem.fit(derived=names, profile=profiled, rng=work.seed)
         write_run(run, problem, result, figures=figures)
     return result, run.place
 
@@ -144,13 +164,18 @@ def announce(output: Output, what: str, problem: Problem, *, notices: bool = Tru
     output.headline(
         what,
         f"{inputs.name} revision {inputs.revision}" if inputs.revision else inputs.name,
-        f"{problem.n_entries} entries, {problem.n_parameters} parameters",
+        f"{counted(problem.n_entries, 'entry', 'entries')}, {counted(problem.n_parameters, 'parameter')}",
         f"hypothesis {problem.hypothesis}",
         f"theory errors {problem.theory_errors}",
     )
     if notices:
         show_notices(output, problem)
         output.show("")
+
+
+def counted(number: int, one: str, many: str = "") -> str:
+    """Write a number of things."""
+    return f"{number} {one if number == 1 else many or one + 's'}"
 
 
 def show_notices(output: Output, problem: Problem) -> None:

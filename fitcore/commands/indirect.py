@@ -87,7 +87,7 @@ def command(
 def table(result: IndirectResult) -> Table:
     """Tabulate direct against indirect, the largest tension first."""
     from fitcore.commands import tables
-    from fitcore.commands.rounding import number, with_error
+    from fitcore.rounding import number, shared_power, with_error
 
     made = tables.table(
         "Direct against indirect",
@@ -100,11 +100,14 @@ def table(result: IndirectResult) -> Table:
     )
     for row in sorted(result.rows, key=lambda row: -abs(row.tension or 0.0)):
         direct = "-"
+        errors = [x for x in row.direct_error or () if x > 0]
+        power = shared_power(row.direct, row.value, error=min(errors, default=None))
         if row.direct is not None and row.direct_error is not None:
-            direct = with_error(row.direct, *row.direct_error)
+            direct = with_error(row.direct, *row.direct_error, power=power)
         implied = "-"
         if row.value is not None and row.interval_68 is not None:
-            implied = with_error(row.value, row.interval_68[1] - row.value, row.value - row.interval_68[0])
+            low, high = row.interval_68
+            implied = with_error(row.value, high - row.value, row.value - low, power=power)
         elif row.value is not None:
             implied = number(row.value)
         made.add_row(

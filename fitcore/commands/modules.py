@@ -43,6 +43,44 @@ def load_modules(paths: Iterable[str]) -> None:
         _check_catalogue()
 
 
+def modules_of_run(folder: Path, given: Iterable[str] = ()) -> tuple[str, ...]:
+    """Return the copies of a run's modules in its folder, without those that were given anew.
+
+    Parameters
+    ----------
+    folder : Path
+        A run folder, or anything else (which has none).
+    given : iterable of str
+        Modules named on the command line; they stand in for copies of the same name.
+    """
+    from fitcore.commands.run_folder import read_record
+
+    record = read_record(folder) or {}
+    names = [Path(path).name for path in record.get("options", {}).get("modules", ())]
+    taken = {Path(path).name for path in given}
+    return tuple(str(folder / name) for name in names if name not in taken)
+
+
+def check_hypotheses(names: Iterable[str]) -> None:
+    """Refuse hypotheses that nobody declared, and say which there are and how to add one.
+
+    Raises
+    ------
+    InputError
+    """
+    from observables import catalogue
+
+    known = catalogue.hypothesis_names()
+    own = [name for name in known if name != "standard"]
+    there = f"the registered ones are {', '.join(own)}" if own else "none is registered besides 'standard'"
+    unknown = [name for name in names if name not in known]
+    if unknown:
+        raise input_error(
+            f"unknown hypothesis {', '.join(map(repr, unknown))}: {there}; declare one in a Python file "
+            "(DEVELOPERS.md shows how) and give that file with --module FILE.py"
+        )
+
+
 def _load(file: Path) -> None:
     try:
         source = file.read_bytes()

@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
 
-from fitcore.commands.completion import complete_inputs
+from fitcore.commands.completion import complete_entries, complete_inputs
 from fitcore.commands.output import Output
 
 if TYPE_CHECKING:
@@ -40,6 +40,28 @@ class ProblemRequest:
     hypothesis: tuple[str, ...] = ()
     theory_errors: str = "as-given"
     modules: tuple[str, ...] = ()
+    name: str = ""
+
+    @classmethod
+    def of(cls, **options: Any) -> ProblemRequest:
+        """Make the request; a run folder as INPUTS stands for its exact inputs and its modules."""
+        from fitcore.commands.run_folder import read_record
+
+        place = Path(options["inputs"])
+        folder = place.parent if place.name == "inputs.toml" else place
+        record = read_record(folder) if place.name else None
+        if record is not None:
+            from fitcore.commands.errors import input_error
+            from fitcore.commands.modules import modules_of_run
+
+            if not (folder / "inputs.toml").is_file():
+                raise input_error(
+                    f"{folder}: is a run folder without inputs.toml; give inputs or another run"
+                )
+            options["inputs"] = str(folder / "inputs.toml")
+            options["name"] = str(record.get("inputs", {}).get("name", ""))
+            options["modules"] = (*options["modules"], *modules_of_run(folder, options["modules"]))
+        return cls(**options)
 
     def load(self) -> Problem:
         """Read the user's modules and the inputs, and compile the problem.
@@ -49,18 +71,19 @@ class ProblemRequest:
         InputError, UnknownNameError
             As `Problem.load` and `load_modules` do.
         """
-        from fitcore.commands.modules import load_modules
-        from fitcore.problem import Problem
+        from dataclasses import replace
 
+        from fitcore.commands.modules import check_hypotheses, load_modules
+        from fitcore.problem import Problem
+        from likelihoods import load_inputs
+
+        refuse_chain(self.inputs)
         load_modules(self.modules)
-        return Problem.load(
-            self.inputs,
-            hypothesis="+".join(self.hypothesis) or "standard",
-            only=self.only,
-            without=self.without,
-            settings=self.settings,
-            theory_errors=self.theory_errors,
-        )
+        check_hypotheses(self.hypothesis)
+        inputs = load_inputs(self.inputs, only=self.only, without=self.without, settings=self.settings)
+        if self.name:
+            inputs = replace(inputs, name=self.name)
+        return Problem(inputs, "+".join(self.hypothesis) or "standard", theory_errors=self.theory_errors)
 
     def describe(self) -> dict[str, Any]:
         """Return the request as plain data, for the record of a run."""
@@ -73,6 +96,30 @@ class ProblemRequest:
             "theory_errors": self.theory_errors,
             "modules": list(self.modules),
         }
+
+
+def refuse_chain(source: str) -> None:
+    """Say what to do with a chain file where inputs or a run are wanted.
+
+    Raises
+    ------
+    InputError
+        If `source` is an HDF5 file.
+    """
+    try:
+        if not Path(source).is_file():  # a pipe would wait for ever
+            return
+        with Path(source).open("rb") as stream:
+            found = stream.read(8)
+    except (OSError, ValueError):  # told better by whoever reads the inputs
+        return
+    if found == b"\x89HDF\r\n\x1a\n":
+        from fitcore.commands.errors import input_error
+
+        raise input_error(
+            f"{source}: is a chain file, not inputs or a run folder; `weakmix chain derive {source} NAME...` computes "
+            "quantities at its points, `weakmix chain summary` tabulates it"
+        )
 
 
 @dataclass(frozen=True)
@@ -132,22 +179,30 @@ def problem_options(function: Command) -> Command:
     """Add INPUTS and the options that choose and change its entries; passes `request`."""
     keys = ("inputs", "only", "without", "settings", "hypothesis", "theory_errors", "modules")
     return _chain(
-        _gathered("request", ProblemRequest, keys)(function),
+        _gathered("request", ProblemRequest.of, keys)(function),
         [
             click.argument("inputs", metavar="INPUTS", shell_complete=complete_inputs),
             click.option(
-                "--only", multiple=True, metavar="ID-OR-GROUP", help="Keep only these entries; repeatable."
+                "--only",
+                multiple=True,
+                metavar="ID-OR-GROUP",
+                shell_complete=complete_entries,
+                help="Keep only these entries, or those of a kind (theory, experiment); repeatable.",
             ),
             click.option(
-                "--without", multiple=True, metavar="ID-OR-GROUP", help="Leave these entries out; repeatable."
+                "--without",
+                multiple=True,
+                metavar="ID-OR-GROUP",
+                shell_complete=complete_entries,
+                help="Leave these entries out, or those of a kind; repeatable.",
             ),
             click.option(
                 "--set",
                 "settings",
                 multiple=True,
                 metavar="ID.KEY=NUMBER",
-                help="Change an entry for this run, in the unit of its file, e.g. frequency-Bd.error=0.001; "
-                "repeatable.",
+                help="Change an entry for this run, e.g. gamma-average.error=2, 'gamma-average.error=[2, 3]' or "
+                "'V-ub.error=1e-4 1': in the unit of its file, or the one written behind; repeatable.",
             ),
             hypothesis_option,
             click.option(

@@ -99,7 +99,7 @@ def command(
 def tables_of(result: OutlookResult) -> list[Table]:
     """Tabulate the changed errors, and the intervals before and after."""
     from fitcore.commands import tables
-    from fitcore.commands.rounding import number, with_error
+    from fitcore.rounding import like_error, shared_power, with_error
 
     changed = tables.table(
         f"Errors of {result.title}" if result.title else "Errors",
@@ -109,7 +109,9 @@ def tables_of(result: OutlookResult) -> list[Table]:
         ("unit", "whole"),
     )
     for name, now, later, unit in result.changed:
-        changed.add_row(name, number(now, 3), number(later, 3), tables.shown_unit(unit))
+        finer = min(now, later)  # both with its decimals
+        power = shared_power(now, later)
+        changed.add_row(name, *(like_error(x, finer, power) for x in (now, later)), tables.shown_unit(unit))
     made = tables.table(
         "Expected intervals, 68.27 %",
         ("quantity", "whole"),
@@ -119,8 +121,9 @@ def tables_of(result: OutlookResult) -> list[Table]:
         ("narrower by", "right"),
     )
     for row in result.rows:
+        power = shared_power(row.value, *row.now_68)
         cells = [
-            with_error(row.value, high - row.value, row.value - low)
+            with_error(row.value, high - row.value, row.value - low, power=power)
             for low, high in (row.now_68, row.future_68)
         ]
         made.add_row(row.name, *cells, tables.shown_unit(row.unit), f"{row.gain:.2f}")

@@ -22,7 +22,7 @@ __all__ = ["Comparison", "read_comparison"]
 
 @dataclass(frozen=True)
 class Comparison:
-    """Profile results read back from a run folder.
+    """Results of a fit or a profile read back from a run folder.
 
     Attributes
     ----------

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Any
 
 from rich.text import Text
 
-from fitcore.commands.rounding import interval, number, with_error
 from fitcore.commands.tables import shown_unit, table
+from fitcore.rounding import interval, number, with_error
 
 if TYPE_CHECKING:
     from rich.table import Table
@@ -39,30 +39,53 @@ def verdict(result: SampleResult) -> list[Text]:
     return lines
 
 
-def summary(made: PosteriorSummary, profile: Mapping[str, Any] | None = None) -> Table:
-    """Tabulate a posterior, beside the profile intervals of a fit where there are any."""
-    profile = profile or {}
+def summary(made: PosteriorSummary, fit: Mapping[str, Any] | None = None) -> Table:
+    """Tabulate a posterior, beside the intervals of a fit, each with its method, where there are any."""
+    fit = fit or {}
     levels = list(made.rows[0].intervals) if made.rows else []
     columns: list[tuple[str, str]] = [("name", "name"), ("mean and width", "whole")]
     columns += [(f"{100 * level:.4g} % credible", "whole") for level in levels]
-    if profile:
-        columns.append(("profile 68.27 %", "spare"))
+    if fit:
+        columns.append(("fit 68.27 %", "spare"))
     columns += [("unit", "whole"), ("effective", "spare")]
-    result = table(f"Posterior ({made.kind} intervals)", *columns)
+    result = table(f"Posterior ({made.kind} intervals)", *columns, caption=exceptions(made))
     for row in made.rows:
         cells = [row.name, with_error(row.mean, row.error)]
         cells += [_regions(row, level) for level in levels]
-        if profile:
-            one = profile.get(row.name)
+        if fit:
+            one = fit.get(row.name)
             ends = None if one is None else one.interval_68
-            cells.append("-" if ends is None else interval(ends[0], ends[1]))
+            cells.append("-" if one is None or ends is None else f"{interval(ends[0], ends[1])} {one.method}")
         cells += [shown_unit(row.unit), f"{row.effective:.0f}"]
         result.add_row(*cells)
     return result
 
 
+REASONS = {
+    "flat": "the density is too flat for these samples to tell where it is highest",
+    "not nested": "the highest-density regions of these samples do not lie inside each other",
+}
+
+
+def exceptions(made: PosteriorSummary) -> str:
+    """Say which rows have equal-tailed intervals although highest density was asked for, and why."""
+    said = []
+    for reason, words in REASONS.items():
+        names = [row.name for row in made.rows if row.reason == reason]
+        if names:
+            said.append(f"equal-tailed intervals for {', '.join(names)}: {words}")
+    return "; ".join(said)
+
+
 def _regions(row: PosteriorRow, level: float) -> str:
     return " or ".join(interval(low, high, row.error) for low, high in row.intervals[level])
+
+
+STATUS = {
+    "reliable": "the chain is long enough to trust the autocorrelation times",
+    "tentative": "the chain is too short to trust the autocorrelation times: at least 40 of the longest are needed",
+    "unusable": "the chain is too short for any autocorrelation time: not even 10 of the longest",
+}
 
 
 def diagnostics(made: Diagnostics, *, most: int = 8) -> Table:
@@ -75,12 +98,14 @@ def diagnostics(made: Diagnostics, *, most: int = 8) -> Table:
         ("R-hat", "whole"),
     ]
     if check is not None:
-        columns.append(("width / without independence move", "spare"))
+        columns.append(("width check", "spare"))
     modes = ", ".join(f"{share:.0%}" for share in made.walkers_per_mode)
     caption = (
         f"acceptance {made.acceptance:.2f}, longest stay {made.longest_stay} steps, samples per mode {modes}; "
-        f"the status of the autocorrelation time is {made.status}"
+        f"{STATUS[made.status]}"
     )
+    if check is not None:
+        caption += "; width check: width over that of a short control run in small steps only, 1 is expected"
     result = table("Slowest parameters", *columns, caption=caption)
     order = sorted(range(len(made.parameter_names)), key=lambda i: -made.autocorrelation_time[i])
     for i in order[:most]:

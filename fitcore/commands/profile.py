@@ -50,7 +50,12 @@ def command(
     """Scan one or two quantities of INPUTS, everything else refitted at each point.
 
     NAME is a parameter or any real quantity, in its unit (see `weakmix find`). Without LOW:HIGH a range around
-    the best fit is chosen; POINTS is 201 for one name and 100 for each of two.
+    the best fit is chosen; POINTS is 201 for one name and 100 for each of two (50 for bands in derived quantities).
+
+    With --each, a band is the profile of the entries of one measured quantity alone, with the theory inputs that it
+    needs. Directions that the plane does not show (lambda and A, for the apex) are held, within their uncertainties,
+    where the measurements that hardly change over the frame put them at the best fit: the same for every band, so
+    that none is bent by another measurement. A band is counted from its lowest point in the frame.
 
     \b
       weakmix profile averages-2026 angle_alpha

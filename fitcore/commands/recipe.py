@@ -26,17 +26,18 @@ def command(name: str, hypothesis: tuple[str, ...], modules: tuple[str, ...], ou
 
     \b
       weakmix recipe mixing_frequency_Bd
-      weakmix recipe M12_Bs --hypothesis mixing-Bs
+      weakmix recipe my_ratio --module my_quantities.py
     """
     from rich.padding import Padding
 
     from fitcore.commands import tables
-    from fitcore.commands.modules import load_modules
-    from fitcore.commands.rounding import number, with_error
+    from fitcore.commands.modules import check_hypotheses, load_modules
+    from fitcore.rounding import number, with_error
     from observables import catalogue
     from observables.graph import find_parameters
 
     load_modules(modules)
+    check_hypotheses(hypothesis)
     overlay = catalogue.get_hypothesis("+".join(hypothesis) or "standard")
     node: Any = overlay.parameters[name] if name in overlay.parameters else catalogue[name]
     leaves = find_parameters(catalogue, (name,), overlay)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -19,10 +19,10 @@ if TYPE_CHECKING:
     from fitcore.problem import Problem
     from fitcore.studies.constraints import Constraint, Division
 
-#: Points of the overview of a plane of bands.
-OVERVIEW_POINTS = (45, 37)
+#: Points of the overview of a plane of bands, for constraints that need no other inputs and for those that do.
+OVERVIEW_POINTS = {True: (129, 81), False: (45, 37)}
 #: A constraint that fails on more of the frame than this is not drawn.
-MOSTLY_LOST = 0.5
+LOST = 0.1
 #: Nor one whose region covers more of it than this.
 SILENT = 0.9
 
@@ -38,6 +38,14 @@ class ConstraintProfile:
 
 
 @dataclass(frozen=True)
+class Overview:
+    """The surroundings of the frame, and chi-square there; infinite where no other minimum is near."""
+
+    grids: list[np.ndarray]
+    chi2: np.ndarray
+
+
+@dataclass(frozen=True)
 class Scan:
     """All that one run of the command found."""
 
@@ -50,14 +58,20 @@ class Scan:
     each: tuple[ConstraintProfile, ...] = ()
     skipped: tuple[str, ...] = ()
     silent: tuple[str, ...] = ()
-    overview: Profile | None = None
+    overview: Overview | None = None
     others: Mapping[str, Profile] = field(default_factory=dict)
     other_intervals: Mapping[str, tuple[tuple[Any, ...], ...]] = field(default_factory=dict)
+    same_theory: tuple[str, ...] = ()
 
     @property
     def dof(self) -> int:
         """Number of quantities."""
         return len(self.profile.names)
+
+    @property
+    def theory_words(self) -> str:
+        """Treatment of theory errors, with the others that come to the same."""
+        return " = ".join((self.problem.theory_errors, *self.same_theory))
 
     @property
     def best(self) -> tuple[float, ...]:
@@ -107,8 +121,12 @@ def run(
     if each:
         return _with_each(scan, report)
     if others:
-        profiles, intervals = {}, {}
+        profiles, intervals, same = {}, {}, []
         for number, (way, other) in enumerate(others.items()):
+            if _same_terms(problem, other):  # the two treatments are one: a second curve would hide the first
+                same.append(way)
+                report(2 + number, 1 + len(others))
+                continue
             there = find_minima(other, rng=seed)
             if not there:
                 raise ConvergenceError(f"theory errors {way}: no possible start", there)
@@ -117,10 +135,18 @@ def run(
             )
             intervals[way] = _regions(profiles[way], levels)
             report(2 + number, 1 + len(others))
-        return Scan(
-            problem, levels, found, scan.regions, scan.start_chi2, others=profiles, other_intervals=intervals
-        )
+        return replace(scan, others=profiles, other_intervals=intervals, same_theory=tuple(same))
     return scan
+
+
+def _same_terms(first: Problem, second: Problem) -> bool:
+    """Whether two treatments of theory errors leave the same problem."""
+    return (
+        first.parameters == second.parameters
+        and [(e.id, e.value, e.plus, e.minus) for e in first.entries]
+        == [(e.id, e.value, e.plus, e.minus) for e in second.entries]
+        and np.array_equal(first.terms.correlation, second.terms.correlation)
+    )
 
 
 def _widened(
@@ -156,7 +182,13 @@ def _widened(
 def _regions(found: Profile, levels: Sequence[float]) -> tuple[tuple[Any, ...], ...]:
     if len(found.names) == 1:
         return tuple(tuple(found.interval(level)) for level in levels)
-    return tuple(tuple(find_regions(found, threshold(level, 2))) for level in levels)
+    from fitcore.studies.outline_refinement import refine_outline
+
+    heights = [threshold(level, 2) for level in levels]
+    return tuple(
+        tuple(refine_outline(found, region, height) for region in find_regions(found, height))
+        for height in heights
+    )
 
 
 def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
@@ -166,43 +198,69 @@ def _with_each(scan: Scan, report: Callable[[int, int], None]) -> Scan:
     theta = found.minimum_parameters
     half = [0.5 * float(np.ptp(grid)) for grid in found.grids]
     division = divide(problem, theta, found.names, half)
-    wide = _overview_grids(scan)
-    frames = (found.grids, wide) if wide else (found.grids,)
+    wide = {simple: _overview_grids(scan, points) for simple, points in OVERVIEW_POINTS.items()}
     steps = 1 + len(division.constraints)
-    overview = None
-    if wide:  # everything together is a spot at this scale: a coarse grid finds its other regions, the frame draws it
-        overview = profile(
-            problem, found.names, [grid[::2] for grid in wide], start=theta, minima=list(found.minima[1:4])
-        )
-    done, skipped, silent = [], [], []
+    overview = _elsewhere(scan, wide[False]) if wide[False] else None
+    derived = any(name not in problem.parameter_names for name in found.names)
+    highest = threshold(scan.levels[0], 2)
+    done: list[ConstraintProfile] = []
+    verdicts: dict[str, list[str]] = {"skipped": [], "silent": []}
     for number, constraint in enumerate(division.constraints):
         report(number + 1, steps)
+        around = wide[not (constraint.company or constraint.held)]
+        frames = (found.grids, around) if around else (found.grids,)
+        if derived:  # each point is a fit with constraints: a look at a few first
+            probe = profile_constraint(
+                problem, constraint, found.names, [[g[::8] for g in found.grids]], theta
+            )
+            if verdict := _unfit(probe, highest):
+                verdicts[verdict].append(constraint.name)
+                continue
         both = profile_constraint(problem, constraint, found.names, frames, theta)
-        if not both or both[0].flagged.mean() > MOSTLY_LOST:
-            skipped.append(constraint.name)
+        if verdict := _unfit(both, highest):
+            verdicts[verdict].append(constraint.name)
             continue
-        alone, around = both[0], both[1] if wide else None
-        lowest = float(np.min(np.where(alone.converged, alone.chi2, np.inf)))
-        if (alone.chi2 - lowest < threshold(scan.levels[0], 2)).mean() > SILENT:
-            silent.append(constraint.name)
-            continue
-        done.append(ConstraintProfile(constraint, alone, around, lowest))
+        alone = both[0]
+        lowest = _lowest(alone)
+        done.append(ConstraintProfile(constraint, alone, both[1] if around else None, lowest))
     report(steps, steps)
-    return Scan(
-        problem,
-        scan.levels,
-        found,
-        scan.regions,
-        scan.start_chi2,
-        division,
-        tuple(done),
-        tuple(skipped),
-        tuple(silent),
-        overview,
+    return replace(
+        scan,
+        division=division,
+        each=tuple(done),
+        skipped=tuple(verdicts["skipped"]),
+        silent=tuple(verdicts["silent"]),
+        overview=overview,
     )
 
 
-def _overview_grids(scan: Scan) -> list[np.ndarray]:
+def _lowest(alone: Profile) -> float:
+    return float(np.min(np.where(alone.converged, alone.chi2, np.inf)))
+
+
+def _unfit(profiles: Sequence[Profile], level: float) -> str:
+    """Why a constraint makes no band: "skipped" where it does not determine the plane, "silent" where it allows all."""
+    if not profiles or profiles[0].flagged.mean() > LOST:
+        return "skipped"
+    alone = profiles[0]
+    return "silent" if (alone.chi2 - _lowest(alone) < level).mean() > SILENT else ""
+
+
+def _elsewhere(scan: Scan, grids: list[np.ndarray]) -> Overview:
+    """Everything together, seen from afar: the frame draws it, unless another minimum as low lies outside the frame."""
+    found, problem = scan.profile, scan.problem
+    at = problem.linearise_quantities(found.minima, found.names)[0]
+    low = problem.chi2(found.minima) < found.minimum + threshold(scan.levels[-1], 2)
+    inside = np.all([(g[0] <= v) & (v <= g[-1]) for v, g in zip(at.T, found.grids, strict=True)], axis=0)
+    if not (low & ~inside).any():
+        return Overview(grids, np.full([grid.size for grid in grids], np.inf))
+    around = profile(
+        problem, found.names, grids, start=found.minimum_parameters, minima=list(found.minima[1:4])
+    )
+    return Overview(grids, around.chi2)
+
+
+def _overview_grids(scan: Scan, points: tuple[int, int]) -> list[np.ndarray]:
     """The whole triangle, where the plane is that of its apex; other planes have no natural whole."""
     from fitcore.commands.scan_figures import guides
 
@@ -214,5 +272,5 @@ def _overview_grids(scan: Scan) -> list[np.ndarray]:
         every = np.concatenate([line[:, axis] for line in lines])
         low = min(float(every.min()) - margin, float(grid[0]) - 0.05)
         high = max(float(every.max()) + 2.0 * margin, float(grid[-1]) + 0.08)
-        grids.append(np.linspace(low, high, OVERVIEW_POINTS[axis]))
+        grids.append(np.linspace(low, high, points[axis]))
     return grids

@@ -15,9 +15,20 @@ from observables.errors import InputError
 if TYPE_CHECKING:
     from fitcore.problem import Problem
 
-__all__ = ["Axis", "check_levels", "check_names", "make_grids", "number_of_points", "parse_axes", "range_text", "same_scale"]
+__all__ = [
+    "Axis",
+    "check_levels",
+    "check_names",
+    "make_grids",
+    "number_of_points",
+    "parse_axes",
+    "range_text",
+    "same_scale",
+]
 
 POINTS = {1: 201, 2: 100}
+#: Points along an axis of a plane of bands in quantities that are no parameters: every point is a fit with constraints.
+DERIVED_POINTS = 50
 MOST_POINTS = 1_000_000
 #: Standard deviations around the best fit that a plane of bands shows.
 BAND_FRAME = 15.0
@@ -133,8 +144,9 @@ def make_grids(
         ranges.append((low, high))
     if each and all(axis.low is None for axis in axes) and same_scale(problem, [axis.name for axis in axes]):
         ranges = _equal_frame(ranges)
+    derived = each and any(axis.name not in problem.parameter_names for axis in axes)
     return [
-        np.linspace(low, high, number_of_points(axis, len(axes)))
+        np.linspace(low, high, axis.points or (DERIVED_POINTS if derived else POINTS[len(axes)]))
         for axis, (low, high) in zip(axes, ranges, strict=True)
     ]
 
@@ -148,7 +160,7 @@ def same_scale(problem: Problem, names: Sequence[str]) -> bool:
 
 def _equal_frame(ranges: list[tuple[float, float]]) -> list[tuple[float, float]]:
     """A frame of the page's shape in which one unit is equally long both ways."""
-    from fitcore.figures.plane import BOX_HEIGHT, BOX_WIDTH
+    from fitcore.figures.plane_parts import BOX_HEIGHT, BOX_WIDTH
 
     halves = [0.5 * (high - low) for low, high in ranges]
     unit = max(halves[0] / BOX_WIDTH, halves[1] / BOX_HEIGHT)

@@ -30,7 +30,7 @@ def footer(scan: Scan) -> str:
     parts = [f"{inputs.name}{revision}", inputs.sha256[:8]]
     if scan.problem.hypothesis != "standard":
         parts.append(f"hypothesis {scan.problem.hypothesis}")
-    if not scan.others:
+    if not (scan.others or scan.same_theory):
         parts.append(f"theory errors {scan.problem.theory_errors}")
     return " - ".join(parts)
 
@@ -51,12 +51,20 @@ def _one(scan: Scan) -> style.Drawing:
 
     name = scan.profile.names[0]
     curves = []
-    every: dict[str, Any] = {scan.problem.theory_errors: (scan.profile, scan.regions)}
+    every: dict[str, Any] = {scan.theory_words: (scan.profile, scan.regions)}
     every |= {way: (other, scan.other_intervals[way]) for way, other in scan.others.items()}
     for way, (found, intervals) in every.items():
         place = int(np.argmin(found.delta_chi2))
         best = scan.best[0] if found is scan.profile else float(found.grids[0][place])
-        curves.append(Curve(way if scan.others else "", found.grids[0], found.delta_chi2, intervals, best))
+        curves.append(
+            Curve(
+                way if scan.others or scan.same_theory else "",
+                found.grids[0],
+                found.delta_chi2,
+                intervals,
+                best,
+            )
+        )
     return draw(
         name,
         curves,
@@ -91,17 +99,7 @@ def _plane(scan: Scan) -> style.Drawing:
         if scan.overview is None
         else ((scan.overview.grids[0], scan.overview.grids[1], scan.overview.chi2 - found.minimum)),
     )
-    caption = ""
-    if scan.division is not None:
-        fixing = ", ".join(scan.division.fixing)
-        if len(scan.division.fixing) > 8:
-            fixing = f"the {len(scan.division.fixing)} measurements that hardly change over the frame"
-        caption = (
-            "Each band: the 68.3 % region, two parameters, of one measured quantity alone, refitted with the theory "
-            f"inputs it needs and with {fixing} (which fix the other directions), counted from its lowest point in "
-            "the frame. Two symbols: both together, so that common theory inputs cancel; the first alone goes without "
-            "the second."
-        )
+    caption = _caption(scan) if scan.each else ""
     return draw(
         (first, second),
         together,
@@ -117,6 +115,64 @@ def _plane(scan: Scan) -> style.Drawing:
     )
 
 
+def _caption(scan: Scan) -> str:
+    """What a band is."""
+    from fitcore.figures.symbols import symbol_text
+    from fitcore.rounding import with_error
+
+    division = scan.division
+    if division is None:
+        return ""
+    words, level = _levels(scan)[0]
+    text = (
+        f"Each band: {words} region for two parameters (Delta chi-square below {level:.2f}) of one measured quantity "
+        "alone, counted from its lowest point in the frame, refitted with the theory inputs that it needs"
+    )
+    shown = [h for h in division.held if not h.across]
+    if shown:
+        held = ", ".join(
+            f"{symbol_text(scan.problem.latex_of(h.parameter), h.parameter)} = {with_error(h.value, h.error, h.error)}"
+            for h in shown
+        )
+        text += (
+            f" and with {held}, as the {len(division.fixing)} measurements that hardly change over the frame give "
+            "them at the best fit (the same for every band)"
+        )
+    text += "."
+    if any(len(part.constraint.quantities) > 1 for part in scan.each):
+        text += " Two symbols joined: both measured quantities at once, so that common theory errors cancel."
+    return text
+
+
+#: Beginnings of names of quantities, and a group whose family they belong to where an entry's groups say nothing.
+_FAMILY_OF_NAMES = (
+    ("epsilon_K", "kaon-epsilon"),
+    ("mixing_frequency", "oscillation"),
+    ("width_difference", "oscillation"),
+    ("sine_2", "cp-asymmetry"),
+    ("cosine_2", "cp-asymmetry"),
+    ("asymmetry", "cp-asymmetry"),
+    ("semileptonic_asymmetry", "cp-asymmetry"),
+    ("isospin_alpha", "cp-asymmetry"),
+    ("angle_alpha", "cp-asymmetry"),
+    ("angle_beta", "cp-asymmetry"),
+    ("phase_phi", "cp-asymmetry"),
+    ("angle_gamma", "tree-phase"),
+    ("magnitude_", "magnitude"),
+    ("branching_Bu_tau_nu", "magnitude"),
+    ("branching_", "rare"),
+)
+
+
+def _family(groups: tuple[str, ...], quantity: str) -> style.Family:
+    """Family by the groups, or else by the quantity."""
+    family = style.family_of(groups)
+    if family is not style.OTHER:
+        return family
+    group = next((word for start, word in _FAMILY_OF_NAMES if quantity.startswith(start)), "")
+    return style.family_of((group,)) if group else family
+
+
 def _band(scan: Scan, part: ConstraintProfile) -> Band:
     from fitcore.figures.outlines import refine
     from fitcore.figures.plane import Band
@@ -127,11 +183,12 @@ def _band(scan: Scan, part: ConstraintProfile) -> Band:
     if part.overview is not None:
         around = part.overview
         delta = np.where(around.flagged, np.inf, around.chi2 - part.lowest)
-        overview = refine(around.grids[0], around.grids[1], delta, around.slopes)
+        times = 5 if around.grids[0].size < 60 else 2
+        overview = refine(around.grids[0], around.grids[1], delta, around.slopes, times)
     return Band(
         constraint.name,
         r"\,{+}\,".join(latex) if all(latex) else "",
-        style.family_of(constraint.groups),
+        _family(constraint.groups, constraint.quantities[0]),
         part.profile.grids[0],
         part.profile.grids[1],
         part.profile.chi2 - part.lowest,

@@ -30,9 +30,15 @@ def notes(scan: Scan) -> list[str]:
         said.append(
             f"{failed} of {found.chi2.size} grid points are flagged: not minimised, their chi-square is too high"
         )
+    if scan.same_theory:
+        said.append(
+            f"theory errors {' and '.join(scan.same_theory)} are the same as {scan.problem.theory_errors} here: "
+            "one curve stands for both"
+        )
     if scan.skipped:
         said.append(
-            f"not drawn alone, because alone they do not determine most of the plane: {', '.join(scan.skipped)}"
+            "not drawn alone, because alone they do not determine the two quantities in much of the plane: "
+            f"{', '.join(scan.skipped)}"
         )
     if scan.silent:
         said.append(
@@ -110,13 +116,18 @@ def to_dict(scan: Scan) -> dict[str, Any]:
                 "name": part.constraint.name,
                 "entries": list(part.constraint.entries),
                 "with": list(part.constraint.company),
+                "held": [h.parameter for h in part.constraint.held],
                 "chi2_share": part.constraint.chi2,
                 "lowest": part.lowest,
                 "chi2": part.profile.chi2.tolist(),
             }
             for part in scan.each
         ]
-    if scan.others:
+    if scan.division is not None:
+        content["held"] = {h.parameter: {"value": h.value, "error": h.error} for h in scan.division.held}
+        content["held_from"] = list(scan.division.fixing)
+    if scan.others or scan.same_theory:
+        content["theory_errors_same"] = list(scan.same_theory)
         content["theory_errors_compared"] = {
             way: {
                 "chi2": other.chi2.tolist(),

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from fitcore.commands import tables
-from fitcore.commands.rounding import interval, number
 from fitcore.minimise.profile import threshold
+from fitcore.rounding import interval, like_error, number, with_error
 
 if TYPE_CHECKING:
     from rich.table import Table
@@ -17,6 +17,8 @@ if TYPE_CHECKING:
 
 __all__ = ["caution", "number", "percent", "point", "regions"]
 
+#: Does not break where a head wraps.
+CHI2 = "chi\N{NON-BREAKING HYPHEN}square"
 _EXACT = {0.683: 68.27, 0.954: 95.45, 0.9545: 95.45, 0.997: 99.73, 0.9973: 99.73}
 
 
@@ -45,11 +47,11 @@ def _intervals(scan: Scan) -> list[Table]:
         f"Intervals of {name}" + (f" in {unit}" if unit else ""),
         ("theory errors", "whole"),
         ("level", "right"),
-        ("Delta chi-square", "right"),
+        (f"Delta {CHI2}", "right"),
         ("interval", "whole"),
         "ends",
     )
-    ways = {scan.problem.theory_errors: scan.regions, **scan.other_intervals}
+    ways = {scan.theory_words: scan.regions, **scan.other_intervals}
     for way, parts in ways.items():
         for level, pieces in zip(scan.levels, parts, strict=True):
             head = (way, percent(level), f"{threshold(level, 1):.3f}")
@@ -72,10 +74,10 @@ def _plane(scan: Scan) -> Table:
     made = tables.table(
         "Regions, two parameters",
         ("level", "right"),
-        ("Delta chi-square", "right"),
+        (f"Delta {CHI2}", "right"),
         (first, "whole"),
         (second, "whole"),
-        ("lowest chi-square inside", "right"),
+        (f"lowest {CHI2}", "right"),
         "outline",
     )
     for level, parts in zip(scan.levels, scan.regions, strict=True):
@@ -99,26 +101,49 @@ def _each(scan: Scan) -> list[Any]:
     if not scan.each or scan.division is None:
         return []
     first, second = scan.profile.names
+    level = scan.levels[0]
+    held = ", ".join(
+        f"{h.parameter} = {with_error(h.value, h.error, h.error)}" for h in scan.division.held if not h.across
+    )
+    caption = (
+        "counted from the constraint's lowest point in the range; 'beyond' means that it goes on outside"
+    )
+    if held:
+        caption += f"\nthe same for all: {held}, from the {len(scan.division.fixing)} measurements that hardly change"
     made = tables.table(
-        "Constraints, each alone",
-        ("constraint", "whole"),
+        f"Constraints, each alone: {percent(level)} (Delta chi-square {threshold(level, 2):.3f}, two parameters)",
+        ("constraint", "name"),
         "entries",
-        ("chi-square at the best fit", "right"),
-        (f"{first} in range", "whole"),
-        (f"{second} in range", "whole"),
-        caption="extent of its 68.27 % region (two parameters) inside the range, from its lowest point there",
+        (f"{CHI2} at best fit", "right"),
+        (first, "whole"),
+        (second, "whole"),
+        caption=caption,
     )
     for part in scan.each:
-        inside = part.profile.chi2 - part.lowest < threshold(0.683, 2)
-        cells = []
-        for axis in (0, 1):
-            at = np.flatnonzero(inside.any(axis=1 - axis))
-            grid = part.profile.grids[axis]
-            cells.append(interval(float(grid[at[0]]), float(grid[at[-1]])) if at.size else "-")
+        inside = part.profile.chi2 - part.lowest < threshold(level, 2)
+        cells = [
+            _extent(part.profile.grids[axis], np.flatnonzero(inside.any(axis=1 - axis))) for axis in (0, 1)
+        ]
         made.add_row(
             part.constraint.name, ", ".join(part.constraint.entries), f"{part.constraint.chi2:.2f}", *cells
         )
     return [made]
+
+
+def _extent(grid: np.ndarray, at: np.ndarray) -> str:
+    """From where to where grid points lie inside; an end at the edge of the range is none."""
+    if not at.size:
+        return "-"
+    low_open, high_open = at[0] == 0, at[-1] == grid.size - 1
+    step = float(np.ptp(grid)) / 10.0
+    low, high = like_error(float(grid[at[0]]), step), like_error(float(grid[at[-1]]), step)
+    if low_open and high_open:
+        return "beyond both ends"
+    if low_open:
+        return f"beyond {low} to {high}"
+    if high_open:
+        return f"{low} to beyond {high}"
+    return interval(float(grid[at[0]]), float(grid[at[-1]]), step)
 
 
 def caution(dof: int) -> str:

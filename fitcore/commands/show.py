@@ -17,7 +17,7 @@ from fitcore.commands.output import Output
 def command(request: ProblemRequest, sources: bool, output: Output) -> None:
     """List the entries of INPUTS with ids, values, groups and marks.
 
-    The ids and groups are what --only, --without and --set take.
+    The ids, groups and kinds are what --only and --without take, the ids what --set takes.
 
     \b
       weakmix show averages-2026
@@ -25,7 +25,7 @@ def command(request: ProblemRequest, sources: bool, output: Output) -> None:
     """
     from fitcore.commands import tables
     from fitcore.commands.fit import announce
-    from fitcore.commands.rounding import number, with_error
+    from fitcore.rounding import number, with_error
 
     problem = request.load()
     inputs = problem.inputs
@@ -64,7 +64,8 @@ def command(request: ProblemRequest, sources: bool, output: Output) -> None:
     free = ", ".join(f"{p.name}{'' if p.unit == '1' else f' [{p.unit}]'}" for p in problem.parameters)
     output.show(f"Free parameters ({problem.n_parameters}): {free}")
     groups = sorted({group for entry in problem.entries for group in entry.groups})
-    output.show(f"Groups: {', '.join(groups) if groups else 'none'}")
+    kinds = sorted({entry.kind for entry in problem.entries})
+    output.show(f"Groups: {', '.join(groups) if groups else 'none'}; kinds: {', '.join(kinds)}")
     output.write_json(
         {
             "title": inputs.title,

@@ -6,13 +6,14 @@ import copy
 import math
 import re
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any, Literal
 
 from rich import box
 from rich.table import Table
 from rich.text import Text
 
-from fitcore.commands.rounding import (
+from fitcore.rounding import (
     interval,
     like_error,
     number,
@@ -33,6 +34,7 @@ NOTICE_ORDER = ("replaced", "dropped", "changed", "inflated", "shared", "recalle
 SHORTEST_NAME = 14
 #: Text columns are not squeezed below this where a spare column can go instead.
 READABLE = 24
+
 
 class HouseTable(Table):
     """A table that gives up its least columns, then folds names, before it breaks a number.
@@ -246,31 +248,12 @@ def caution(result: FitResult) -> str:
 
 def estimate(one: Estimate) -> str:
     """Write an estimate with its 68 % errors, or the range that a flat theory error allows."""
-    if one.method == "range" and one.interval_68 is not None:
-        return f"range {interval(*one.interval_68)}"
-    sides = _sides(one)
-    if sides is not None:
-        return with_error(one.value, *sides, power=_power(one))
-    if one.error is not None:
-        return with_error(one.value, one.error)
-    bounded = one.interval_68 is not None and any(
-        end is not None and math.isfinite(end) for end in one.interval_68
-    )
-    return f"{number(one.value)} ({'open on one side' if bounded else 'unconstrained'})"
-
-
-def _sides(one: Estimate) -> tuple[float, float] | None:
-    """Upward and downward 68 % errors, if both ends exist and hold the value."""
-    if one.interval_68 is None or None in one.interval_68:
-        return None
-    low, high = (float(end) for end in one.interval_68)
-    plus, minus = high - one.value, one.value - low
-    return (plus, minus) if plus >= 0 and minus >= 0 and math.isfinite(plus + minus) else None
+    return str(replace(one, unit="1"))  # the unit has its own column
 
 
 def _power(one: Estimate) -> int:
     """Power of ten of the whole row: value and interval ends share it."""
-    sides = _sides(one) or ((one.error, one.error) if one.error is not None else ())
+    sides = one.sides or ((one.error, one.error) if one.error is not None else ())
     positive = [side for side in sides if side is not None and side > 0]
     return shared_power(one.value, *positive, error=min(positive, default=None))
 
@@ -290,7 +273,10 @@ def estimates(title: str, rows: Mapping[str, Estimate]) -> Table:
         made.add_row(
             name,
             estimate(one),
-            *("-" if one.method == "range" else _interval(ends, one) for ends in (one.interval_68, one.interval_95)),
+            *(
+                "-" if one.method == "range" else _interval(ends, one)
+                for ends in (one.interval_68, one.interval_95)
+            ),
             shown_unit(one.unit),
             one.method if one.interval_68 is not None else "-",
         )
@@ -369,9 +355,15 @@ def other_minima(result: FitResult) -> Table | None:
         made.add_row(
             f"{minimum.chi2:.2f}",
             f"{minimum.chi2 - result.chi2:+.2f}",
-            *(number(minimum.parameters.get(name), 4) for name in names),
+            *(_elsewhere(minimum.parameters.get(name), result.parameters[name]) for name in names),
         )
     return made
+
+
+def _elsewhere(value: float | None, best: Estimate) -> str:
+    """Write a parameter at another minimum with the decimals that it has at the best one."""
+    smallest = min((side for side in best.sides or () if side > 0), default=best.error)
+    return significant(value, 4) if value is None or not smallest else like_error(value, smallest)
 
 
 def names(title: str, rows: Iterable[tuple[str, str, str, str]]) -> Table:

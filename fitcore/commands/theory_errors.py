@@ -30,7 +30,7 @@ def compare(request: ProblemRequest, seed: int = 0) -> tuple[Treatment, ...]:
 def table(treatments: tuple[Treatment, ...]) -> Table:
     """Tabulate the treatments; a plateau is given as an interval."""
     from fitcore.commands import tables
-    from fitcore.commands.rounding import interval, with_error
+    from fitcore.rounding import interval, shared_power, with_error
 
     made = tables.table(
         "Treatment of theory errors",
@@ -40,13 +40,13 @@ def table(treatments: tuple[Treatment, ...]) -> Table:
     )
     for name in treatments[0].rows:
         cells = []
+        power = shared_power(*(treatment.rows[name].value for treatment in treatments))
         for treatment in treatments:
             row = treatment.rows[name]
             low, high = row.interval_68
-            text = with_error(row.value, high - row.value, row.value - low)
-            cells.append(
-                text if row.plateau is None else f"{text}  {interval(*row.plateau, 0.5 * (high - low))}"
-            )
+            text = with_error(row.value, high - row.value, row.value - low, power=power)
+            plateau = "" if row.plateau is None else f"  {interval(*row.plateau, 0.5 * (high - low), power)}"
+            cells.append(text + plateau)
         made.add_row(name, *cells)
     made.add_row("chi-square", *(f"{treatment.chi2:.2f}" for treatment in treatments))
     return made

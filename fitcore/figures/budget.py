@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 from fitcore.figures import style
 from fitcore.figures.symbols import symbol_text
+from fitcore.rounding import significant
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -77,7 +78,12 @@ def draw(
         axes.text(0.2, 0.32, head, fontsize=13, fontweight="bold", va="center")
         axes.text(0.2, 0.57, title, fontsize=7.5, color=style.FAINT_INK, va="center")
         axes.text(
-            WIDTH - 0.2, 0.57, f"the whole: {error:.2g}{unit_text}", fontsize=8, ha="right", va="center"
+            WIDTH - 0.2,
+            0.57,
+            f"the whole: {significant(error)}{unit_text}",
+            fontsize=8,
+            ha="right",
+            va="center",
         )
         reach = max(
             [
@@ -130,7 +136,7 @@ def _scale(axes: Axes, reach: float, height: float) -> None:
     axes.fill_between([0.2, 0.5], y - 0.05, y + 0.05, color=style.FAINT_INK, lw=0)
     axes.text(0.58, y, "shift: refitted with this input up by its error", fontsize=6.5, va="center")
     axes.plot([3.5, 3.5], [y - 0.08, y + 0.08], color=style.INK, lw=1.4)
-    axes.text(3.58, y, "removal: what vanishes if this were known exactly", fontsize=6.5, va="center")
+    axes.text(3.58, y, "if exact: what vanishes if this were known exactly", fontsize=6.5, va="center")
 
 
 def _row(axes: Axes, bar: Bar, y: float, error: float, reach: float, *, signed: bool) -> None:

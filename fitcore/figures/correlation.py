@@ -53,7 +53,8 @@ def chosen(
     if len(pool) <= most:
         return pool
     largest = {
-        i: max((abs(matrix[i][j]) for j in pool if j != i and _known(matrix[i][j])), default=0.0) for i in pool
+        i: max((abs(matrix[i][j]) for j in pool if j != i and _known(matrix[i][j])), default=0.0)
+        for i in pool
     }
     return sorted(sorted(pool, key=lambda i: -largest[i])[:most])
 
@@ -149,7 +150,9 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
         axes.text(x + 3.5, key, "full cell 100 %; numbers in %", fontsize=7.5, va="center")
         note = "" if n == len(pool) else f"  -  the {n} most correlated of {len(pool)} parameters"
         if len(pool) < len(names):
-            note += f"  -  {len(names) - len(pool)} without correlations (flat ranges or unconstrained) left out"
+            note += (
+                f"  -  {len(names) - len(pool)} without correlations (flat ranges or unconstrained) left out"
+            )
         style.footer(figure, footer + note, left=0.16 / width, baseline=0.14 / height)
     rows = tuple(
         (names[i], names[j], matrix[i][j])

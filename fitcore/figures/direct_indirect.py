@@ -98,7 +98,7 @@ def _key(axes: Axes) -> None:
     axes.text(LEFT + 0.38, y, "direct, in the colour of its family", fontsize=7, va="center")
     axes.plot([LEFT + 2.35, LEFT + 2.65], [y, y], color=style.NAVY, lw=6.2, solid_capstyle="butt")
     axes.text(LEFT + 2.73, y, "everything else (thin: 95.0 %)", fontsize=7, va="center")
-    axes.text(WIDTH - 0.3, y, "tension", fontsize=7, va="center", ha="right")
+    axes.text(WIDTH - 0.3, y, "tension (bold: 2 or more)", fontsize=7, va="center", ha="right")
 
 
 def _row(axes: Axes, pair: Pair, y: float) -> None:
@@ -120,7 +120,7 @@ def _row(axes: Axes, pair: Pair, y: float) -> None:
             for end in shown
         ]
     scale = scale_for(shown, LEFT, RIGHT)
-    draw_scale(axes, scale, y, below=0.16)
+    draw_scale(axes, scale, y, below=0.16, unit=pair.unit)
     if own is not None and pair.direct is not None:
         bar(axes, scale, y - 0.085, own, None, pair.direct, pair.family.colour, f"direct:{pair.name}")
     bar(

@@ -9,10 +9,11 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 from fitcore.figures import style
+from fitcore.rounding import fixed, shared_power, significant
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -21,11 +22,13 @@ if TYPE_CHECKING:
 
 COLUMNS = (
     *("id", "quantity", "unit", "family", "measured", "error_plus", "error_minus"),
-    *("fitted", "fitted_error", "pull"),
+    *("fitted", "fitted_error", "pull", "source"),
 )
 
-#: More rows than this do not fit on a page: those with the largest pulls are drawn.
+#: More rows than this do not fit on a page: auxiliary inputs go first, those with small pulls before others.
 MOST = 40
+#: Groups of measurements that serve the others, as theory inputs do.
+AUXILIARY = frozenset({"lifetime", "mass", "form-factor-shape"})
 ROW_HEIGHT = 0.36
 WIDTH = 8.6
 
@@ -37,6 +40,17 @@ def arrange(rows: tuple[MeasurementRow, ...]) -> list[tuple[style.Family, list[M
         lanes.setdefault(style.family_of(row.groups, row.kind), []).append(row)
     ordered = [(family, sorted(members, key=_size, reverse=True)) for family, members in lanes.items()]
     return sorted(ordered, key=lambda lane: (lane[0] is not style.THEORY, _size(lane[1][0])), reverse=True)
+
+
+def is_auxiliary(row: MeasurementRow) -> bool:
+    """Whether a row is a theory input, or a measurement such as a lifetime that says nothing of the matrix alone."""
+    return row.kind == "theory" or not AUXILIARY.isdisjoint(row.groups)
+
+
+def selection(rows: tuple[MeasurementRow, ...], most: int = MOST) -> tuple[MeasurementRow, ...]:
+    """Return the rows to draw: every measurement of the matrix, then auxiliary ones by pull while there is room."""
+    ranked = sorted(rows, key=lambda row: (is_auxiliary(row), -_size(row)))
+    return tuple(ranked[: max(most, sum(not is_auxiliary(row) for row in rows))])
 
 
 def _size(row: MeasurementRow) -> float:
@@ -60,8 +74,8 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
     Drawing
     """
     latex = latex or {}
-    ranked = sorted(result.measurements, key=_size, reverse=True)
-    lanes = arrange(tuple(ranked[:MOST]))
+    chosen = selection(result.measurements)
+    lanes = arrange(chosen)
     n_rows = sum(len(members) for _, members in lanes)
     top, bottom = 0.92, 0.42
     height = n_rows * ROW_HEIGHT + 0.16 * max(len(lanes) - 1, 0) + top + bottom
@@ -81,8 +95,12 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
                 y += ROW_HEIGHT
             y += 0.16
         _head(figure, height, result)
-        if len(ranked) > MOST:
-            footer += f"  -  the {MOST} largest pulls of {len(ranked)}"
+        if len(chosen) < len(result.measurements):
+            own = sum(not is_auxiliary(row) for row in chosen)
+            others = len(result.measurements) - own
+            note = f"all {own} measurements; {len(chosen) - own} of {others} auxiliary inputs, by pull"
+            y = 1 - 0.68 / height
+            figure.text(0.16 / WIDTH, y, note, fontsize=6.5, va="center", color=style.FAINT_INK)
         style.footer(figure, footer, left=0.16 / WIDTH, baseline=0.14 / height)
         figure.text(
             1 - 0.16 / WIDTH,
@@ -96,9 +114,9 @@ def draw(result: FitResult, *, latex: Mapping[str, str] | None = None, footer: s
     data = tuple(
         (
             *(row.id, row.quantity, row.unit, family.label, row.measured, row.error_plus, row.error_minus),
-            *(row.fitted, row.fitted_error, row.pull),
+            *(row.fitted, row.fitted_error, row.pull, row.source),
         )
-        for family, members in arrange(tuple(ranked))
+        for family, members in arrange(result.measurements)
         for row in members
     )
     return style.Drawing(figure, COLUMNS, data)
@@ -165,12 +183,14 @@ def _row(axes: Axes, rail: Rail, family: style.Family, row: MeasurementRow, y: f
     axes.text(1.66, y, row.id, fontsize=fitting, va="center", ha="left", color=style.FAINT_INK)
     left, right = rail.middle - rail.half, rail.middle + rail.half
     axes.plot([left, right], [y, y], color=style.tint(family.colour, 0.28), lw=0.7, zorder=1)
-    for tick in ticks(centre - rail.half / per_unit, centre + rail.half / per_unit):
+    marks = ticks(centre - rail.half / per_unit, centre + rail.half / per_unit)
+    words, power = tick_texts(marks)
+    small: dict[str, Any] = {"fontsize": 4.8, "color": style.FAINT_INK, "va": "top", "zorder": 1}
+    for tick, word in zip(marks, words, strict=True):
         x = place(tick)
         axes.plot([x, x], [y + 0.07, y + 0.1], color=style.FAINT_INK, lw=0.6, zorder=1)
-        axes.text(
-            x, y + 0.108, f"{tick:.6g}", fontsize=4.8, color=style.FAINT_INK, ha="center", va="top", zorder=1
-        )
+        axes.text(x, y + 0.108, word, ha="center", **small)
+    axes.text(right + 0.07, y + 0.108, scale_unit(row.unit, power), ha="left", **small)
     measured, fitted = place(row.measured), place(row.fitted)
     axes.plot([measured, fitted], [y, y], color=family.colour, lw=1.0, zorder=2)
     half = (row.fitted_error or 0.0) * per_unit
@@ -217,6 +237,22 @@ def ticks(low: float, high: float) -> list[float]:
     return found
 
 
+def tick_texts(marks: Sequence[float]) -> tuple[list[str], int]:
+    """Write ticks with equally many decimals, and the power of ten that they leave to the unit."""
+    power = shared_power(*marks)
+    scaled = [mark * 10.0**-power for mark in marks]
+    decimals = max((len(f"{x:.6g}".partition(".")[2]) for x in scaled if "e" not in f"{x:.6g}"), default=0)
+    if any("e" in f"{x:.6g}" for x in scaled):
+        return [f"{x:.6g}" for x in scaled], power
+    return [fixed(x, decimals) for x in scaled], power
+
+
+def scale_unit(unit: str, power: int) -> str:
+    """Write the unit of a scale, after the power of ten that its ticks leave out."""
+    parts = [f"$\\times 10^{{{power}}}$"] if power else []
+    return " ".join([*parts, *([] if unit == "1" else [unit])])
+
+
 def _head(figure: Any, height: float, result: FitResult) -> None:
     from matplotlib.lines import Line2D
     from matplotlib.patches import Rectangle
@@ -224,7 +260,7 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
     figure.text(
         0.16 / WIDTH, 1 - 0.3 / height, "Measured against fitted", fontsize=13, fontweight="bold", va="center"
     )
-    p = "" if result.p_value is None else f", p = {result.p_value:.2g}"
+    p = "" if result.p_value is None else f", p = {significant(result.p_value)}"
     broken = "" if result.valid else "  -  NOT CONVERGED"
     figure.text(
         1 - 0.16 / WIDTH,
@@ -251,4 +287,5 @@ def _head(figure: Any, height: float, result: FitResult) -> None:
         Rectangle((sample(5.3), y - 0.06 / height), 0.3 / WIDTH, 0.12 / height, color=style.NAVY, lw=0)
     )
     figure.text(sample(5.68), y, "fitted, 68.27 %", fontsize=7.5, va="center")
+    figure.text(sample(7.2), y, "(bold: 2 or more)", fontsize=6.5, va="center", color=style.FAINT_INK)
     figure.text(sample(7.1), y, "pull", fontsize=7.5, va="center", ha="right")

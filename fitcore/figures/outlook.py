@@ -77,7 +77,7 @@ def draw(rows: Sequence[BeforeAfter], *, title: str = "", footer: str = "") -> s
             axes.text(0.28, y + 0.14, row.name + unit, fontsize=5.4, va="center", color=style.FAINT_INK)
             ends = (*row.now_68, *row.now_95, *row.future_68, *row.future_95)
             scale = scale_for([end for end in ends if math.isfinite(end)] or [row.value], LEFT, RIGHT)
-            draw_scale(axes, scale, y, below=0.17)
+            draw_scale(axes, scale, y, below=0.17, unit=row.unit)
             bar(axes, scale, y - 0.085, row.now_68, row.now_95, row.value, NOW, f"now:{row.name}")
             bar(
                 axes,

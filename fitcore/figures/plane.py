@@ -8,92 +8,39 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Sequence
-from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from fitcore.figures import style
-from fitcore.figures.margin_rail import Exit, find_exit, spread
-from fitcore.figures.outlines import contour_lines, draw_edge, height
-from fitcore.figures.symbols import glyphs, symbol_text
+from fitcore.figures.margin_rail import Exit, find_exit
+from fitcore.figures.outlines import draw_edge, height
+from fitcore.figures.plane_names import draw_names
+from fitcore.figures.plane_parts import (
+    BOTTOM,
+    BOX_HEIGHT,
+    BOX_WIDTH,
+    HEIGHT,
+    LEFT,
+    OVERVIEW_BOTTOM,
+    WIDTH,
+    Band,
+    Box,
+    PlaneAxis,
+    Sheet,
+)
+from fitcore.figures.symbols import symbol_text
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
-    from matplotlib.figure import Figure
 
 __all__ = ["Band", "PlaneAxis", "draw"]
 
-WIDTH, HEIGHT = 9.6, 6.75
-LEFT, BOTTOM, BOX_WIDTH, BOX_HEIGHT = 0.78, 1.08, 6.1, 4.42
-RAIL_GAP = 0.34
 LINE_STYLES: tuple[Any, ...] = ("-", (0, (5, 1.6)), (0, (1.2, 1.3)), (0, (5, 1.4, 1.2, 1.4)), (0, (2.6, 1.2)))
-STRIP = 0.95
 #: Bands wider than their partner's pair, which needs less ink, are drawn thinner.
 FAINT = 0.45
-OVERVIEW_BOTTOM = 0.78
 #: Room for names at the left and below, in inches.
 SIDE_ROOM, BELOW_ROOM = 1.62, 0.55
-
-
-@dataclass(frozen=True)
-class PlaneAxis:
-    """One of the two quantities.
-
-    Attributes
-    ----------
-    name, latex, unit : str
-    """
-
-    name: str
-    latex: str = ""
-    unit: str = "1"
-
-    @property
-    def label(self) -> str:
-        """Symbol with its unit."""
-        unit = "" if self.unit == "1" else f"  [{self.unit}]"
-        return symbol_text(self.latex, self.name) + unit
-
-
-@dataclass(frozen=True)
-class Band:
-    """One constraint alone, or everything combined.
-
-    Attributes
-    ----------
-    name : str
-    latex : str
-    family : Family
-        Gives the colour; members of a family differ by line style.
-    x, y : ndarray
-    delta : ndarray, shape (x.size, y.size)
-        Chi-square above its lowest value.
-    share : float
-        Contribution to chi-square at the best fit of everything.
-    outlines : dict
-        Level -> polished outlines; where absent they are interpolated on the grid.
-    overview : tuple of (x, y, delta), or None
-    """
-
-    name: str
-    latex: str
-    family: style.Family
-    x: np.ndarray
-    y: np.ndarray
-    delta: np.ndarray
-    share: float = 0.0
-    outlines: dict[float, list[np.ndarray]] = field(default_factory=dict)
-    overview: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None
-
-    @property
-    def grid(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """x, y and delta."""
-        return self.x, self.y, self.delta
-
-    def lines(self, level: float) -> list[np.ndarray]:
-        """Outlines at a level."""
-        return self.outlines[level] if level in self.outlines else contour_lines(*self.grid, level)
 
 
 def draw(
@@ -153,7 +100,7 @@ def draw(
             contained = any(other.name.startswith(f"{band.name}+") for other in bands)
             _band(main, band, dashes, levels, FAINT if contained else 1.0)
         _together(main, combined, levels, best, alone=not bands)
-        _rails(
+        draw_names(
             sheet.page,
             main,
             box,
@@ -168,41 +115,6 @@ def draw(
         _overview(sheet, combined, bands, levels, guides, equal)
         _texts(sheet, axes_of, title, caption, footer)
     return style.Drawing(sheet.figure, *_data(axes_of, combined, bands))
-
-
-class Sheet:
-    """The page in inches. Room that names need at the left or below is added outside: nothing else moves.
-
-    Parameters
-    ----------
-    left, below : float
-        Extra room.
-    """
-
-    def __init__(self, left: float, below: float) -> None:
-        self.left, self.below = left, below
-        self.figure: Figure = style.new_figure(WIDTH + left, HEIGHT + below)
-        self.page = self.axes(-left, -below, WIDTH + left, HEIGHT + below, label="page", zorder=-1)
-        self.page.set_axis_off()
-        self.page.set_xlim(-left, WIDTH)
-        self.page.set_ylim(-below, HEIGHT)
-
-    def axes(self, x: float, y: float, width: float, height: float, **more: Any) -> Axes:
-        """Axes at a place of the page."""
-        wide, tall = WIDTH + self.left, HEIGHT + self.below
-        return self.figure.add_axes(
-            ((x + self.left) / wide, (y + self.below) / tall, width / wide, height / tall), **more
-        )
-
-
-@dataclass(frozen=True)
-class Box:
-    """Where the plane lies on the page, in inches."""
-
-    left: float
-    bottom: float
-    width: float
-    height: float
 
 
 def _box(combined: Band, equal: bool) -> Box:
@@ -298,115 +210,6 @@ def _together(
         )
     if best is not None:
         axes.plot(*best, marker="o", ms=2.8, mfc="white", mec="white", zorder=6.5)
-
-
-def _rails(
-    page: Axes,
-    main: Axes,
-    box: Box,
-    bands: Sequence[Band],
-    styles: Sequence[Any],
-    exits: Sequence[Exit | None],
-    chi2: float | None,
-    overview: float,
-    title_ends: float,
-) -> None:
-    """Names in the margins."""
-    for side in ("right", "top", "left", "bottom"):
-        chosen = [
-            (k, leaving.at) for k, leaving in enumerate(exits) if leaving is not None and leaving.side == side
-        ]
-        if not chosen:
-            continue
-        upright = side in ("right", "left")
-        limits = main.get_ylim() if upright else main.get_xlim()
-        length, origin = (box.height, box.bottom) if upright else (box.width, box.left)
-        at = [origin + (where - limits[0]) / (limits[1] - limits[0]) * length for _, where in chosen]
-        room = [0.42 if upright else 1.45] * len(chosen)
-        reach = (0.0, 0.1) if upright else (0.5, 0.15)
-        low = origin - reach[0]
-        if side == "top":
-            low = max(low, title_ends)
-        if side == "right" and overview:
-            low = max(low, OVERVIEW_BOTTOM + overview + 0.12)
-        placed = spread(at, room, low, origin + length + reach[1])
-        edge, rail = {
-            "right": (box.left + box.width, box.left + box.width + RAIL_GAP),
-            "top": (box.bottom + box.height, box.bottom + box.height + 0.24),
-            "left": (box.left, box.left - 0.82),
-            "bottom": (box.bottom, box.bottom - 0.5),
-        }[side]
-        ends = (min(placed) - 0.14, max(placed) + 0.14)
-        line = ([rail, rail], ends) if upright else (ends, [rail, rail])
-        page.plot(*line, color=style.RULE, lw=2.2, solid_capstyle="round", zorder=1)
-        out = 1.0 if side in ("right", "top") else -1.0
-        for (k, _), start, end in zip(chosen, at, placed, strict=True):
-            colour = bands[k].family.colour
-            path = [
-                (edge, start),
-                (edge + 0.05 * out, start),
-                (rail - 0.05 * out, end),
-                (rail + 0.06 * out, end),
-            ]
-            points = np.array(path if upright else [point[::-1] for point in path])
-            page.plot(
-                *points.T,
-                color=colour,
-                lw=0.9,
-                solid_joinstyle="round",
-                zorder=2,
-                gid=f"leader:{bands[k].name}",
-            )
-            page.plot(*points[-2:].T, color=colour, lw=2.6, solid_capstyle="butt", zorder=3)
-            _name(page, bands[k], styles[k], side, rail, end, chi2)
-    inside = [k for k, leaving in enumerate(exits) if leaving is None]
-    for number, k in enumerate(
-        inside
-    ):  # a closed band never leaves the frame: named below the others, without leader
-        place = (box.left + box.width + RAIL_GAP, OVERVIEW_BOTTOM + overview + 0.3 + 0.42 * number)
-        _name(page, bands[k], styles[k], "right", *place, chi2)
-
-
-def _name(page: Axes, band: Band, dashes: Any, side: str, rail: float, at: float, chi2: float | None) -> None:
-    from matplotlib.patches import Rectangle
-
-    symbol = symbol_text(band.latex, band.name)
-    size = 9.5 * min(1.0, 14 / max(glyphs(symbol), 1))
-    colour = band.family.colour
-    if side in ("right", "left"):
-        x, y = (rail + 0.14, at) if side == "right" else (rail - 0.14, at)
-        sign, align = (1.0, "left") if side == "right" else (-1.0, "right")
-        page.text(x, y + 0.045, symbol, fontsize=size, ha=align, va="center")
-        strip_x, strip_y = (x if sign > 0 else x - STRIP - 0.24), y - 0.135
-    else:
-        up = side == "top"
-        x, y = at, rail + (0.24 if up else -0.22)
-        page.text(x, y + 0.055, symbol, fontsize=size, ha="center", va="center")
-        strip_x, strip_y = x - 0.5 * STRIP, y - 0.115
-    sample = strip_x
-    page.plot([sample, sample + 0.24], [strip_y + 0.02] * 2, color=colour, lw=1.4, ls=dashes, zorder=3)
-    strip_x, full = strip_x + 0.3, STRIP - 0.3
-    part = 0.0 if not chi2 else min(max(band.share / chi2, 0.0), 1.0)
-    page.add_patch(Rectangle((strip_x, strip_y), full, 0.045, facecolor=style.RULE, lw=0, zorder=2))
-    page.add_patch(
-        Rectangle(
-            (strip_x, strip_y),
-            max(full * part, 0.012),
-            0.045,
-            facecolor=colour,
-            lw=0,
-            zorder=3,
-            gid=f"share:{band.name}",
-        )
-    )
-    page.text(
-        strip_x + full + 0.05,
-        strip_y + 0.02,
-        f"{band.share:.1f}",
-        fontsize=6,
-        color=style.FAINT_INK,
-        va="center",
-    )
 
 
 def _summary(

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+import textwrap
+import tomllib
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -11,7 +13,7 @@ import numpy as np
 from fitcore.figures import style
 from fitcore.figures.outlines import contour_lines, draw_edge
 from fitcore.figures.symbols import symbol_text
-from fitcore.sampling.density import Density2D, density_1d, density_2d, highest_density
+from fitcore.sampling.density import Credible, Density1D, Density2D, credible, density_1d, density_2d
 from fitcore.sampling.diagnostics import effective_sample_size
 from fitcore.sampling.summary import stored_bounds
 from fitcore.sampling.thinned import ThinnedChain
@@ -22,9 +24,15 @@ __all__ = ["densities", "plane", "triangle"]
 LEVELS = (0.6827, 0.9545)
 MOST_PANELS = 30
 MOST_IN_TRIANGLE = 9
+#: Inches between lines of small print, and a wide average of its letters.
+LINE = 0.155
+LETTER = 0.0575
 #: Panels side by side, at most.
 ACROSS = 4
-PROFILE = style.VERMILLION
+FIT = style.VERMILLION
+#: Line of the open bars by what the interval of the fit is.
+METHODS = {"profile": "-", "linear": (0, (3, 1.5)), "range": (0, (1, 1.2))}
+METHOD_WORDS = {"profile": "full outline: profile", "linear": "dashed: linear", "range": "dotted: allowed range"}
 POSTERIOR = style.NAVY
 CREDIBLE = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
 
@@ -58,7 +66,9 @@ class _Draws:
         self.units = dict(zip(parameters, header.parameter_units, strict=False))
         for name in derived:
             self.units[name], self.latex[name] = chain.derived_label(name)
-        self.footer = f"{header.inputs_sha256[:8]} - {header.hypothesis} - {thinned.steps} steps"
+        parts = (_set_title(header), header.inputs_sha256[:8], header.hypothesis, f"{thinned.steps} steps")
+        self.footer = " - ".join(part for part in parts if part)
+        self._one: dict[str, tuple[Density1D, Credible]] = {}
 
     def limits(self, name: str) -> tuple[float, float]:
         """Where the density may end sharply."""
@@ -69,6 +79,21 @@ class _Draws:
         unit = self.units.get(name, "1")
         symbol = symbol_text(self.latex.get(name, ""), name)
         return symbol if unit in ("", "1") else f"{symbol}  [{unit}]"
+
+    def one(self, name: str) -> tuple[Density1D, Credible]:
+        """Density of one of them, and its credible regions."""
+        if name not in self._one:
+            (lower, upper), size = self.limits(name), self.effective[name]
+            density = density_1d(
+                self.columns[name], lower=lower, upper=upper, effective=size if size > 1 else None
+            )
+            self._one[name] = density, credible(density, LEVELS)
+        return self._one[name]
+
+    def exceptions(self) -> str:
+        """Say whose regions are equal-tailed."""
+        names = [name for name in self.names if self.one(name)[1].kind != "highest-density"]
+        return f"equal-tailed, as too flat for a highest density: {', '.join(names)}" if names else ""
 
     def plane(self, x: str, y: str) -> Density2D:
         """Density of two of them."""
@@ -85,19 +110,19 @@ def densities(
     chain: Any,
     names: Sequence[str] | None = None,
     *,
-    profile: Mapping[str, Any] | None = None,
+    fit: Mapping[str, Any] | None = None,
     start: int = 0,
     footer: str = "",
 ) -> style.Drawing:
-    """Draw the posterior of each quantity over rails of its credible and profile intervals.
+    """Draw the posterior of each quantity over rails of its credible intervals and those of a fit.
 
     Parameters
     ----------
     chain : ChainFile or MemoryChain
     names : sequence of str, optional
         Parameters and stored derived quantities, at most 30; default: the first parameters.
-    profile : mapping of name -> Estimate, optional
-        Profile intervals of a fit, drawn as a second rail.
+    fit : mapping of name -> Estimate, optional
+        Estimates of a fit, drawn as a second rail whose outline tells the method of the interval.
     start : int
         First step used.
     footer : str
@@ -112,13 +137,24 @@ def densities(
     UnknownNameError, InputError
         For names the chain does not hold, and complex quantities.
     """
-    profile = profile or {}
-    names = list(chain.parameter_names if names is None else names)[:MOST_PANELS]
+    fit = fit or {}
+    available = list(chain.parameter_names if names is None else names)
+    names = available[:MOST_PANELS]
     draws = _Draws(chain, names, start)
     across = _panels_across(len(names))
     down = math.ceil(len(names) / across)
-    panel_width, panel_height, head, foot = 2.5, 1.95, 0.62, 0.3
-    width, height = max(across * panel_width + 0.2, 7.2), down * panel_height + head + foot
+    panel_width, panel_height = 2.5, 1.95
+    width = max(across * panel_width + 0.2, 7.2)
+    words = "dark: 68.27 %, light: 95.45 % credible (highest density, one quantity)"
+    lines = _wrapped(width, words, style.FAINT_INK) + _wrapped(width, draws.exceptions(), style.FAINT_INK)
+    methods = {fit[name].method for name in names if name in fit and fit[name].interval_68 is not None}
+    if methods:
+        words = "open bars: the fit's intervals for one quantity, 68.27 % and 95.0 % - "
+        words += ", ".join(text for method, text in METHOD_WORDS.items() if method in methods)
+        lines += _wrapped(width, words, FIT)
+    below = _wrapped(width, (footer or draws.footer) + _left_out(available, names), style.FAINT_INK)
+    head, foot = 0.45 + LINE * len(lines), 0.17 + LINE * len(below)
+    height = down * panel_height + head + foot
     rows: list[tuple[Any, ...]] = []
     with style.in_style():
         figure = style.new_figure(width, height)
@@ -126,25 +162,18 @@ def densities(
             left = 0.2 + panel_width * (number % across)
             bottom = foot + panel_height * (down - 1 - number // across) + 0.45
             axes = figure.add_axes((left / width, bottom / height, 2.25 / width, 1.4 / height))
-            one = profile.get(name)
-            curve = _panel(axes, draws, name, one)
+            curve = _panel(axes, draws, name, fit.get(name))
             axes.set_xlabel(draws.label(name), fontsize=9, labelpad=1.5)
             rows += [(name, float(x), float(p)) for x, p in zip(*curve, strict=True)]
         _title(figure, height, width, "Posterior densities")
-        words = "dark: 68.27 %, light: 95.45 % credible (highest density, one quantity)"
-        _subtitle(figure, height, width, words)
-        if any(name in profile for name in names):
-            at = (0.2 + 0.0525 * len(words)) / width
-            words = "open bars: profile of the fit, 68.27 % and 95.0 %, one quantity"
-            figure.text(at, 1 - 0.57 / height, words, fontsize=7, color=PROFILE, va="center")
-        style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
+        _subtitle(figure, height, width, lines)
+        _footer(figure, height, width, below)
     return style.Drawing(figure, ("name", "value", "density"), tuple(rows))
 
 
 def _panel(axes: Any, draws: _Draws, name: str, one: Any) -> tuple[np.ndarray, np.ndarray]:
-    column, (lower, upper) = draws.columns[name], draws.limits(name)
-    size = draws.effective[name]
-    density = density_1d(column, lower=lower, upper=upper, effective=size if size > 1 else None)
+    column = draws.columns[name]
+    density, found = draws.one(name)
     x, p = density.grid, density.density / max(density.density.max(), 1e-300)
     low, high = np.quantile(column, [0.0005, 0.9995])
     ends = [e for e in (() if one is None else (*(one.interval_95 or ()),)) if e is not None]
@@ -158,12 +187,12 @@ def _panel(axes: Any, draws: _Draws, name: str, one: Any) -> tuple[np.ndarray, n
     axes.tick_params(labelsize=7, length=2.5)
     axes.locator_params(axis="x", nbins=4)
     for shade, level in ((0.25, LEVELS[1]), (0.6, LEVELS[0])):
-        for region in highest_density(density, level):
+        for region in found.regions[level]:
             inside = (x >= region[0]) & (x <= region[1])
             axes.fill_between(x[inside], 0, p[inside], color=style.tint(POSTERIOR, shade), lw=0, zorder=1)
     axes.plot(x, p, color=POSTERIOR, lw=1.4, zorder=3, gid=f"density:{name}")
     for shade, thick, level in ((0.45, 3.0, LEVELS[1]), (1.0, 5.5, LEVELS[0])):
-        for region in highest_density(density, level):
+        for region in found.regions[level]:
             axes.plot(
                 region,
                 [-0.1, -0.1],
@@ -180,11 +209,12 @@ def _panel(axes: Any, draws: _Draws, name: str, one: Any) -> tuple[np.ndarray, n
                     [a, b, b, a],
                     [-0.27 - tall / 2, -0.27 - tall / 2, -0.27 + tall / 2, -0.27 + tall / 2],
                     facecolor=style.PAPER,
-                    edgecolor=PROFILE,
+                    edgecolor=FIT,
                     lw=0.9,
-                    gid=f"profile:{name}",
+                    ls=METHODS.get(one.method, "-"),
+                    gid=f"fit:{name}:{one.method}",
                 )
-        axes.plot([one.value], [-0.27], "o", ms=3.2, mfc="white", mec=PROFILE, mew=0.9, zorder=5)
+        axes.plot([one.value], [-0.27], "o", ms=3.2, mfc="white", mec=FIT, mew=0.9, zorder=5)
     inside = (x >= low - margin) & (x <= high + margin)
     step = max(1, inside.sum() // 200)
     return x[inside][::step], density.density[inside][::step]
@@ -228,11 +258,11 @@ def plane(
         for number, (words, lines) in enumerate(profile):
             for line in lines:
                 axes.plot(
-                    *np.asarray(line).T, color=PROFILE, lw=1.2, ls=("-", (0, (4, 2)))[number % 2], zorder=6
+                    *np.asarray(line).T, color=FIT, lw=1.2, ls=("-", (0, (4, 2)))[number % 2], zorder=6
                 )
                 found.append((f"profile {words}", np.asarray(line)))
         _title(figure, height, width, "Posterior regions")
-        _subtitle(figure, height, width, CREDIBLE)
+        _subtitle(figure, height, width, [(CREDIBLE, style.FAINT_INK)])
         if profile:
             listed = "; ".join(
                 f"{('full', 'dashed')[number % 2]} line {words}" for number, (words, _) in enumerate(profile)
@@ -240,9 +270,9 @@ def plane(
             figure.text(
                 0.2 / width,
                 1 - 0.75 / height,
-                f"profile of the fit: {listed}",
+                f"profile likelihood: {listed}",
                 fontsize=7,
-                color=PROFILE,
+                color=FIT,
                 va="center",
             )
         style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
@@ -261,7 +291,7 @@ def triangle(
     ----------
     chain : ChainFile or MemoryChain
     names : sequence of str, optional
-        At most 9 are drawn; default: the first parameters.
+        At most 9 are drawn, and the footer says which are not; default: the first parameters.
     start : int
     footer : str
 
@@ -270,11 +300,16 @@ def triangle(
     Drawing
         Its data are the contours.
     """
-    names = list(chain.parameter_names if names is None else names)[:MOST_IN_TRIANGLE]
+    available = list(chain.parameter_names if names is None else names)
+    names = available[:MOST_IN_TRIANGLE]
     draws = _Draws(chain, names, start)
     n, cell = len(names), 1.25
-    left, bottom, head = 0.85, 0.8, 0.72
-    width, height = max(left + n * cell + 0.2, 5.6), bottom + n * cell + head
+    left = 0.85
+    width = max(left + n * cell + 0.2, 5.6)
+    lines = _wrapped(width, CREDIBLE, style.FAINT_INK) + _wrapped(width, draws.exceptions(), style.FAINT_INK)
+    below = _wrapped(width, (footer or draws.footer) + _left_out(available, names), style.FAINT_INK)
+    bottom, head = 0.67 + LINE * len(below), 0.55 + LINE * len(lines)
+    height = bottom + n * cell + head
     left += max(0.0, 0.5 * (width - left - n * cell - 0.2))
     rows: list[tuple[Any, ...]] = []
     with style.in_style():
@@ -307,20 +342,18 @@ def triangle(
                     axes.set_ylabel(draws.label(y), fontsize=8)
         figure.align_labels()
         _title(figure, height, width, "Posterior of pairs")
-        _subtitle(figure, height, width, CREDIBLE)
-        style.footer(figure, footer or draws.footer, left=0.2 / width, baseline=0.12 / height)
+        _subtitle(figure, height, width, lines)
+        _footer(figure, height, width, below)
     return style.Drawing(figure, ("x", "y", "region", "x_value", "y_value"), tuple(rows))
 
 
 def _diagonal(axes: Any, draws: _Draws, name: str) -> None:
-    lower, upper = draws.limits(name)
-    size = draws.effective[name]
-    density = density_1d(draws.columns[name], lower=lower, upper=upper, effective=size if size > 1 else None)
+    density, found = draws.one(name)
     top = max(density.density.max(), 1e-300)
     axes.set_ylim(0, 1.08)
     axes.set_yticks([])
     axes.spines["left"].set_visible(False)
-    for region in highest_density(density, LEVELS[0]):
+    for region in found.regions[LEVELS[0]]:
         inside = (density.grid >= region[0]) & (density.grid <= region[1])
         axes.fill_between(
             density.grid[inside], 0, density.density[inside] / top, color=style.tint(POSTERIOR, 0.35), lw=0
@@ -368,8 +401,36 @@ def _panels_across(count: int) -> int:
     return min((ACROSS, ACROSS - 1), key=lambda across: (-count % across, -across))
 
 
-def _subtitle(figure: Any, height: float, width: float, words: str) -> None:
-    figure.text(0.2 / width, 1 - 0.57 / height, words, fontsize=7, color=style.FAINT_INK, va="center")
+def _set_title(header: Any) -> str:
+    """Title of the inputs that a chain was sampled from; empty where its header holds none."""
+    try:
+        return str(tomllib.loads(header.inputs_toml).get("title", ""))
+    except tomllib.TOMLDecodeError:
+        return ""
+
+
+def _left_out(available: Sequence[str], drawn: Sequence[str]) -> str:
+    """Say what had no room."""
+    missing = list(available)[len(drawn) :]
+    if not missing:
+        return ""
+    return f" - {len(drawn)} of {len(available)} quantities drawn; not drawn: {', '.join(missing)}"
+
+
+def _wrapped(width: float, words: str, colour: str) -> list[tuple[str, str]]:
+    """Lines of small print that fit into a figure of this width, with their colour."""
+    return [(line, colour) for line in textwrap.wrap(words, int((width - 0.4) / LETTER))]
+
+
+def _subtitle(figure: Any, height: float, width: float, lines: Sequence[tuple[str, str]]) -> None:
+    for number, (words, colour) in enumerate(lines):
+        y = 1 - (0.57 + LINE * number) / height
+        figure.text(0.2 / width, y, words, fontsize=7, color=colour, va="center")
+
+
+def _footer(figure: Any, height: float, width: float, lines: Sequence[tuple[str, str]]) -> None:
+    for number, (words, _) in enumerate(reversed(lines)):
+        style.footer(figure, words, left=0.2 / width, baseline=(0.1 + LINE * number) / height)
 
 
 def _title(figure: Any, height: float, width: float, words: str) -> None:

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from fitcore.figures import style
-from fitcore.figures.dumbbell import ticks
+from fitcore.figures.dumbbell import scale_unit, tick_texts, ticks
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -42,22 +42,17 @@ def scale_for(values: Sequence[float], left: float, right: float, margin: float 
     return Scale(left, right, low - room, high + room)
 
 
-def draw_scale(axes: Axes, scale: Scale, y: float, *, below: float) -> None:
-    """A thin line with two or three round values beneath, on axes in inches that point downwards."""
+def draw_scale(axes: Axes, scale: Scale, y: float, *, below: float, unit: str = "1") -> None:
+    """A thin line with two or three round values and a unit beneath, on axes in inches that point downwards."""
     axes.plot([scale.left, scale.right], [y, y], color=style.RULE, lw=0.7, zorder=1)
-    for tick in ticks(scale.low, scale.high):
+    marks = ticks(scale.low, scale.high)
+    words, power = tick_texts(marks)
+    small: dict[str, Any] = {"fontsize": 4.8, "color": style.FAINT_INK, "va": "top", "zorder": 1}
+    for tick, word in zip(marks, words, strict=True):
         x = scale.at(tick)
         axes.plot([x, x], [y + below, y + below + 0.03], color=style.FAINT_INK, lw=0.6, zorder=1)
-        axes.text(
-            x,
-            y + below + 0.04,
-            f"{tick:.6g}",
-            fontsize=4.8,
-            color=style.FAINT_INK,
-            ha="center",
-            va="top",
-            zorder=1,
-        )
+        axes.text(x, y + below + 0.04, word, ha="center", **small)
+    axes.text(scale.right + 0.06, y + below + 0.04, scale_unit(unit, power), ha="left", **small)
 
 
 def bar(

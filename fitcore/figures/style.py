@@ -142,8 +142,18 @@ class Drawing:
         stream = io.StringIO()
         writer = csv.writer(stream, lineterminator="\n")
         writer.writerow(self.columns)
-        writer.writerows(["" if item is None else item for item in row] for row in self.rows)
+        writer.writerows([_written(item) for item in row] for row in self.rows)
         return stream.getvalue()
+
+
+def _written(item: Any) -> Any:
+    """Write a number in full, but without the binary noise of unit conversions (0.0539, not 0.05389...97)."""
+    if item is None:
+        return ""
+    if isinstance(item, float):
+        short = f"{item:.15g}"
+        return short if len(short) < len(repr(float(item))) - 2 else repr(float(item))
+    return item
 
 
 @contextmanager

@@ -269,6 +269,47 @@ def effective_sizes(thinned: ThinnedChain) -> np.ndarray:
     return sizes
 
 
+@dataclass(frozen=True)
+class Mixing:
+    """How well a chain mixes: what both the stopping rule and the diagnosis judge it by.
+
+    Attributes
+    ----------
+    steps : int
+    effective_sample_size, autocorrelation_time, rhat : ndarray (n,)
+    """
+
+    steps: int
+    effective_sample_size: np.ndarray
+    autocorrelation_time: np.ndarray
+    rhat: np.ndarray
+
+    @property
+    def slowest(self) -> int:
+        """Index of the parameter with the longest autocorrelation time; one that never moved comes first."""
+        tau = self.autocorrelation_time
+        return int(np.argmax(np.where(np.isfinite(tau), tau, np.inf)))
+
+    def status(self, margin: float = 1.0) -> Status:
+        """Whether the autocorrelation times can be relied on; a margin above one asks for a longer chain."""
+        longest = float(self.autocorrelation_time[self.slowest]) * margin
+        if not np.isfinite(longest) or self.steps < TENTATIVE_TAUS * longest:
+            return "unusable"
+        return "reliable" if self.steps >= RELIABLE_TAUS * longest else "tentative"
+
+    @property
+    def agree(self) -> bool:
+        """Whether the ensembles agree in every parameter."""
+        return bool(np.all(self.rhat <= RHAT_LIMIT))
+
+
+def mixing(thinned: ThinnedChain) -> Mixing:
+    """Work out how well a chain mixes."""
+    sizes = effective_sizes(thinned)
+    tau = thinned.steps * len(thinned.ensembles) / sizes
+    return Mixing(thinned.steps, sizes, tau, rhat_of(thinned))
+
+
 def diagnose(
     chain: Any,
     *,
@@ -298,9 +339,8 @@ def diagnose(
     names = tuple(chain.parameter_names)
     walkers = len(thinned.ensembles)
     steps = thinned.steps
-    sizes = effective_sizes(thinned)
-    tau = steps * walkers / sizes
-    rhat = rhat_of(thinned)
+    found = mixing(thinned)
+    sizes, tau, rhat = found.effective_sample_size, found.autocorrelation_time, found.rhat
     n_ensembles = len(np.unique(thinned.ensembles))
     shares: tuple[float, ...] = (1.0,)
     if density is not None and len(thinned.samples):
@@ -310,36 +350,26 @@ def diagnose(
         shares = tuple(float(c) for c in counts / counts.sum())
     stay = longest_stay(chain)
     acceptance = float(np.mean(chain.accepted) / steps) if steps else 0.0
-    status, verdict, advice = _judge(
-        names, steps, sizes, tau, rhat, n_ensembles, acceptance, stay, width_check, extra
-    )
+    verdict, advice = _judge(names, found, n_ensembles, acceptance, stay, width_check, extra)
     return Diagnostics(
-        names, steps, walkers, n_ensembles, tau, status, sizes, rhat, acceptance, stay, shares,
+        names, steps, walkers, n_ensembles, tau, found.status(), sizes, rhat, acceptance, stay, shares,
         width_check, not advice, verdict, advice,
     )  # fmt: skip
 
 
 def _judge(
     names: tuple[str, ...],
-    steps: int,
-    sizes: np.ndarray,
-    tau: np.ndarray,
-    rhat: np.ndarray,
+    found: Mixing,
     n_ensembles: int,
     acceptance: float,
     stay: int,
     width_check: WidthCheck | None,
     extra: Sequence[str],
-) -> tuple[Status, str, tuple[str, ...]]:
+) -> tuple[str, tuple[str, ...]]:
     advice: list[str] = list(extra)
-    worst = int(np.argmax(np.where(np.isfinite(tau), tau, np.inf)))
-    longest = float(tau[worst])
-    status: Status
-    if not np.isfinite(longest) or steps < TENTATIVE_TAUS * longest:
-        status = "unusable"
-    else:
-        status = "reliable" if steps >= RELIABLE_TAUS * longest else "tentative"
-    if status != "reliable":
+    steps, rhat, worst = found.steps, found.rhat, found.slowest
+    longest = float(found.autocorrelation_time[worst])
+    if found.status() != "reliable":
         need = (
             f"at least {int(np.ceil(RELIABLE_TAUS * longest))} steps"
             if np.isfinite(longest)
@@ -353,7 +383,7 @@ def _judge(
         )
     if n_ensembles > 1:
         apart = int(np.argmax(np.where(np.isfinite(rhat), rhat, np.inf)))
-        if not rhat[apart] <= RHAT_LIMIT:
+        if not found.agree:
             advice.append(
                 f"the {n_ensembles} ensembles disagree in {names[apart]} (R-hat {rhat[apart]:.3f} > {RHAT_LIMIT}): "
                 "run longer; if it stays, a second solution is not connected - start from all minima of the fit"
@@ -368,11 +398,13 @@ def _judge(
     if width_check is not None and width_check.suspicious.any():
         k = int(np.argmax(np.abs(width_check.significance) * width_check.suspicious))
         advice.append(
-            f"{names[k]} is {width_check.ratio[k]:.3f} times as wide as in a run without the independence move: "
+            f"{names[k]} is {width_check.ratio[k]:.3f} times as wide as in a short control run that moves in small "
+            "steps only: "
             "run longer and compare again"
         )
     if acceptance < 0.02:
         advice.append(f"only {acceptance:.1%} of the proposals are accepted: check the modes and the bounds")
+    sizes = found.effective_sample_size
     smallest = np.nanmin(sizes) if np.isfinite(sizes).any() else float("nan")
     if not advice:
         verdict = (
@@ -381,4 +413,4 @@ def _judge(
         )
     else:
         verdict = f"Do not use this chain yet: {advice[0]}."
-    return status, verdict, tuple(advice)
+    return verdict, tuple(advice)

@@ -27,7 +27,7 @@ def export(
     start: int = 0,
     overwrite: bool = False,
 ) -> Path:
-    """Write a chain, with its real derived quantities, for other programs.
+    """Write a chain, with its derived quantities, for other programs.
 
     Parameters
     ----------
@@ -36,8 +36,10 @@ def export(
     format : {"netcdf", "csv", "npz"}
         netcdf: groups ``posterior`` and ``sample_stats`` with dimensions (chain, draw), one chain per
         independent ensemble, its walkers one after the other within each step; ``arviz.from_netcdf`` reads
-        it. csv: one row per step and walker. npz: arrays ``samples`` (steps, walkers, parameters),
-        ``log_posterior``, ``accepted``, ``steps``, ``ensembles``, ``parameter_names``, ``derived_NAME``.
+        it. csv: one row per step and walker. Both hold a complex derived quantity as two real columns,
+        ``NAME_re`` and ``NAME_im``. npz: arrays ``samples`` (steps, walkers, parameters),
+        ``log_posterior``, ``accepted``, ``steps``, ``ensembles``, ``parameter_names``, and ``derived_NAME``,
+        complex where the quantity is.
     thin : int
         Keep every ``thin``-th step; walkers become draws, so thin by the autocorrelation time when the
         reader takes them for independent.
@@ -100,16 +102,32 @@ def _derived(chain: Any) -> tuple[str, ...]:
     return tuple(name for name in chain.derived_names if steps(name) >= chain.steps)
 
 
+def _split(values: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
+    """Real columns only: a complex quantity becomes its real and imaginary parts."""
+    columns = {}
+    for name, value in values.items():
+        if np.iscomplexobj(value):
+            columns |= {f"{name}_re": value.real, f"{name}_im": value.imag}
+        else:
+            columns[name] = value
+    return columns
+
+
 def _csv(chain: Any, path: Path, thin: int, start: int) -> None:
     derived = _derived(chain)
     ensembles = chain.ensembles
     walkers = np.arange(len(ensembles))
     with path.open("w", newline="") as stream:
         writer = csv.writer(stream)
-        writer.writerow(["step", "walker", "ensemble", "log_posterior", *chain.parameter_names, *derived])
-        for numbers, samples, log_posterior, _, values in _parts(chain, thin, start, derived):
+        head = ["step", "walker", "ensemble", "log_posterior", *chain.parameter_names]
+        for part, (numbers, samples, log_posterior, _, values) in enumerate(
+            _parts(chain, thin, start, derived)
+        ):
+            extra = _split(values)
+            if part == 0:
+                writer.writerow([*head, *extra])
             for i, number in enumerate(numbers):
-                columns = [samples[i], *(values[name][i][:, None] for name in derived)]
+                columns = [samples[i], *(value[i][:, None] for value in extra.values())]
                 body = np.concatenate(columns, axis=1).tolist()
                 writer.writerows(
                     [int(number), int(w), int(e), p, *row]
@@ -160,7 +178,7 @@ def _netcdf(chain: Any, path: Path, thin: int, start: int) -> None:
     """NetCDF-4 is HDF5 with dimension scales."""
     import h5py
 
-    derived = tuple(_derived(chain))
+    derived = _derived(chain)
     ensembles = np.asarray(chain.ensembles)
     labels = np.unique(ensembles)
     members = [np.flatnonzero(ensembles == label) for label in labels]
@@ -174,10 +192,10 @@ def _netcdf(chain: Any, path: Path, thin: int, start: int) -> None:
         names = tuple(chain.parameter_names)
         variables = {name: _variable(posterior, name, np.float64, units.get(name, "")) for name in names}
         first = next(iter(_parts(chain, thin, start, derived)))[4]
-        derived = tuple(name for name in derived if not np.iscomplexobj(first[name]))
-        variables |= {
-            name: _variable(posterior, name, np.float64, chain.derived_label(name)[0]) for name in derived
-        }
+        for name in derived:
+            unit = chain.derived_label(name)[0]
+            columns = _split({name: first[name]})
+            variables |= {column: _variable(posterior, column, np.float64, unit) for column in columns}
         log_posterior = _variable(stats, "lp", np.float64, "1")
         step = _variable(stats, "step", np.int64, "1")
         done = 0
@@ -186,8 +204,8 @@ def _netcdf(chain: Any, path: Path, thin: int, start: int) -> None:
             for row, own in enumerate(members):
                 for k, name in enumerate(names):
                     variables[name][row, done:end] = samples[:, own, k].reshape(-1)
-                for name in derived:
-                    variables[name][row, done:end] = extra[name][:, own].reshape(-1)
+                for name, value in _split(extra).items():
+                    variables[name][row, done:end] = value[:, own].reshape(-1)
                 log_posterior[row, done:end] = values[:, own].reshape(-1)
                 step[row, done:end] = np.repeat(numbers, smallest)
             done = end

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from fitcore.sampling.diagnostics import RELIABLE_TAUS, RHAT_LIMIT, WidthCheck, effective_sizes, rhat_of
+from fitcore.sampling.diagnostics import RELIABLE_TAUS, WidthCheck, effective_sizes, mixing
 from fitcore.sampling.mixture import StudentMixture
 from fitcore.sampling.preparation import (
     PILOT_STEPS,
@@ -34,6 +34,8 @@ _LOG = logging.getLogger(__name__)
 _PILOT_ROUNDS = 12
 _CHECK_VALUES = 1 << 22
 _MOST_STEPS = 200_000
+#: A run stops only when it is this much longer than the diagnosis at its end asks for.
+_MARGIN = 1.05
 
 
 class Run:
@@ -190,7 +192,7 @@ class Run:
         reason = ""
         next_check = _next_check(first, block)
         if effective is not None and first:
-            found = self._effective()
+            found = self._effective(effective)
         while not reason:
             if until is not None and self.chain.steps >= until:
                 reason = f"reached {until} steps"
@@ -209,7 +211,7 @@ class Run:
             goal = goal if until is None else min(goal, until)
             self._steps(sampler, goal - self.chain.steps, interrupted, begin, minutes)
             if effective is not None and self.chain.steps >= next_check:
-                found = self._effective()
+                found = self._effective(effective)
                 next_check = _next_check(self.chain.steps, block)
             self._report(begin, evaluations, first, until, effective, minutes, found)
         self.seconds = time.perf_counter() - begin
@@ -223,16 +225,20 @@ class Run:
             if interrupted() or (minutes is not None and time.perf_counter() - begin > 60.0 * minutes):
                 break
 
-    def _effective(self) -> tuple[float, float]:
+    def _effective(self, effective: float) -> tuple[float, float]:
         """Usable effective samples (0 while unreliable or in disagreement) and the longest tau."""
-        thinned = ThinnedChain.read(self.chain, max_values=_CHECK_VALUES)
-        sizes = effective_sizes(thinned)
-        total = thinned.steps * len(thinned.ensembles)
-        smallest = float(np.min(np.where(np.isfinite(sizes), sizes, 0.0)))
-        tau = total / smallest if smallest > 0 else np.inf
-        reliable = thinned.steps >= RELIABLE_TAUS * tau
-        agree = reliable and bool(np.all(rhat_of(thinned) <= RHAT_LIMIT))
-        return (smallest if agree else 0.0), tau
+        usable = tau = 0.0
+        # A short look first; what it lets pass is looked at again as the diagnosis will look at it.
+        for most in ({"max_values": _CHECK_VALUES}, {}):
+            thinned = ThinnedChain.read(self.chain, **most)
+            found = mixing(thinned)
+            sizes = found.effective_sample_size
+            smallest = float(np.min(np.where(np.isfinite(sizes), sizes, 0.0)))
+            tau = thinned.steps * len(thinned.ensembles) / smallest if smallest > 0 else np.inf
+            usable = smallest if found.status(_MARGIN) == "reliable" and found.agree else 0.0
+            if usable < effective or thinned.stride == 1:
+                break
+        return usable, tau
 
     def _report(
         self, begin: float, evaluations: int, first: int, until: int | None, effective: float | None,
@@ -249,7 +255,7 @@ class Run:
             remaining.append(max(60.0 * minutes - seconds, 0.0))
         if effective is not None and found is not None and np.isfinite(found[1]) and done:
             walkers = self.n_ensembles * self.per_ensemble
-            needed = max(effective * found[1] / walkers, 40.0 * found[1]) - self.chain.steps
+            needed = max(effective * found[1] / walkers, _MARGIN * RELIABLE_TAUS * found[1]) - self.chain.steps
             remaining.append(seconds / done * max(needed, 0.0))
         self.progress(
             Progress(

@@ -8,7 +8,7 @@ from typing import Any, Literal
 
 import numpy as np
 
-from fitcore.sampling.density import density_1d, highest_density
+from fitcore.sampling.density import credible, density_1d
 from fitcore.sampling.diagnostics import effective_sample_size
 from fitcore.sampling.thinned import ThinnedChain
 from observables.errors import InputError, UnknownNameError
@@ -32,6 +32,10 @@ class PosteriorRow:
         Credible intervals by credibility; several pairs when the region is disconnected.
     effective : float
         Effective sample size.
+    kind : {"highest-density", "equal-tailed"}
+        What the intervals of this row are.
+    reason : str
+        Why they are equal-tailed although highest density was asked for: "flat", "not nested" or "".
     """
 
     name: str
@@ -42,6 +46,8 @@ class PosteriorRow:
     median: float
     intervals: dict[float, tuple[tuple[float, float], ...]]
     effective: float
+    kind: str = "highest-density"
+    reason: str = ""
 
 
 @dataclass(frozen=True)
@@ -52,6 +58,7 @@ class PosteriorSummary:
     ----------
     rows : tuple of PosteriorRow
     kind : {"highest-density", "equal-tailed"}
+        What was asked for; a row may differ (see :func:`~fitcore.sampling.density.credible`).
     steps, walkers, stride : int
         Samples used: every ``stride``-th of ``steps`` steps.
     """
@@ -83,6 +90,8 @@ class PosteriorSummary:
                     "median": row.median,
                     "unit": row.unit,
                     "effective": row.effective,
+                    "kind": row.kind,
+                    "reason": row.reason,
                     "intervals": {
                         f"{cl:g}": [list(pair) for pair in pairs] for cl, pairs in row.intervals.items()
                     },
@@ -111,7 +120,8 @@ def summarise(
     cl : sequence of float
         Credibilities; 0.683 and 0.954 mean 68.27 % and 95.45 %.
     kind : {"highest-density", "equal-tailed"}
-        Highest-density regions may be disconnected.
+        Highest-density regions may be disconnected; where the density is flat within its Monte Carlo error,
+        or the regions would not lie inside each other, a row has equal-tailed intervals and says so.
     bounds : dict of name -> (lower, upper), optional
         Where densities end sharply; default: the bounds stored with the chain.
     start : int
@@ -183,16 +193,18 @@ def _row(
     if not len(flat):
         raise InputError(f"{name}: is not finite anywhere on the chain")
     intervals: dict[float, tuple[tuple[float, float], ...]] = {}
+    reason = ""
     if kind == "highest-density":
-        density = density_1d(flat, lower=limits[0], upper=limits[1], effective=size if size > 0 else None)
-        for level in levels:
-            intervals[level] = highest_density(density, level)
-    else:
+        found = credible(
+            density_1d(flat, lower=limits[0], upper=limits[1], effective=size if size > 0 else None), levels
+        )
+        kind, reason, intervals = found.kind, found.reason, found.regions
+    if kind == "equal-tailed":
         for level in levels:
             low, high = np.quantile(flat, [0.5 - 0.5 * level, 0.5 + 0.5 * level])
             intervals[level] = ((float(low), float(high)),)
     deviation = float(flat.std())
     return PosteriorRow(
         name, unit, float(flat.mean()), deviation, deviation / float(np.sqrt(size)), float(np.median(flat)),
-        intervals, float(size),
+        intervals, float(size), kind, reason,
     )  # fmt: skip

@@ -54,8 +54,6 @@ class BudgetResult:
     units : dict
     families : dict
         Entry id -> (groups, kind), for figures and tables.
-    flat : tuple of str
-        Entries that are flat ranges: they have no standard deviation and no place in a budget.
     """
 
     quantities: tuple[str, ...]
@@ -65,7 +63,6 @@ class BudgetResult:
     groups: dict[str, tuple[BudgetRow, ...]]
     units: dict[str, str]
     families: dict[str, tuple[tuple[str, ...], str]] = field(default_factory=dict)
-    flat: tuple[str, ...] = ()
 
     def to_dict(self) -> dict[str, Any]:
         """Plain data."""
@@ -74,7 +71,6 @@ class BudgetResult:
             return [{"name": r.name, "shift": r.shift, "removal": r.removal} for r in items]
 
         return {
-            "flat": list(self.flat),
             "quantities": {
                 name: {
                     "value": self.values[name],
@@ -144,8 +140,8 @@ def budget(
 
     covariance = curvature_at(problem, theta).covariance
     values, gradient = problem.linearise_quantities(theta, wanted)
-    for name in wanted:  # a flat range leaves its direction open; it is reported as flat instead
-        if not is_determined(problem, theta, name, but_ranges=True):
+    for name in wanted:
+        if not is_determined(problem, theta, name):
             raise InputError(f"{name}: the inputs do not determine it, so that its uncertainty has no parts")
     moved, _ = problem.linearise_quantities(refits.theta, wanted)
     measured_names = tuple(e.quantity for e in problem.entries)
@@ -185,7 +181,6 @@ def budget(
         grouped,
         {n: problem.unit_of(n) for n in wanted},
         {e.id: (tuple(e.groups), e.kind) for e in problem.entries},
-        tuple(e.id for e in problem.inputs.entries if e.id not in {kept.id for kept in problem.entries}),
     )
 
 

@@ -33,6 +33,8 @@ SPEAKS = 0.6
 SHARED = 0.5
 #: Frames that a parameter may leave along the direction in which the frame itself is crossed, before it feels its hold.
 FREE_FRAMES = 100.0
+#: Error, in scales of a parameter, with which it is as good as free.
+FREE_SCALES = 1000.0
 #: Eigenvalues of the normalised information matrix below this count as zero.
 NOTHING = 1e-10
 
@@ -48,11 +50,14 @@ class Held:
         With the quantities of the frame at the best fit.
     sources : tuple of float
         Signed errors from independent sources, the same ones for all parameters: their products sum to the covariance.
+    across : bool
+        Whether the parameter changes across the frame, so that it is free along that direction.
     """
 
     parameter: str
     value: float
     sources: tuple[float, ...]
+    across: bool = False
 
     @property
     def error(self) -> float:
@@ -245,8 +250,12 @@ def _hold(
     own = [k for k, name in enumerate(reduced.parameter_names) if name in full]
     jacobian[:, at] = np.nan_to_num(reduced.jacobian(start))[:, own]
     _, axes = problem.linearise_quantities(theta, names)
+    before = np.linalg.norm(jacobian, axis=0)
     jacobian = jacobian - (jacobian @ moves.T) @ np.linalg.solve(axes @ moves.T, axes)
     norm = np.linalg.norm(jacobian, axis=0)
+    norm = np.where(
+        norm > 1e-9 * before, norm, 0.0
+    )  # what is left of a parameter that is an axis is rounding
     unit = 1.0 / np.where(norm > 0.0, norm, np.inf)
     values, vectors = np.linalg.eigh((jacobian * unit).T @ (jacobian * unit))
     strong = values > NOTHING
@@ -257,9 +266,10 @@ def _hold(
     spread = (vectors[:, strong] / np.sqrt(values[strong]))[rows] * unit[rows][:, None]
     spread = np.hstack([spread, FREE_FRAMES * moves[:, rows].T])
     # as few sources as parameters: the triangular factor
-    factor = np.linalg.qr(spread.T, mode="r").T if rows else spread
+    factor = np.asarray(np.linalg.qr(spread.T, mode="r")).T if rows else spread
+    crossed = (np.abs(across) > 1e-9).any(axis=0)
     return tuple(
-        Held(full[row], float(centre[full[row]]), tuple(float(v) for v in factor[k]))
+        Held(full[row], float(centre[full[row]]), tuple(float(v) for v in factor[k]), bool(crossed[row]))
         for k, row in enumerate(rows)
     )
 
@@ -281,7 +291,7 @@ def problem_of(problem: Any, constraint: Constraint) -> Any:
     pattern = inputs.entries[0]
     extra = []
     for held in constraint.held:
-        errors = {f"fixing {k}": error for k, error in enumerate(held.sources)}
+        errors = {f"fixing {k}": error for k, error in enumerate(held.sources) if error}
         entry = replace(
             pattern,
             id=f"fixing:{held.parameter}",
@@ -333,13 +343,35 @@ def profile_constraint(
         One per frame; empty when these entries alone do not determine the quantities. Their `minimum` is the lowest
         chi-square known anywhere, also outside the frame.
     """
-    alone = problem_of(problem, constraint)
+    alone = problem_of(problem, _reaching(problem, constraint, names, theta))
     if not all(alone.determines(name) for name in names):
         return []
     known = dict(zip(problem.parameter_names, np.asarray(theta, dtype=float), strict=True))
     start = np.array([known.get(name, value) for name, value in _starts(alone)])
     near = minimise_batch(alone, start[None])
     return [profile(alone, names, grids, start=near.theta[0]) for grids in frames]
+
+
+def _reaching(problem: Any, constraint: Constraint, names: Sequence[str], theta: np.ndarray) -> Constraint:
+    """The constraint with parameters that only the quantities of the frame need, practically free."""
+    alone = problem_of(problem, constraint)
+    if all(alone.determines(name) for name in names):
+        return constraint
+    _, slopes = problem.linearise_quantities(np.asarray(theta, dtype=float), names)
+    extra = tuple(
+        Held(
+            p.name,
+            float(theta[k]),
+            (*[0.0] * (len(constraint.held) + number), FREE_SCALES * p.scale),
+            across=True,
+        )
+        for number, (k, p) in enumerate(
+            (k, p)
+            for k, p in enumerate(problem.parameters)
+            if slopes[:, k].any() and p.name not in alone.parameter_names
+        )
+    )
+    return replace(constraint, held=(*constraint.held, *extra))
 
 
 def _moves(axes: np.ndarray, parameter: int) -> bool:

@@ -11,7 +11,7 @@ __all__ = ["is_determined"]
 TOLERANCE = 1e-6
 
 
-def is_determined(problem: Any, theta: np.ndarray, name: str, *, but_ranges: bool = False) -> bool:
+def is_determined(problem: Any, theta: np.ndarray, name: str) -> bool:
     """Whether the residuals see every direction in which a quantity changes (to first order).
 
     Parameters
@@ -21,16 +21,11 @@ def is_determined(problem: Any, theta: np.ndarray, name: str, *, but_ranges: boo
         Where to look: near the minimum.
     name : str
         Real quantity or parameter.
-    but_ranges : bool
-        Overlook directions that are bounded flat ranges.
     """
     scales = np.array([p.scale for p in problem.parameters])
     jacobian = np.nan_to_num(problem.jacobian(theta)) * scales
     _, gradient = problem.linearise_quantities(theta, [name])
     slope = np.nan_to_num(gradient[0]) * scales
-    if but_ranges:
-        counted = np.array([not getattr(p, "is_range", False) for p in problem.parameters])
-        jacobian, slope = jacobian[:, counted], slope[counted]
     norms = np.linalg.norm(jacobian, axis=0)
     if np.any((norms == 0) & (slope != 0)):
         return False

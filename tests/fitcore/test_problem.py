@@ -619,3 +619,25 @@ def test_a_file_may_set_and_measure_parameters_of_a_hypothesis(tmp_path):
     assert problem.fit(derived=[]).values["invented_size"] == pytest.approx(0.1, abs=0.02)
     with pytest.raises(UnknownNameError, match="invented_size"):
         Problem.load(path)
+
+
+# -- at a prompt ---------------------------------------------------------------------------------------------
+
+
+def test_one_name_alone_is_a_name(line):
+    point = np.array([1.0, 0.5])
+    assert line.values(point, "slope") == line.values(point, ["slope"]) == {"slope": 1.0}
+    values, gradient = line.linearise_quantities(point, "at_two")
+    assert (values.shape, gradient.shape) == ((1,), (1, 2))
+
+
+def test_a_problem_says_what_it_is(line):
+    assert repr(line) == (
+        f"<Problem {line.inputs.name!r}: 3 entries, 2 free parameters, hypothesis 'standard', theory errors as-given>"
+    )
+
+
+def test_what_is_imported_on_demand_is_listed():
+    import fitcore
+
+    assert {"Problem", "FitResult"} <= set(dir(fitcore))

@@ -212,3 +212,38 @@ def test_a_damaged_file_is_told(path, value):
     inner[path[-1]] = value
     with pytest.raises(StoreError, match="not a stored weakmix fit"):
         FitResult.from_dict(data)
+
+
+def test_printed_at_a_prompt() -> None:
+    one = Estimate(65.8, 1.4, (64.4, 67.2), (63.1, 68.6), "linear", "deg")
+    assert str(one) == "65.8 +- 1.4 deg"
+    assert str(Estimate(0.75, None, (0.74, 0.76), (0.74, 0.76), "range")) == "range [0.740, 0.760]"
+    assert str(Estimate(0.3)) == "0.3 (unconstrained)"
+    shown = str(
+        FitResult(
+            valid=True,
+            chi2=3.21,
+            degrees_of_freedom=2,
+            p_value=0.2,
+            inputs_name="invented",
+            flags=("flat-ranges",),
+            parameters={f"parameter_{i}": one for i in range(6)},
+        )
+    )
+    assert shown.splitlines() == [
+        "Fit of invented, hypothesis standard: converged",
+        "  chi-square 3.21 for 2 degrees of freedom, p-value 0.20",
+        "  flags: flat-ranges",
+        *(f"  parameter_{i}  65.8 +- 1.4 deg" for i in range(4)),
+        "  and 2 more parameters, 0 derived quantities, 0 measurements",
+    ]
+    assert "NOT CONVERGED: no reason recorded" in str(FitResult())
+
+
+def test_a_stored_row_keeps_its_source() -> None:
+    row = MeasurementRow("a", "b", 1.0, 0.1, 0.1, 1.1, -1.0, "1", "experiment", source="a paper")
+    stored = FitResult(measurements=(row,)).to_dict()
+    assert stored["measurements"][0]["source"] == "a paper"
+    assert FitResult.from_dict(stored).measurements[0].source == "a paper"
+    del stored["measurements"][0]["source"]  # written by an earlier weakmix
+    assert FitResult.from_dict(stored).measurements[0].source == ""

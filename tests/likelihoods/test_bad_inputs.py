@@ -64,7 +64,9 @@ SINGLE = [
         f'my.toml:1: {ONE}quantity is missing; write quantity = "NAME" (`weakmix find` searches them)',
     ]),
     ("wrong-unit", '"1/ps"', '"GeV"', [
-        f'my.toml:6: {ONE}unit "GeV" cannot be converted to "1/ps"; tide_frequency is in "1/ps"',
+        f'my.toml:6: {ONE}unit "GeV" cannot be converted to "1/ps": one is an energy, the other a rate; divide the '
+        'energy by hbar = 6.582119569e-13 GeV ps and write the unit "1/ps" ("hbar/ps" means the same); '
+        'tide_frequency is in "1/ps"',
     ]),
     ("unknown-unit", '"1/ps"', '"furlong"', [
         f'my.toml:6: {ONE}unit "furlong" is not known; tide_frequency is in "1/ps"',

@@ -441,7 +441,7 @@ class TestSettings:
         )
         assert_allclose([changed["a.b"].value, changed["a.b"].plus], [0.6, 0.04])
         assert changed["c"].errors == {"statistical": 0.3, "tagging": -1.2}
-        assert notices(changed, "changed")[0] == ("a.b", "error set to 20")
+        assert notices(changed, "changed")[0] == ("a.b", "error 10 -> 20 MeV")
         assert inputs["a.b"].plus == 0.01
 
     def test_block_members(self, inputs: Inputs) -> None:
@@ -452,6 +452,49 @@ class TestSettings:
 
     def test_named_errors_become_one(self, inputs: Inputs) -> None:
         assert inputs.with_settings(["c.error=0.2"])["c"].errors == {}
+
+    def test_notice_says_old_and_new_with_unit(self, inputs: Inputs) -> None:
+        changed = inputs.with_settings(
+            ["a.b.error=[20, 30]", "pair:tide_mass.error=[0.04, 0.05] GeV", "a.b.inflate=2"]
+        )
+        assert_allclose([changed["a.b"].plus, changed["a.b"].minus], [0.04, 0.06])  # inflated last
+        assert_allclose([changed["pair:tide_mass"].plus, changed["pair:tide_mass"].minus], [0.04, 0.05])
+        assert notices(changed, "changed")[0] == ("a.b", "error 10 -> [20, 30] MeV")
+        assert notices(changed, "changed")[2] == ("a.b", "inflate 1 -> 2")
+
+    def test_notice_names_lost_shared_sources(self, load) -> None:
+        shared = "errors = { statistical = 0.3, tagging = 0.4 }"
+        changed = load(entry("a", shared) + entry("b", shared)).with_settings(["a.error=0.6"])
+        ((_, text),) = notices(changed, "changed")
+        assert text == (
+            "error 0.5 -> 0.6; replaces the named errors statistical, tagging; "
+            "NO LONGER SHARES tagging with other entries"
+        )
+
+    @pytest.mark.parametrize(
+        ("number", "warned"), [("0.9", True), ("1.1", False), ("99", False), ("120", True)]
+    )
+    def test_a_change_of_more_than_ten_is_pointed_out(
+        self, inputs: Inputs, number: str, warned: bool
+    ) -> None:
+        ((_, text),) = notices(inputs.with_settings([f"a.b.error={number}"]), "changed")
+        assert ("CAUTION" in text) == warned
+        assert ('in the unit of the file, "MeV"' in text) == warned
+
+    def test_scaled_unit_and_plain_number(self, load) -> None:
+        inputs = load(entry("a", "error = 0.1", "tide_height", "1e-4", 5.0))
+        alone, scaled = (inputs.with_settings([f"a.error={text}"]) for text in ("0.2e-4", "0.2e-4 1"))
+        assert_allclose([alone["a"].plus, scaled["a"].plus], [0.2e-8, 0.2e-4])
+        assert notices(alone, "changed")[0][1].startswith(
+            "error 0.1 -> 2e-05 (in units of 1e-4); CAUTION: 5,000 times smaller than before"
+        )
+        assert 'such as "error=NUMBER 1"' in notices(alone, "changed")[0][1]
+        assert notices(scaled, "changed") == [("a", "error 0.1 -> 0.2 (in units of 1e-4)")]
+
+    def test_kinds_select_like_groups(self, load) -> None:
+        inputs = load(entry("a") + entry("b", 'error = 0.1\nkind = "theory"'))
+        assert inputs.select(without=["theory"]).ids == ("a",)
+        assert inputs.select(only=["theory"]).ids == ("b",)
 
     def test_parameters(self, inputs: Inputs, catalogue) -> None:
         changed = inputs.with_settings(
@@ -470,6 +513,10 @@ class TestSettings:
             ("c.error=nan", "must be finite"),
             ("c.error=[0.1]", r"write error=\[PLUS, MINUS\]"),
             ("c.error=[0.1", r"write error=NUMBER or error=\[PLUS, MINUS\]"),
+            ("c.error=2,3", r'"2,3" is not one number; write error=NUMBER or error=\[PLUS, MINUS\]'),
+            ("c.error=+2 -3", "is not one number"),
+            ("c.error=[2, -3]", "must be positive, not -3"),
+            ("c.error=[2, 3] GeV", 'unit "GeV" cannot'),
             ("c.error=0.1 GeV", 'unit "GeV" cannot be converted to "1"'),
             ("c.errors.scale=0.1", 'has no error source "scale"; it has: statistical, tagging'),
             ("c.errors.statistical=-0.1", "must be positive"),

@@ -42,6 +42,7 @@ def test_points_intervals_and_coverage_are_written_with_their_figures(weakmix, t
         "Coverage",
         "68.3 %",
         "90 %",
+        "ends +-",
     ):
         assert words in done.stdout
     names = {path.name for path in (tmp_path / "run").iterdir()}
@@ -244,3 +245,16 @@ def test_progress_lines_where_there_is_no_terminal(monkeypatch, capsys):
 def test_help_names_the_command(weakmix):
     assert "calibrate" in weakmix("--help").stdout
     assert "--cluster" in weakmix("calibrate", "--help").stdout
+
+
+def test_a_wrong_level_is_said_before_anything_else(weakmix):
+    done = weakmix("calibrate", TREE, "--cl", 1.5)
+    assert (done.exit_code, done.stdout) == (2, "")
+    assert "confidence level 1.5 is not between 0 and 1" in done.stderr
+
+
+def test_a_calibrated_p_value_shows_two_digits_of_its_error():
+    from fitcore.commands.calibration_tables import p_value
+
+    assert p_value(0.213, 0.013) == "0.213 +- 0.013"
+    assert p_value(0.218, 0.0203) == "0.218 +- 0.020"

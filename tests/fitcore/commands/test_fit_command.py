@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import csv
 import hashlib
 import json
 from collections.abc import Callable
@@ -178,6 +179,48 @@ def test_compute_takes_the_hypothesis_of_the_run(weakmix: Run, template: Path) -
     assert weakmix("compute", "jarlskog", "--from", "run", "--hypothesis", "standard").exit_code == 0
 
 
+def test_a_chain_file_is_named_as_one(weakmix: Run, tmp_path: Path) -> None:
+    (tmp_path / "chain.h5").write_bytes(b"\x89HDF\r\n\x1a\n" + bytes(64))
+    for arguments in (
+        ("compute", "jarlskog", "--from", "chain.h5"),
+        ("fit", "chain.h5"),
+        ("show", "chain.h5"),
+    ):
+        done = weakmix(*arguments)
+        assert done.exit_code == 2
+        assert "is a chain file" in done.stderr
+        assert "weakmix chain derive chain.h5" in done.stderr
+
+
+def test_flat_theory_errors_from_fit_to_compute(weakmix: Run, tmp_path: Path) -> None:
+    done = weakmix("fit", "averages-2026", "--theory-errors", "flat", "--out", "run")
+    assert done.exit_code == 0, done.output
+    assert "range [0.7442, 0.7624]" in done.stdout  # bag_K: 0.7533(91)
+    assert "(unconstrained)" not in done.stdout
+    assert "flat theory errors are ranges" in " ".join(done.stdout.split())
+    rows = json.loads((tmp_path / "run" / "result.json").read_text())
+    assert rows["parameters"]["bag_K"]["method"] == "range"
+    assert (tmp_path / "run" / "measured-against-fitted.csv").exists()
+    assert not (tmp_path / "run" / "correlation.csv").exists()  # nothing is left to correlate
+    done = weakmix("compute", "jarlskog", "--from", "run")
+    assert done.exit_code == 0, done.output
+    assert "No intervals: the fit has no covariance matrix" in done.stdout
+
+
+def test_result_and_figure_data_carry_sources(weakmix: Run, template: Path, tmp_path: Path) -> None:
+    assert weakmix("fit", template, "--out", "run", "-q").exit_code == 0
+    rows = json.loads((tmp_path / "run" / "result.json").read_text())["measurements"]
+    assert {row["source"] for row in rows} == {"invented"}
+    table = list(csv.DictReader((tmp_path / "run" / "measured-against-fitted.csv").read_text().splitlines()))
+    assert {row["source"] for row in table} == {"invented"}
+
+
+def test_one_entry_is_not_entries(weakmix: Run, template: Path) -> None:
+    shown = weakmix("show", template, "--only", "gamma").stdout
+    assert " 1 entry, " in shown
+    assert "1 entries" not in shown
+
+
 def test_compute_from_something_else(weakmix: Run, tmp_path: Path) -> None:
     (tmp_path / "empty").mkdir()
     done = weakmix("compute", "jarlskog", "--from", "empty")
@@ -249,3 +292,15 @@ def test_the_verdict_comes_first(weakmix: Run) -> None:
     assert "quark mixing fit" in lines[0]
     assert lines[1].startswith("Converged. chi-square")
     assert lines[2].split()[0] == "recalled"
+
+
+def test_intervals_by_profile_where_asked(weakmix):
+    told = weakmix("fit", "averages-2026-tree", "--derived", "angle_beta", "--json", "-")
+    content = json.loads(told.stdout)
+    assert content["derived"]["angle_beta"]["method"] == "profile"
+    assert content["derived"]["jarlskog"]["method"] == "linear"
+    every = json.loads(weakmix("fit", "averages-2026-tree", "--profile-intervals", "--json", "-").stdout)
+    assert {one["method"] for one in every["derived"].values()} == {"profile"}
+    # the parabola of |V_ub| is a good one: its own measurement dominates
+    linear, profiled = content["derived"]["magnitude_V_ub"], every["derived"]["magnitude_V_ub"]
+    assert profiled["interval_68"] == pytest.approx(linear["interval_68"], rel=0.005)

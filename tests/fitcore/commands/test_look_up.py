@@ -30,6 +30,10 @@ Run = Callable[..., Result]
         ("angle gamma", "angle_gamma"),
         ("B oscillation", "mixing_frequency_Bd"),
         ("tau lifetime", "lifetime_tau"),
+        ("B -> tau nu", "branching_Bu_tau_nu"),
+        ("D_s -> tau nu", "branching_Ds_tau_nu"),
+        ("K+ -> pi0 e nu", "branching_K_pi0_e_nu"),
+        ("B_K", "bag_K"),
     ],
 )
 def test_find_puts_what_was_meant_first(weakmix: Run, words: str, first: str) -> None:
@@ -39,6 +43,13 @@ def test_find_puts_what_was_meant_first(weakmix: Run, words: str, first: str) ->
     shown = weakmix("find", words).stdout
     assert shown.startswith("weakmix ")
     assert "quark mixing" in shown.splitlines()[0]
+
+
+def test_find_nothing_but_an_arrow(weakmix: Run) -> None:
+    done = weakmix("find", "->")
+    assert done.exit_code == 2
+    assert "nothing in the catalogue matches" in done.stderr
+    assert "branching_Bu_tau_nu" in weakmix("find", "B", "->", "tau", "nu").stdout.splitlines()[3]
 
 
 def test_find_every_name_finds_itself_first() -> None:

@@ -182,6 +182,10 @@ def complete(words: str) -> list[str]:
         ("weakmix fi", ["find", "fit"]),
         ("weakmix fit aver", ["averages-2026", "averages-2026-tree", "aver"]),
         ("weakmix fit averages-2026 --theory", ["--theory-errors"]),
+        ("weakmix fit averages-2026-tree --without V-u", ["V-ud", "V-us", "V-ub"]),
+        ("weakmix show averages-2026-tree --only tre", ["tree", "tree-phase"]),
+        ("weakmix show averages-2026 --only the", ["theory"]),
+        ("weakmix show no-such-file.toml --only t", [""]),
         ("weakmix recipe mixing_frequency_B", ["mixing_frequency_Bd", "mixing_frequency_Bs"]),
     ],
 )

@@ -116,6 +116,44 @@ def test_own_hypothesis(weakmix: Run, module: Path) -> None:
     assert json.loads(done.stdout)["values"]["own_ratio"] == pytest.approx(1.5 * plain)
 
 
+def test_unknown_hypothesis_says_what_there_is_and_how_to_add_one(
+    weakmix: Run, module: Path, template: Path
+) -> None:
+    for command in (("fit", template), ("recipe", "jarlskog"), ("compute", "jarlskog", "--start-values")):
+        done = weakmix(*command, "--hypothesis", "mistyped")
+        assert done.exit_code == 2
+        assert "unknown hypothesis 'mistyped': none is registered" in done.stderr
+        assert "--module FILE.py" in done.stderr
+    done = weakmix("recipe", "jarlskog", "--module", module, "--hypothesis", "own-twits")
+    assert "the registered ones are own-twist" in done.stderr
+
+
+def test_a_run_stands_for_its_inputs_and_brings_its_module(
+    weakmix: Run, module: Path, template: Path
+) -> None:
+    own = Path("own.toml")
+    own.write_text(INPUTS.format(template=template.name))
+    options = ("--no-figures", "-q", "--without", "gamma")
+    assert weakmix("fit", own, "--module", module, "--out", "run", *options).exit_code == 0
+    module.unlink()
+
+    def fresh(*arguments: str) -> subprocess.CompletedProcess[str]:
+        code = "from fitcore.commands.main import main; main()"
+        return subprocess.run([sys.executable, "-c", code, *arguments], capture_output=True, text=True)
+
+    done = fresh("compute", "own_ratio", "--from", "run", "--json", "-")
+    assert done.returncode == 0, done.stderr
+    assert json.loads(done.stdout)["errors"]["own_ratio"] > 0
+    done = fresh("fit", "run", "--out", "again", "--no-figures")
+    assert done.returncode == 0, done.stderr
+    assert "quark mixing fit - own" in done.stdout.splitlines()[0]
+    first, second = (json.loads(Path(name, "result.json").read_text()) for name in ("run", "again"))
+    assert second["chi2"] == pytest.approx(first["chi2"], rel=1e-9)
+    assert [row["id"] for row in second["measurements"]] == [row["id"] for row in first["measurements"]]
+    done = fresh("rerun", "again")
+    assert done.returncode == 0, done.stderr
+
+
 @pytest.mark.parametrize(
     ("text", "words"),
     [

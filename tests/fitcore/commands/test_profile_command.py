@@ -89,7 +89,11 @@ def test_each_constraint(weakmix, tmp_path):
     assert sum(part["chi2_share"] for part in content["each"]) < content["minimum"]
     header = (tmp_path / "run" / "plane.csv").read_text().splitlines()[0].split(",")
     assert header[3:] == [f"delta_chi2 {name}" for name in names]
-    assert "Constraints, each alone" in result.output
+    assert "Constraints, each alone: 68.27 % (Delta chi-square 2.296, two parameters)" in result.output
+    # the range ends before the band of |V_ub| does
+    assert "beyond both ends" in result.output
+    assert set(content["held"]) == {"wolfenstein_lambda", "wolfenstein_A"}
+    assert content["each"][names.index("angle_gamma")]["with"] == []
 
 
 def test_theory_errors_side_by_side(weakmix):
@@ -97,7 +101,10 @@ def test_theory_errors_side_by_side(weakmix):
         weakmix, "profile", "averages-2026", "wolfenstein_etabar=0.32:0.39:29", "--compare-theory-errors"
     )
     compared = content["theory_errors_compared"]
-    assert set(compared) == {"gaussian", "flat"}
+    assert set(compared) == {"flat"}
+    # nothing is flat as given: one curve stands for both
+    assert content["theory_errors_same"] == ["gaussian"]
+    assert "as-given = gaussian" in result.stderr
     ((low, high),) = compared["flat"]["regions"][0]["intervals"]
     # an independent calculation of these inputs with flat theory errors gives .3560(63)
     assert (low, high) == pytest.approx((0.3497, 0.3623), abs=0.08 * 0.0063)

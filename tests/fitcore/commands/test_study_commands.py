@@ -43,6 +43,8 @@ def test_budget(weakmix, tmp_path):
     # sin 2 beta carries the angle: its unit shift is most of the whole
     assert content["entries"][0]["name"] == "sine-2beta"
     assert 0.7 < abs(content["entries"][0]["shift"]) / content["error"] < 1.0
+    assert "if exact" in result.output
+    assert "removal" not in result.output
     groups = {row["name"] for row in content["groups"]}
     assert groups >= {"experiment", "theory", "lattice", "perturbative", "tree"}
     rows = list(csv.DictReader((tmp_path / "run" / "budget-angle_beta.csv").read_text().splitlines()))
@@ -121,3 +123,9 @@ def test_an_outlook_that_matches_nothing(weakmix, tmp_path):
     assert "gama-average" in result.stderr
     assert "did you mean gamma-average" in " ".join(result.stderr.split())
     assert not (tmp_path / "weakmix-runs").exists()
+
+
+def test_a_budget_lists_names_that_select(weakmix):
+    done = weakmix("show", "averages-2026", "--without", "theory", "--json", "-")
+    assert done.exit_code == 0, done.output
+    assert {entry["kind"] for entry in json.loads(done.stdout)["entries"]} == {"experiment"}

@@ -28,7 +28,7 @@ name                value                   68.27 %             95.0 %          
 ─────────────────────────────────────────────────────────────────────────────────────────────────
 wolfenstein_lambda  0.22519 +- 0.00068      [0.22451, 0.22587]  [0.22386, 0.22652]        profile
 wolfenstein_A       0.833 +- 0.011          [0.823, 0.844]      [0.813, 0.854]            profile
-wolfenstein_rhobar  0.2 (open on one side)  [0.1, inf]          [-inf, inf]               profile
+wolfenstein_rhobar  0.2 (open on one side)  [0.10, inf]         [-inf, inf]               profile
 wolfenstein_etabar  0.3 (unconstrained)     -                   -                         -"""
 
 DERIVED = """\
@@ -50,7 +50,7 @@ OTHER_MINIMA = """\
 Other minima
 chi-square  above the best  wolfenstein_lambda  wolfenstein_A  wolfenstein_rhobar  wolfenstein_etabar
 ─────────────────────────────────────────────────────────────────────────────────────────────────────
-      5.50           +2.29              0.2252           0.83                 0.2                -0.3"""
+      5.50           +2.29             0.22520          0.830              0.2000             -0.3000"""
 
 
 def test_golden_parameters(result: FitResult) -> None:
@@ -73,7 +73,7 @@ def test_golden_other_minima(result: FitResult) -> None:
 
 def test_verdict_comes_with_reasons(result: FitResult) -> None:
     good = text(*tables.verdict(result))
-    assert good == "Converged. chi-square 3.21 for 2 degrees of freedom, p-value 0.2"
+    assert good == "Converged. chi-square 3.21 for 2 degrees of freedom, p-value 0.20"
     bad = replace(
         result, valid=False, message="minimisers disagree", flags=("minimisers-disagree",), p_value=None
     )
@@ -138,7 +138,7 @@ def test_names_fold_at_their_separators_and_nothing_else_does(result: FitResult)
     output.show(tables.other_minima(result))
     lines = output.console.file.getvalue().splitlines()  # type: ignore[attr-defined]
     assert "wolfenstein_" in "".join(lines)
-    assert any(line.split() == ["5.50", "+2.29", "0.2252", "0.83", "0.2", "-0.3"] for line in lines)
+    assert any(line.split() == ["5.50", "+2.29", "0.22520", "0.830", "0.2000", "-0.3000"] for line in lines)
 
 
 @pytest.mark.parametrize("width", [60, 80, 100, 140])
@@ -152,3 +152,35 @@ def test_headline_breaks_between_details(width: int) -> None:
     assert "quark mixing fit" in lines[0]
     for detail in details:
         assert any(detail in line for line in lines)
+
+
+def test_flat_ranges_are_ranges(result: FitResult) -> None:
+    bounds = (0.7442, 0.7624)
+    flat = replace(
+        result,
+        parameters={**result.parameters, "bag_K": Estimate(0.75, None, bounds, bounds, "range")},
+        p_value=None,
+    )
+    line = text(tables.estimates("Parameters", flat.parameters)).splitlines()[-1]
+    assert line.split() == ["bag_K", "range", "[0.7442,", "0.7624]", "-", "-", "range"]
+    assert "every error is Gaussian as written" in tables.caution(result)
+    assert "flat theory errors are ranges" in tables.caution(flat)
+    assert "Under flat ranges neither a p-value nor a covariance matrix" in tables.caution(flat)
+    assert FitResult.from_json(flat.to_json()).parameters["bag_K"] == flat.parameters["bag_K"]
+
+
+def test_one_power_of_ten_in_a_row() -> None:
+    rows = (
+        MeasurementRow(
+            *("tau-nu", "branching_Bu_tau_nu", 1.49e-4, 0.14e-4, 0.14e-4, 9.71e-5, 3.7, "1", "experiment"),
+            fitted_error=0.42e-5,
+        ),
+    )
+    assert "(1.49 +- 0.14)e-04  (0.971 +- 0.042)e-04" in text(tables.measurements(rows))
+    near = {"x": Estimate(9.9e-4, 2e-5, (9.7e-4, 1.01e-3), (9.5e-4, 1.03e-3))}
+    assert "(9.90 +- 0.20)e-04  [9.70, 10.10]e-04  [9.50, 10.30]e-04" in text(tables.estimates("", near))
+
+
+def test_p_values_keep_their_zeros() -> None:
+    assert tables.p_value(0.1) == "p-value 0.10"
+    assert tables.p_value(3e-7) == "p-value 3.0e-07"

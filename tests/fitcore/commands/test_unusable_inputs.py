@@ -161,6 +161,8 @@ def test_all_mistakes_are_shown_together(weakmix: Run, folder: Path) -> None:
     [
         ("nowhere.toml", "no such file and no bundled inputs"),
         (".", "is a directory"),
+        ("", "the name of the inputs file is empty"),
+        ("nul\0inside", "the name of the inputs file is empty"),
         ("avrages-2026", "averages-2026"),
     ],
 )

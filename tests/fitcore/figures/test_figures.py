@@ -128,6 +128,58 @@ def test_everything_lies_on_the_page(result: FitResult) -> None:
                 assert box.y1 <= page.y1 + 1
 
 
+def test_auxiliary_inputs_give_way_to_measurements_of_the_matrix(result: FitResult) -> None:
+    own = [row(f"own-{k}", 1.0, 0.1, 1.001, "tree") for k in range(30)]
+    theory = [row(f"theory-{k}", 1.0, 0.1, 1.2 + 0.01 * k, "lattice", kind="theory") for k in range(20)]
+    lifetimes = [row(f"lifetime-{k}", 1.0, 0.1, 1.3 + 0.01 * k, "lifetime") for k in range(5)]
+    chosen = dumbbell.selection((*theory, *lifetimes, *own))
+    assert len(chosen) == dumbbell.MOST
+    assert {one.id for one in own} <= {one.id for one in chosen}
+    assert [one.id for one in chosen[30:32]] == ["theory-19", "theory-18"] or chosen[30].id == "lifetime-4"
+    many = [row(f"own-{k}", 1.0, 0.1, 1.001, "tree") for k in range(50)]
+    assert dumbbell.selection((*theory, *many))[:50] == tuple(many)
+    drawing = dumbbell.draw(replace(result, measurements=(*theory, *lifetimes, *own)))
+    assert "all 30 measurements; 10 of 25 auxiliary inputs, by pull" in texts(drawing.figure)
+    assert len(drawing.rows) == 55  # the data hold every row
+
+
+def test_scales_show_units_and_powers(result: FitResult) -> None:
+    assert dumbbell.tick_texts([6e-5, 8e-5, 1e-4]) == (["0.6", "0.8", "1.0"], -4)
+    assert dumbbell.tick_texts([0.05, 0.1]) == (["0.05", "0.10"], 0)
+    assert dumbbell.scale_unit("1/ps", 0) == "1/ps"
+    assert dumbbell.scale_unit("1", -5) == r"$\times 10^{-5}$"
+    shown = texts(dumbbell.draw(result).figure)
+    assert "GeV" in shown
+    assert "(bold: 2 or more)" in shown
+    tiny = replace(result, measurements=(row("tiny", 1e-4, 1e-5, 1.1e-4, "tree"),))
+    assert r"$\times 10^{-4}$" in texts(dumbbell.draw(tiny).figure)
+
+
+def test_data_hide_binary_noise_and_nothing_else() -> None:
+    drawing = style.Drawing(Figure(), ("a", "b", "c"), ((5.39 * 0.01, 1 / 3, None),))
+    assert drawing.csv_text().splitlines()[1] == f"0.0539,{1 / 3!r},"
+
+
+def test_correlations_of_ranges_are_left_out(result: FitResult) -> None:
+    from fitcore.result import Estimate
+
+    bounds = (0.1, 0.3)
+    names = (*result.correlation_names, "flat", "loose")
+    matrix = tuple((*row, math.nan, math.nan) for row in result.correlation_matrix) + ((math.nan,) * 5,) * 2
+    more = replace(
+        result,
+        correlation_names=names,
+        correlation_matrix=matrix,
+        parameters={"flat": Estimate(0.2, None, bounds, bounds, "range"), "loose": Estimate(0.1)},
+    )
+    assert correlation.defined(more) == [0, 1, 2]
+    shown = texts(correlation.draw(more).figure)
+    assert "flat" not in shown
+    assert any("2 without correlations" in item for item in shown)
+    nothing = replace(more, correlation_matrix=((None,) * 5,) * 5)  # type: ignore[arg-type]
+    assert correlation.defined(nothing) == []
+
+
 def test_correlation_bars_have_sign_and_length(result: FitResult) -> None:
     from matplotlib.colors import to_hex
     from matplotlib.patches import PathPatch, Rectangle
@@ -146,7 +198,7 @@ def test_correlation_bars_have_sign_and_length(result: FitResult) -> None:
     shown = texts(drawing.figure)
     assert {"50", "\N{MINUS SIGN}75", "first"} <= set(shown)
     assert len([patch for patch in drawing.figure.axes[0].patches if isinstance(patch, PathPatch)]) == 2
-    assert len(drawing.rows) == 3
+    assert len(drawing.rows) == 2  # the undefined one is left out
 
 
 def test_large_matrices_show_the_most_correlated() -> None:

@@ -146,6 +146,22 @@ def test_plane_data(drawing):
     assert float(rows[0]["delta_chi2 wave"]) == pytest.approx(((-1.0 + 1.2) / 0.1) ** 2)
 
 
+def test_a_band_inside_the_frame_is_tied_to_its_name():
+    together = plane.Band(
+        "everything", "", style.OTHER, X, Y, (X[:, None] / 0.1) ** 2 + (Y[None, :] / 0.1) ** 2
+    )
+    delta = ((X[:, None] - 0.3) / 0.2) ** 2 + ((Y[None, :] + 0.1) / 0.2) ** 2
+    spot = plane.Band("spot", "", TREE, X, Y, delta)
+    axes = (plane.PlaneAxis("first"), plane.PlaneAxis("second"))
+    drawn = plane.draw(axes, together, [spot], levels=LEVELS)
+    main = by_gid(drawn.figure, "spot:0")[0].axes
+    leader = by_gid(drawn.figure, "leader:spot")[-1]
+    start = leader.axes.transData.transform(leader.get_xydata()[0])
+    # it starts where the band is lowest
+    step = float(np.hypot(X[1] - X[0], Y[1] - Y[0]))
+    assert main.transData.inverted().transform(start) == pytest.approx((0.3, -0.1), abs=step)
+
+
 def test_a_plane_without_bands_and_with_impossible_points():
     delta = (X[:, None] / 0.5) ** 2 + (Y[None, :] / 0.6) ** 2
     delta = np.where(X[:, None] > 0.6, np.inf, delta)

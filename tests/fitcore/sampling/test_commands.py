@@ -127,7 +127,9 @@ class TestSummaryAgainst:
         assert fit.exit_code == 0, fit.output
         result = run(chain_command.command, "summary", chain[0], "--against", tmp_path / "fit", *self.NAMES)
         assert result.exit_code == 0, result.output
-        assert "profile 68.27 %" in result.stdout
+        assert "fit 68.27 %" in result.stdout
+        assert "profile 68.27 %" not in result.stdout
+        assert "] profile" in next(x for x in result.stdout.splitlines() if x.startswith("wolfenstein_rhobar"))
         assert "differs from the chain" not in result.stdout
 
     def test_profile_of_one_quantity(self, chain, tmp_path):
@@ -221,6 +223,19 @@ def test_chain_export(chain, tmp_path):
     result = run(chain_command.command, "export", chain[0], "--format", "npz", "--to", target)
     assert result.exit_code == 2
     assert "exists already" in result.stderr
+
+
+def test_chain_export_goes_by_the_ending(chain, tmp_path):
+    target = tmp_path / "c.nc"
+    result = run(chain_command.command, "export", chain[0], "--to", target, "--thin", 50, "--json", "-")
+    assert result.exit_code == 0, result.output
+    assert json.loads(result.stdout)["format"] == "netcdf"
+    assert target.read_bytes()[1:4] == b"HDF"
+    for wrong in (("--to", tmp_path / "c.dat"), (), ("--format", "csv", "--to", tmp_path / "d.nc")):
+        refused = run(chain_command.command, "export", chain[0], *wrong)
+        assert refused.exit_code == 2
+        assert "format" in refused.stderr
+    assert not (tmp_path / "d.nc").exists()
 
 
 def test_interrupt_prints_the_command_that_goes_on(tmp_path, monkeypatch):

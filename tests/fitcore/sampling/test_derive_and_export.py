@@ -96,6 +96,19 @@ class TestExport:
             assert int(row[2]) == walker // 16
             np.testing.assert_array_equal([float(v) for v in row[4:7]], expected[step, walker])
 
+    def test_csv_of_a_complex_quantity_keeps_every_column_real(self, problem, path, tmp_path):
+        derive(path, problem, ["sum", "phase"])
+        with ChainFile.open(path) as chain:
+            out = export(chain, tmp_path / "c.csv", format="csv", thin=20)
+            samples = chain.get_chain()[::20].reshape(-1, 3)
+        with out.open() as stream:
+            head, *rows = csv.reader(stream)
+        assert head[4:] == ["p0", "p1", "p2", "phase_re", "phase_im", "sum"]
+        table = np.array([[float(cell) for cell in row] for row in rows])
+        np.testing.assert_array_equal(table[:, 4:7], samples)
+        np.testing.assert_allclose(table[:, 7] + 1j * table[:, 8], np.exp(1j * samples[:, 0]), rtol=1e-14)
+        np.testing.assert_allclose(table[:, 9], samples.sum(axis=1), rtol=1e-13)
+
     def test_npz(self, problem, path, tmp_path):
         derive(path, problem, ["sum", "phase"])
         with ChainFile.open(path) as chain:
@@ -107,6 +120,8 @@ class TestExport:
             np.testing.assert_array_equal(archive["accepted"], accepted[::2])
             np.testing.assert_array_equal(archive["steps"], np.arange(0, 40, 2))
             np.testing.assert_array_equal(archive["ensembles"], np.repeat([0, 1], 16))
+            assert archive["derived_sum"].dtype == np.float64
+            assert archive["derived_phase"].dtype == np.complex128
             np.testing.assert_allclose(archive["derived_sum"], samples[::2].sum(axis=2))
             np.testing.assert_allclose(archive["derived_phase"], np.exp(1j * samples[::2, :, 0]))
             assert list(archive["parameter_names"]) == ["p0", "p1", "p2"]
@@ -121,7 +136,9 @@ class TestExport:
             samples, log_posterior, _ = chain.read_all()
         data = arviz.from_netcdf(out, engine="h5netcdf")
         assert data.posterior.sizes == {"chain": 2, "draw": 40 * 16}
-        assert set(data.posterior.data_vars) == {"p0", "p1", "p2", "sum"}
+        assert set(data.posterior.data_vars) == {"p0", "p1", "p2", "sum", "phase_re", "phase_im"}
+        phase = data.posterior["phase_re"].values + 1j * data.posterior["phase_im"].values
+        np.testing.assert_allclose(phase, np.exp(1j * data.posterior["p0"].values), rtol=1e-14)
         np.testing.assert_array_equal(data.posterior["p1"].values[1], samples[:, 16:, 1].reshape(-1))
         np.testing.assert_array_equal(data.sample_stats["lp"].values[0], log_posterior[:, :16].reshape(-1))
         assert data.posterior["p0"].attrs["units"] == "1"

@@ -5,6 +5,7 @@ pytest.importorskip("emcee")
 
 from fitcore.sampling.chain_format import ChainHeader
 from fitcore.sampling.diagnostics import (
+    Mixing,
     WidthCheck,
     diagnose,
     effective_sample_size,
@@ -82,6 +83,22 @@ def test_longest_stay_runs_across_blocks(block_steps):
     accepted[0:50, 1] = False
     chain = stored(np.zeros((200, 4, 1)), accepted, block_steps)
     assert longest_stay(chain) == 121
+
+
+@pytest.mark.parametrize(
+    ("steps", "margin", "status"),
+    [(420, 1.05, "reliable"), (419, 1.05, "tentative"), (400, 1.0, "reliable"), (99, 1.0, "unusable")],
+)
+def test_status_of_a_length(steps, margin, status):
+    mixing = Mixing(steps, np.array([50.0, 90.0]), np.array([10.0, 5.0]), np.array([1.0, 1.0]))
+    assert mixing.status(margin) == status
+
+
+def test_parameter_that_never_moved_counts_as_the_slowest():
+    mixing = Mixing(500, np.array([90.0, np.nan]), np.array([5.0, np.nan]), np.array([1.0, np.nan]))
+    assert mixing.slowest == 1
+    assert mixing.status() == "unusable"
+    assert not mixing.agree
 
 
 def test_good_chain_is_called_good():

@@ -144,6 +144,31 @@ def test_stopping_rule_is_reproducible(problems, tmp_path):
     assert "2000 effective samples" in a.stopped_because
 
 
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_stopping_rule_and_diagnosis_are_one(problems, monkeypatch, seed):
+    """A run that a short look lets stop near 40 autocorrelation times is looked at as the diagnosis does."""
+    from fitcore.sampling import run
+
+    looks = []
+
+    def noted(thinned):
+        looks.append(run_mixing(thinned))
+        return looks[-1]
+
+    run_mixing = run.mixing
+    monkeypatch.setattr(run, "mixing", noted)
+    monkeypatch.setattr(run, "_CHECK_VALUES", 1 << 9)
+    options = {"walkers": 12, "ensembles": 2, "block_steps": 8, "check_widths": False}
+    result = sample(problems.banana(2.0), effective=20, rng=seed, **options)
+    found = result.diagnostics
+    np.testing.assert_array_equal(looks[-1].effective_sample_size, found.effective_sample_size)
+    np.testing.assert_array_equal(looks[-1].rhat, found.rhat)
+    assert "20 effective samples" in result.stopped_because
+    assert found.status == "reliable"
+    assert found.steps >= 1.05 * 40 * found.autocorrelation_time.max()
+    assert not any("run longer" in line for line in found.advice)
+
+
 def test_minutes(problems):
     result = sample(problems.gaussian(np.eye(2)), minutes=0.002, rng=1, check_widths=False)
     assert "minutes are over" in result.stopped_because

@@ -8,7 +8,7 @@ from scipy import stats
 
 pytest.importorskip("emcee")
 
-from fitcore.sampling.density import density_1d, density_2d, highest_density, shortest_interval
+from fitcore.sampling.density import credible, density_1d, density_2d, highest_density, shortest_interval
 from fitcore.sampling.posterior import sample
 from fitcore.sampling.summary import summarise
 from observables.errors import InputError, UnknownNameError
@@ -47,6 +47,36 @@ def test_names_and_credibilities_are_checked(gaussian_result):
     assert [row.name for row in summarise(chain, names=["p1"]).rows] == ["p1"]
     with pytest.raises(UnknownNameError):
         summarise(chain)["q"]
+
+
+def test_summary_says_which_intervals_are_equal_tailed_and_how_the_fit_got_its_own(problems):
+    """A parameter without any information, beside one with a measurement."""
+    from io import StringIO
+
+    from rich.console import Console
+
+    from fitcore.commands import posterior_tables
+    from fitcore.result import Estimate
+
+    problem = problems.AnalyticProblem(
+        lambda theta: -0.5 * (theta[:, 0] / 0.1) ** 2, 2, lower=[-1, -1], upper=[1, 1]
+    )
+    summary = summarise(sample(problem, effective=5000, rng=1, check_widths=False).chain)
+    assert [row.kind for row in summary.rows] == ["highest-density", "equal-tailed"]
+    assert summary["p1"].intervals[0.6827][0] == pytest.approx((-0.6827, 0.6827), abs=0.03)
+    assert summary.to_dict()["parameters"]["p1"]["reason"] == "flat"
+    fit = {
+        "p0": Estimate(0.0, 0.1, (-0.1, 0.1), (-0.196, 0.196), "linear", "1"),
+        "p1": Estimate(0.0, None, (-1.0, 1.0), (-1.0, 1.0), "range", "1"),
+    }
+    console = Console(width=160, file=StringIO(), no_color=True)
+    console.print(posterior_tables.summary(summary, fit))
+    lines = console.file.getvalue().splitlines()
+    assert any("fit 68.27 %" in line for line in lines)
+    assert "] linear" in next(line for line in lines if line.strip().startswith("p0"))
+    assert "] range" in next(line for line in lines if line.strip().startswith("p1"))
+    assert any("equal-tailed intervals for p1: the density is too flat" in line for line in lines)
+    assert "profile" not in console.file.getvalue()
 
 
 class TestDensity:
@@ -90,6 +120,68 @@ class TestDensity:
         regions = highest_density(density_1d(draws, lower=-1, upper=1, effective=effective), 0.6827)
         assert len(regions) == 1
         assert np.diff(regions[0])[0] == pytest.approx(2 * 0.6827, abs=0.05)
+
+    @pytest.mark.stat
+    @pytest.mark.parametrize("slope", [0.0, 0.08])
+    @pytest.mark.parametrize("size", [2000, 100_000])
+    def test_flat_density_gets_equal_tailed_intervals(self, slope, size):
+        """On (0, 1) with density 1 + slope (2 x - 1): regions of highest density there would be noise."""
+        share = self.rng.random(size)
+        # Solves x + slope (x^2 - x) = share.
+        x = 2 * share / (1 - slope + np.sqrt((1 - slope) ** 2 + 4 * slope * share))
+        found = credible(density_1d(x, lower=0, upper=1), (0.6827, 0.9545))
+        assert (found.kind, found.reason) == ("equal-tailed", "flat")
+        for level, (region,) in found.regions.items():
+            expected = np.quantile(x, [0.5 - level / 2, 0.5 + level / 2])
+            assert region == pytest.approx(tuple(expected), abs=0.01)
+
+    @pytest.mark.stat
+    @pytest.mark.parametrize(
+        ("distribution", "bounds"),
+        [
+            (stats.norm(), (-np.inf, np.inf)),
+            (stats.expon(), (0.0, np.inf)),
+            (stats.triang(1.0), (0.0, 1.0)),
+            (stats.gamma(3), (0.0, np.inf)),
+        ],
+    )
+    def test_density_with_a_top_keeps_regions_of_highest_density(self, distribution, bounds):
+        draws = distribution.rvs(5000, random_state=self.rng)
+        density = density_1d(draws, lower=bounds[0], upper=bounds[1])
+        found = credible(density, (0.9545, 0.6827))
+        assert found.kind == "highest-density"
+        assert list(found.regions) == [0.9545, 0.6827]
+        assert found.regions[0.6827] == highest_density(density, 0.6827)
+
+    @pytest.mark.stat
+    def test_regions_always_lie_inside_each_other(self):
+        """Uniform, uniform with soft edges, top-heavy and double densities, from few to many draws."""
+        kinds = set()
+        for number in range(60):
+            size = int(10 ** self.rng.uniform(2, 4.5))
+            draws = (
+                self.rng.uniform(-1, 1, size),
+                self.rng.uniform(-1, 1, size) + self.rng.normal(0, 0.2, size),
+                self.rng.beta(1, 1.4, size),
+                np.where(self.rng.random(size) < 0.4, 0.0, 2.5) + self.rng.normal(0, 1, size),
+            )[number % 4]
+            bounds = {"lower": -1.0, "upper": 1.0} if number % 4 == 0 else {}
+            found = credible(density_1d(draws, effective=size / 3, **bounds), (0.5, 0.6827, 0.9, 0.9545))
+            kinds.add(found.kind)
+            regions = list(found.regions.values())
+            for inner, outer in zip(regions, regions[1:], strict=False):
+                assert all(any(a <= low and high <= b for a, b in outer) for low, high in inner)
+        assert kinds == {"highest-density", "equal-tailed"}
+
+    def test_regions_that_are_not_nested_are_replaced(self, monkeypatch):
+        from fitcore.sampling import density
+
+        made = density_1d(self.rng.normal(size=5000))
+        regions = {0.6827: ((-1.0, 1.0),), 0.9545: ((-0.9, 3.0),)}
+        monkeypatch.setattr(density, "highest_density", lambda _, level: regions[level])
+        found = credible(made, (0.6827, 0.9545))
+        assert (found.kind, found.reason) == ("equal-tailed", "not nested")
+        assert found.regions[0.6827][0] == pytest.approx((-1, 1), abs=0.1)
 
     def test_region_at_an_edge_ends_there(self):
         draws = self.rng.exponential(size=50_000)

@@ -64,17 +64,15 @@ def test_published_averages_add_up():
     assert result.entries["wolfenstein_A"][0].name == "V-us"
 
 
-def test_flat_ranges_are_named(make, tables):
+def test_flat_ranges_have_no_budget(make, tables):
     problem = make(
         tables.measurement("lattice", "slope", 1.0, 0.1, kind="theory"),
         tables.measurement("a", "at_one", 1.3, 0.1),
         tables.measurement("b", "at_two", 2.4, 0.1),
         theory_errors="flat",
     )
-    result = budget(problem, ["offset"])
-    assert result.flat == ("lattice",)
-    assert {row.name for row in result.entries["offset"]} == {"a", "b"}
-    assert result.to_dict()["flat"] == ["lattice"]
+    with pytest.raises(InputError, match="take theory errors gaussian"):
+        budget(problem, ["offset"])
 
 
 def test_what_cannot_be_budgeted(make, tables, linear):

@@ -9,7 +9,17 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from fitcore.commands.rounding import fixed, interval, last_decimal, number, with_error
+from fitcore.rounding import (
+    fixed,
+    interval,
+    last_decimal,
+    like_error,
+    number,
+    share,
+    shared_power,
+    significant,
+    with_error,
+)
 
 
 @pytest.mark.parametrize(
@@ -100,3 +110,53 @@ def test_numbers() -> None:
     assert number(0.1234567) == "0.123457"
     assert fixed(-0.0004, 2) == "0.00"
     assert fixed(1251.0, -2) == "1300"
+
+
+@pytest.mark.parametrize(
+    ("arguments", "expected"),
+    [
+        ((0.1,), "0.10"),
+        ((0.003,), "0.0030"),
+        ((1.0,), "1.0"),
+        ((4e-5,), "4.0e-05"),
+        ((0.0996,), "0.10"),
+        ((None,), "-"),
+        ((0.0,), "0"),
+        ((2.856e-3, 3), "0.00286"),
+        ((1234567.0,), "1.2e+06"),
+    ],
+)
+def test_significant_digits_keep_their_zeros(arguments: tuple[float, ...], expected: str) -> None:
+    assert significant(*arguments) == expected
+
+
+@given(value=st.floats(1e-12, 1e12), digits=st.integers(1, 6))
+def test_significant_digits_give_back_the_number(value: float, digits: int) -> None:
+    text = significant(value, digits)
+    assert float(text) == pytest.approx(value, rel=0.51 * 10.0 ** (1 - digits))
+    assert significant(value, digits, sign=True).removeprefix("+") == text
+
+
+def test_one_power_for_a_row() -> None:
+    power = shared_power(1.49e-4, 9.71e-5, error=4.2e-6)
+    assert with_error(1.49e-4, 0.14e-4, power=power) == "(1.49 +- 0.14)e-04"
+    assert with_error(9.71e-5, 0.42e-5, power=power) == "(0.971 +- 0.042)e-04"
+    assert interval(9.29e-5, 10.13e-5, 0.42e-5, power=power) == "[0.929, 1.013]e-04"
+    assert like_error(1.0e-4, 0.42e-5, power) == "1.000e-04"
+    assert shared_power(0.5, 1e-9) == 0
+    assert shared_power(None, math.inf) == 0
+    assert shared_power(2.5e8, error=1.2e6) == 8
+    assert shared_power(2.5e8, error=0.1) == 0
+
+
+def test_parts_of_an_uncertainty() -> None:
+    assert share(0.003, 0.0066, sign=True) == "+0.0030"
+    assert share(0.0026, 0.0066, sign=True) == "+0.0026"
+    assert share(-8.1e-5, 0.0066, sign=True) == "-0.000081"
+    assert share(1e-9, 0.0066) == "0.000000"
+    assert share(8.6e-8, 5.7e-7, sign=True, power=-7) == "+0.86e-07"
+
+
+def test_open_ends_have_the_decimals_of_the_error() -> None:
+    assert interval(0.1, math.inf, 0.013) == "[0.100, inf]"
+    assert interval(-math.inf, 0.5, 0.1) == "[-inf, 0.50]"

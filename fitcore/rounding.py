@@ -188,7 +188,9 @@ def interval(
         if not known:
             return f"[{_end(low, '-inf')}, {_end(high, 'inf')}]"
         ends = [
-            like_error(end, error or math.nan, power) if end is not None and math.isfinite(end) else _end(end, missing)
+            like_error(end, error or math.nan, power)
+            if end is not None and math.isfinite(end)
+            else _end(end, missing)
             for end, missing in ((low, "-inf"), (high, "inf"))
         ]
         return f"[{ends[0]}, {ends[1]}]"
