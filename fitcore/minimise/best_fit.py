@@ -156,7 +156,7 @@ def _fit_once(
         loose = [n for n, free in zip(problem.parameter_names, curvature.unconstrained, strict=True) if free]
         notes.add("unconstrained", f"the inputs do not constrain {', '.join(loose)}")
         # Points along a valley are no minima of their own.
-        minima = [minima[0], *(m for m in minima[1:] if m.chi2 > minima[0].chi2 + 1e-3)]
+        minima = [best, *(m for m in minima if m.chi2 > best.chi2 + 1e-3)]
     others = tuple(OtherMinimum(named(problem, m.theta), m.chi2) for m in minima if m is not best)
     if any(m.chi2 < chi2 + LEVELS[1] for m in others):
         notes.add(

@@ -35,6 +35,8 @@ class Curvature:
         Whether the Hessian is positive definite on the constrained directions.
     loose : ndarray, shape (k, n)
         The directions along which nothing changes, in the parameters' units.
+    unit : ndarray, shape (n,)
+        Change of each parameter that moves the residuals by one; 0 for flat ranges.
     """
 
     hessian: np.ndarray
@@ -43,11 +45,12 @@ class Curvature:
     unconstrained: np.ndarray
     positive: bool
     loose: np.ndarray
+    unit: np.ndarray
 
     def leaves_loose(self, slope: np.ndarray) -> bool:
         """Whether a quantity with this gradient, shape (n,), changes along an unconstrained direction."""
         # The directions are known to about the tolerance of the rank.
-        return bool(np.any(np.abs(self.loose @ slope) > 1e-5 * (np.abs(self.loose) @ np.abs(slope))))
+        return bool(np.any(np.abs(self.loose @ slope) > 1e-5 * np.linalg.norm(self.unit * slope)))
 
 
 def hessian(problem: Any, theta: np.ndarray, steps: np.ndarray) -> np.ndarray:
@@ -100,6 +103,8 @@ def curvature_at(problem: Any, theta: np.ndarray) -> Curvature:
     unconstrained[counted] = (np.abs(weak) > 1e-3).any(axis=0) | ~jacobian[:, counted].any(axis=0)
     loose = np.zeros((len(weak), n))
     loose[:, counted] = weak * unit
+    units = np.zeros(n)
+    units[counted] = unit
     rank = int(strong.sum())
 
     # At a bound chi-square need not be at rest: a parameter that sits there is held.
@@ -121,7 +126,7 @@ def curvature_at(problem: Any, theta: np.ndarray) -> Curvature:
     part = (basis.T @ (2.0 * np.linalg.inv(core)) @ basis) * np.outer(unit, unit)
     covariance = np.zeros((n, n))
     covariance[np.ix_(moving, moving)] = 0.5 * (part + part.T)
-    return Curvature(full, covariance, rank, unconstrained, positive, loose)
+    return Curvature(full, covariance, rank, unconstrained, positive, loose, units)
 
 
 def _directions(jacobian: np.ndarray, scales: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

@@ -104,3 +104,18 @@ def test_a_real_quantity_that_turns_complex_is_named(make, tables, catalogue):
         make(tables.measurement("a", "turned", 0.5, 0.1))
     with pytest.raises(CatalogueError, match="'turned' declares '-> Real'"):
         catalogue.compute(["turned"], {"slope": 1.0})
+
+
+def test_what_the_inputs_fix_has_its_error_beside_what_they_do_not():
+    """Oscillations without lattice inputs: the matrix is known, the matrix elements of mixing are not."""
+    only = ["V-us", "V-cb", "V-ub", "gamma-average", "frequency-Bd", "frequency-Bs"]
+    result = Problem.load("averages-2026", only=only).fit()
+    assert result.valid, result.message
+    assert result.flags == ("unconstrained",)
+    assert result.other_minima == ()
+    loose = {name for name, one in result.parameters.items() if one.error is None}
+    assert loose == {"mixing_matrix_element_Bs", "top_mass_msbar", "short_distance_factor_B"}
+    # each is measured alone, so the fit gives the measurement back
+    assert result.derived["magnitude_V_ub"].error == pytest.approx(0.16e-3, rel=1e-3)
+    assert result.derived["magnitude_V_cb"].error == pytest.approx(1.3e-3, rel=1e-3)
+    assert all(one.error is not None for one in result.derived.values())
