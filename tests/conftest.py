@@ -17,7 +17,10 @@ settings.register_profile("explore", deadline=None)
 settings.load_profile("explore" if os.environ.get("WEAKMIX_EXPLORE") else "repeatable")
 
 # A shell starts its background jobs with interrupts ignored, and so would the processes that tests interrupt be.
-if threading.current_thread() is threading.main_thread() and signal.getsignal(signal.SIGINT) is signal.SIG_IGN:
+if (
+    threading.current_thread() is threading.main_thread()
+    and signal.getsignal(signal.SIGINT) is signal.SIG_IGN
+):
     signal.signal(signal.SIGINT, signal.default_int_handler)
 
 

@@ -283,7 +283,11 @@ def _export_format(format_: str | None, to: Path | None) -> str:
     by_ending = {ending: name for name, ending in ENDINGS.items()}
     said = None if to is None else by_ending.get(to.suffix.lower())
     if format_ is None and said is None:
-        raise click.UsageError("say what to write: --format netcdf, csv or npz, or --to a name in .nc, .csv or .npz")
+        raise click.UsageError(
+            "say what to write: --format netcdf, csv or npz, or --to a name in .nc, .csv or .npz"
+        )
     if format_ is not None and said is not None and format_ != said:
-        raise click.UsageError(f"--format {format_} and --to {to} ask for different formats; drop one of them")
+        raise click.UsageError(
+            f"--format {format_} and --to {to} ask for different formats; drop one of them"
+        )
     return format_ or str(said)

@@ -31,7 +31,8 @@ if TYPE_CHECKING:
 @click.option(
     "--profile-intervals",
     is_flag=True,
-    help="Find every interval by refitting everything else, not only those of the Wolfenstein parameters and of --derived.",
+    help="Find every interval by refitting everything else, not only those of the Wolfenstein parameters "
+    "and of --derived.",
 )
 @click.option(
     "--compare-theory-errors",

@@ -114,7 +114,7 @@ def _name_inside(
     x = box.left + (band.x[place[0]] - low[0]) / (low[1] - low[0]) * box.width
     y = box.bottom + (band.y[place[1]] - high[0]) / (high[1] - high[0]) * box.height
     rail = box.left + box.width + RAIL_GAP
-    over = page.figure.add_axes(page.get_position(), zorder=30, label="leaders")
+    over = page.figure.add_axes(page.get_position().bounds, zorder=30, label="leaders")
     over.set_axis_off()
     over.set_xlim(page.get_xlim())
     over.set_ylim(page.get_ylim())

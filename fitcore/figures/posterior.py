@@ -32,7 +32,11 @@ ACROSS = 4
 FIT = style.VERMILLION
 #: Line of the open bars by what the interval of the fit is.
 METHODS = {"profile": "-", "linear": (0, (3, 1.5)), "range": (0, (1, 1.2))}
-METHOD_WORDS = {"profile": "full outline: profile", "linear": "dashed: linear", "range": "dotted: allowed range"}
+METHOD_WORDS = {
+    "profile": "full outline: profile",
+    "linear": "dashed: linear",
+    "range": "dotted: allowed range",
+}
 POSTERIOR = style.NAVY
 CREDIBLE = "fill: 68.27 % credible region, edge with ticks: 95.45 %, two parameters (highest density)"
 
@@ -257,9 +261,7 @@ def plane(
         axes.set_ylabel(draws.label(y), fontsize=11)
         for number, (words, lines) in enumerate(profile):
             for line in lines:
-                axes.plot(
-                    *np.asarray(line).T, color=FIT, lw=1.2, ls=("-", (0, (4, 2)))[number % 2], zorder=6
-                )
+                axes.plot(*np.asarray(line).T, color=FIT, lw=1.2, ls=("-", (0, (4, 2)))[number % 2], zorder=6)
                 found.append((f"profile {words}", np.asarray(line)))
         _title(figure, height, width, "Posterior regions")
         _subtitle(figure, height, width, [(CREDIBLE, style.FAINT_INK)])

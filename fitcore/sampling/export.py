@@ -104,7 +104,7 @@ def _derived(chain: Any) -> tuple[str, ...]:
 
 def _split(values: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
     """Real columns only: a complex quantity becomes its real and imaginary parts."""
-    columns = {}
+    columns: dict[str, np.ndarray] = {}
     for name, value in values.items():
         if np.iscomplexobj(value):
             columns |= {f"{name}_re": value.real, f"{name}_im": value.imag}

@@ -229,8 +229,12 @@ class Run:
         """Usable effective samples (0 while unreliable or in disagreement) and the longest tau."""
         usable = tau = 0.0
         # A short look first; what it lets pass is looked at again as the diagnosis will look at it.
-        for most in ({"max_values": _CHECK_VALUES}, {}):
-            thinned = ThinnedChain.read(self.chain, **most)
+        for quick in (True, False):
+            thinned = (
+                ThinnedChain.read(self.chain, max_values=_CHECK_VALUES)
+                if quick
+                else ThinnedChain.read(self.chain)
+            )
             found = mixing(thinned)
             sizes = found.effective_sample_size
             smallest = float(np.min(np.where(np.isfinite(sizes), sizes, 0.0)))
@@ -255,7 +259,9 @@ class Run:
             remaining.append(max(60.0 * minutes - seconds, 0.0))
         if effective is not None and found is not None and np.isfinite(found[1]) and done:
             walkers = self.n_ensembles * self.per_ensemble
-            needed = max(effective * found[1] / walkers, _MARGIN * RELIABLE_TAUS * found[1]) - self.chain.steps
+            needed = (
+                max(effective * found[1] / walkers, _MARGIN * RELIABLE_TAUS * found[1]) - self.chain.steps
+            )
             remaining.append(seconds / done * max(needed, 0.0))
         self.progress(
             Progress(

@@ -9,7 +9,12 @@ from fitcore import Problem
 from observables.errors import CatalogueError, InputError
 
 #: What the size of a mixing amplitude rests on, and its phase does not.
-SIZE = {"mixing_matrix_element_Bs", "mixing_matrix_element_ratio", "top_mass_msbar", "short_distance_factor_B"}
+SIZE = {
+    "mixing_matrix_element_Bs",
+    "mixing_matrix_element_ratio",
+    "top_mass_msbar",
+    "short_distance_factor_B",
+}
 
 
 @pytest.mark.parametrize(
@@ -89,7 +94,9 @@ def test_a_formula_that_fails_is_named(make, tables, catalogue):
         return math.sin(slope)
 
     catalogue.quantity(unit="1", title="sine by the wrong library", source="invented")(wrong)
-    with pytest.raises(CatalogueError, match=r"test_influence.py:\d+: the formula of 'wrong' fails on arrays"):
+    with pytest.raises(
+        CatalogueError, match=r"test_influence.py:\d+: the formula of 'wrong' fails on arrays"
+    ):
         make(tables.measurement("a", "wrong", 0.5, 0.1))
 
 

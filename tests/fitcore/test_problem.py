@@ -176,7 +176,8 @@ def test_points_with_the_wrong_names(line):
 
 def test_values_real_complex_and_of_parameters(make, tables):
     problem = make(
-        tables.measurement("t", "direction", 20.0, 5.0, unit="deg"), tables.measurement("o", "offset", 0.2, 0.1)
+        tables.measurement("t", "direction", 20.0, 5.0, unit="deg"),
+        tables.measurement("o", "offset", 0.2, 0.1),
     )
     theta = np.array([[0.2, 10.0], [0.3, -100.0]])
     assert problem.parameter_names == ("offset", "turn")

@@ -129,7 +129,9 @@ class TestSummaryAgainst:
         assert result.exit_code == 0, result.output
         assert "fit 68.27 %" in result.stdout
         assert "profile 68.27 %" not in result.stdout
-        assert "] profile" in next(x for x in result.stdout.splitlines() if x.startswith("wolfenstein_rhobar"))
+        assert "] profile" in next(
+            x for x in result.stdout.splitlines() if x.startswith("wolfenstein_rhobar")
+        )
         assert "differs from the chain" not in result.stdout
 
     def test_profile_of_one_quantity(self, chain, tmp_path):

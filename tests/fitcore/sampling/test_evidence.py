@@ -22,7 +22,7 @@ def boxed_gaussian(problems, n, half=20.0):
 
 
 @pytest.mark.stat
-@pytest.mark.parametrize("n", [2, 10, 25])
+@pytest.mark.parametrize("n", [2, 10, pytest.param(25, marks=pytest.mark.slow)])
 def test_gaussian_in_closed_form(problems, n):
     problem, covariance, expected = boxed_gaussian(problems, n)
     result = sample(problem, covariance=covariance, effective=2000, rng=1, check_widths=False)

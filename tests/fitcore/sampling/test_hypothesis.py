@@ -53,11 +53,11 @@ def sampled(hypothesis, path=None):
     return problem, fit, result
 
 
+@pytest.mark.slow
 @pytest.mark.stat
-def test_parameter_of_a_hypothesis(tmp_path):
+def test_parameter_and_evidence_of_a_hypothesis():
     register()
-    path = tmp_path / "stretched.h5"
-    problem, fit, result = sampled(NAME, path)
+    problem, fit, result = sampled(NAME)
     row = summarise(result.chain, names=("stretch_Bd",))["stretch_Bd"]
     low, high = fit.parameters["stretch_Bd"].interval_68
     half = 0.5 * (high - low)
@@ -76,7 +76,13 @@ def test_parameter_of_a_hypothesis(tmp_path):
     error = np.sqrt(wide.error**2 + narrow.error**2 + 1.0 / count)
     assert narrow.log_evidence - wide.log_evidence == pytest.approx(expected, abs=5.0 * error + 0.02)
 
-    # The file knows its hypothesis; derived quantities are those of the hypothesis.
+
+def test_chain_file_knows_its_hypothesis(tmp_path):
+    """Derived quantities are those of the hypothesis; what is not registered any more is refused."""
+    register()
+    path = tmp_path / "stretched.h5"
+    problem, standard = Problem.load("averages-2026", hypothesis=NAME), Problem.load("averages-2026")
+    sample(problem, until=32, rng=1, chain_path=path, check_widths=False)
     again = problem_of_chain(path)
     assert again.hypothesis == NAME
     derive(path, again, ["mixing_frequency_Bd"])
@@ -89,20 +95,7 @@ def test_parameter_of_a_hypothesis(tmp_path):
     with pytest.raises(StoreError, match="stretch_Bd"):
         ChainFile.resume(path, standard)
 
-
-def test_chain_of_a_hypothesis_that_is_not_there(tmp_path):
-    register()
-    problem = Problem.load("averages-2026", hypothesis=NAME)
-    path = tmp_path / "c.h5"
-    sample(
-        problem,
-        modes=modes_of_fit(problem, problem.fit()),
-        until=8,
-        rng=1,
-        chain_path=path,
-        check_widths=False,
-    )
     del catalogue._hypotheses[NAME]
     with pytest.raises(UnknownNameError, match=NAME):
         problem_of_chain(path)
-    assert ChainFile.open(path).steps == 8
+    assert ChainFile.open(path).steps == 32

@@ -35,7 +35,7 @@ def uninterrupted(writer_script, tmp_path_factory):
     return content(path)
 
 
-@pytest.mark.parametrize("repetitions", [4, pytest.param(100, marks=pytest.mark.slow)])
+@pytest.mark.parametrize("repetitions", [6, pytest.param(100, marks=pytest.mark.slow)])
 def test_kill_at_random_moments(writer_script, uninterrupted, tmp_path, repetitions):
     script = Path(writer_script[1]).with_name("chain_killer.py")
     killed = subprocess.run(
@@ -55,7 +55,7 @@ def test_kill_at_random_moments(writer_script, uninterrupted, tmp_path, repetiti
 def test_reader_never_meets_a_writer_in_the_middle(writer_script, tmp_path):
     """Whatever moment a reader looks at, it sees a sound chain."""
     path = tmp_path / "chain.h5"
-    with subprocess.Popen([*writer_script, str(path), "480"], stdout=subprocess.DEVNULL) as process:
+    with subprocess.Popen([*writer_script, str(path), "240"], stdout=subprocess.DEVNULL) as process:
         while not path.exists() and process.poll() is None:
             time.sleep(0.01)
         seen = [verify(path).steps]
@@ -63,7 +63,7 @@ def test_reader_never_meets_a_writer_in_the_middle(writer_script, tmp_path):
             seen.append(verify(path).steps)
     assert process.returncode == 0
     assert seen == sorted(seen)
-    assert verify(path).steps == 480
+    assert verify(path).steps == 240
 
 
 def test_full_disk_stops_the_run_and_loses_nothing(writer_script, uninterrupted, tmp_path):
