@@ -25,6 +25,12 @@ if (
 
 
 @pytest.fixture(autouse=True)
+def _width_of_a_pipe(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Tables as wide as in a pipe, whatever terminal (or test runner) the tests are started from."""
+    monkeypatch.delenv("COLUMNS", raising=False)
+
+
+@pytest.fixture(autouse=True)
 def _public_catalogue_as_it_was() -> Iterator[None]:
     """A test may add to the public catalogue, as a user's module does; the next one finds it as shipped."""
     from observables import catalogue

@@ -46,7 +46,7 @@ def summary(made: PosteriorSummary, fit: Mapping[str, Any] | None = None) -> Tab
     columns: list[tuple[str, str]] = [("name", "name"), ("mean and width", "whole")]
     columns += [(f"{100 * level:.4g} % credible", "whole") for level in levels]
     if fit:
-        columns.append(("fit 68.27 %", "spare"))
+        columns.append(("fit 68.27 %", "whole"))
     columns += [("unit", "whole"), ("effective", "spare")]
     result = table(f"Posterior ({made.kind} intervals)", *columns, caption=exceptions(made))
     for row in made.rows:
