@@ -72,15 +72,7 @@ def draw(pairs: Sequence[Pair], *, title: str = "", footer: str = "") -> style.D
                 )
             _row(axes, pair, y)
         style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.13 / height)
-        figure.text(
-            1 - 0.2 / WIDTH,
-            0.13 / height,
-            "small numbers are each row's own scale",
-            fontsize=6.5,
-            color=style.FAINT_INK,
-            ha="right",
-            va="bottom",
-        )
+        style.own_scales(figure, right=0.2 / WIDTH, baseline=0.13 / height)
     rows = tuple(
         (
             *(p.name, p.unit, p.direct, *(p.direct_error or (None, None)), p.value),

@@ -93,15 +93,7 @@ def draw(rows: Sequence[BeforeAfter], *, title: str = "", footer: str = "") -> s
                 WIDTH - 0.3, y, f"\N{MULTIPLICATION SIGN}{row.gain:.2f}", fontsize=9, ha="right", va="center"
             )
         style.footer(figure, footer, left=0.2 / WIDTH, baseline=0.13 / height)
-        figure.text(
-            1 - 0.2 / WIDTH,
-            0.13 / height,
-            "small numbers are each row's own scale",
-            fontsize=6.5,
-            color=style.FAINT_INK,
-            ha="right",
-            va="bottom",
-        )
+        style.own_scales(figure, right=0.2 / WIDTH, baseline=0.13 / height)
     data = tuple(
         (
             *(row.name, row.unit, row.value),

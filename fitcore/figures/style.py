@@ -280,3 +280,9 @@ def sign(pull: float) -> str:
 def footer(figure: Figure, text: str, *, left: float, baseline: float) -> None:
     """Write the line that says what a figure was made from; positions are fractions of the figure."""
     figure.text(left, baseline, text, fontsize=6.5, color=FAINT_INK, ha="left", va="bottom")
+
+
+def own_scales(figure: Figure, *, right: float, baseline: float) -> None:
+    """Say at the right end of the footer what the small numbers under the rows are."""
+    text = "small numbers are each row's own scale"
+    figure.text(1 - right, baseline, text, fontsize=6.5, color=FAINT_INK, ha="right", va="bottom")

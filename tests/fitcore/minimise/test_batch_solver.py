@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from small_problems import bent_valley
 
 from fitcore.minimise.batch_solver import EqualityConstraints, Status, minimise_batch, solve_with_retries
 
@@ -31,18 +32,8 @@ def make_linear(least_squares_problem, free_parameter):
 def curved(least_squares_problem, free_parameter):
     """A bent valley with nuisance parameters and some derived quantities."""
 
-    def residual(t):
-        terms = [
-            (t[0] - 1.0) / 0.5,
-            (t[1] - t[0] ** 2 + 0.3 * t[2]) / 0.1,
-            t[2],
-            (t[3] - t[2] * t[0]) / 0.3,
-            t[3] / 2.0,
-        ]
-        return np.concatenate(terms, axis=-1)
-
     return least_squares_problem(
-        residual,
+        bent_valley,
         [free_parameter("x"), free_parameter("y"), free_parameter("u"), free_parameter("w")],
         quantities={
             "radius": lambda t: t[0] ** 2 + t[1] ** 2,

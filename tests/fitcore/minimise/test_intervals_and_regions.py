@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from small_problems import DIRECTIONS, bent_valley, linear_problem
 
 from fitcore.minimise.batch_solver import minimise_batch
 from fitcore.minimise.intervals import profile_intervals
@@ -16,36 +17,12 @@ LEVELS = (1.0, 3.841)
 
 @pytest.fixture(scope="module")
 def linear(least_squares_problem, free_parameter):
-    rng = np.random.default_rng(5)
-    jacobian, measured = rng.normal(size=(12, 6)), rng.normal(size=12)
-    problem = least_squares_problem(
-        lambda t: sum(jacobian[:, k] * t[k] for k in range(6)) - measured,
-        [free_parameter(f"p{k}") for k in range(6)],
-        quantities={"combination": lambda t: t[0] + 2 * t[1] - t[3]},
-    )
-    best = np.linalg.lstsq(jacobian, measured, rcond=None)[0]
-    return problem, best, np.linalg.inv(jacobian.T @ jacobian)
-
-
-DIRECTIONS = {
-    **{f"p{k}": np.eye(6)[k] for k in range(6)},
-    "combination": np.array([1.0, 2.0, 0.0, -1.0, 0.0, 0.0]),
-}
+    return linear_problem(least_squares_problem, free_parameter, seed=5)
 
 
 def make_banana(problem_class, parameter_class, **bounds):
-    def residual(t):
-        terms = [
-            (t[0] - 1.0) / 0.5,
-            (t[1] - t[0] ** 2 + 0.3 * t[2]) / 0.1,
-            t[2],
-            (t[3] - t[2] * t[0]) / 0.3,
-            t[3] / 2.0,
-        ]
-        return np.concatenate(terms, axis=-1)
-
     return problem_class(
-        residual,
+        bent_valley,
         [parameter_class("x"), parameter_class("y", **bounds), parameter_class("u"), parameter_class("w")],
         quantities={"radius": lambda t: t[0] ** 2 + t[1] ** 2},
     )
