@@ -240,3 +240,15 @@ def test_regions_cut_by_the_frame_are_open_lines(linear):
     assert region.polished.all()
     with pytest.raises(InputError, match="regions"):
         result.interval()
+
+
+def test_ends_of_a_linear_problem_equal_the_closed_form_to_a_millionth(linear):
+    problem, best, covariance = linear
+    names = list(DIRECTIONS)
+    table = profile_intervals(problem, best, names, delta_chi2=LEVELS)
+    for name in names:
+        centre = DIRECTIONS[name] @ best
+        sigma = np.sqrt(DIRECTIONS[name] @ covariance @ DIRECTIONS[name])
+        for level, (low, high, *_) in zip(LEVELS, table[name], strict=True):
+            assert low == pytest.approx(centre - np.sqrt(level) * sigma, abs=1e-6 * sigma)
+            assert high == pytest.approx(centre + np.sqrt(level) * sigma, abs=1e-6 * sigma)
