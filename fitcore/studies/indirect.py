@@ -196,7 +196,8 @@ def _one(problem: Any, name: str, chi2_all: float, known: np.ndarray, starts: in
         flags.append("not-converged")
     if len(minima) > 1 and minima[1].chi2 < best.chi2 + 3.84:
         flags.append("several-minima")
-    theta, chi2_rest = best.theta, best.chi2
+    # Interval ends are found from the minimum: the closer, the closer they are.
+    theta, chi2_rest = minimise_batch(rest, best.theta[None], tolerance=1e-15).theta[0], best.chi2
     table = profile_intervals(rest, theta, [name], delta_chi2=LEVELS)
     for _ in range(2):
         if table.better_minimum is None:

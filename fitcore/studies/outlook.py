@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 
+from fitcore.minimise.batch_solver import minimise_batch
 from fitcore.minimise.best_fit import PROFILED
 from fitcore.minimise.minima import find_minima
 from fitcore.minimise.profile import profile_intervals
@@ -19,6 +20,8 @@ from observables.errors import ConvergenceError, InputError
 __all__ = ["Future", "OutlookResult", "OutlookRow", "outlook", "read_future"]
 
 LEVELS = (1.0, 3.841458820694124)
+#: Expected distance, in chi-square, that ends a minimisation only at the limit of rounding.
+EXACT = 1e-15
 
 
 @dataclass(frozen=True)
@@ -242,7 +245,8 @@ def outlook(
     minima = find_minima(problem, size=starts, rng=rng)
     if not minima or not minima[0].converged:
         raise ConvergenceError("the fit has no converged minimum; see weakmix fit", minima)
-    theta = minima[0].theta
+    # Interval ends are found from the minimum: the closer, the closer they are.
+    theta = minimise_batch(problem, minima[0].theta[None], tolerance=EXACT).theta[0]
     predicted = dict(zip((e.id for e in problem.entries), problem.predictions(theta), strict=True))
     # an entry that is a flat range of its parameter has no prediction of its own: the parameter's value is one
     place = {name: i for i, name in enumerate(problem.parameter_names)}

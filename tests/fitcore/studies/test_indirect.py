@@ -54,10 +54,9 @@ def test_linear_problem_equals_the_closed_form(linear, name):
     line = np.array(linear.lines[name])
     value, error = line @ rest.theta, np.sqrt(line @ rest.covariance @ line)
     assert row.value == pytest.approx(value, rel=1e-6)
-    # ends of intervals are found to 2e-4 in Delta chi2, that is to 1e-4 of the error
-    assert row.interval_68 == pytest.approx((value - error, value + error), abs=2e-4 * error)
+    assert row.interval_68 == pytest.approx((value - error, value + error), abs=1e-6 * error)
     reach = np.sqrt(3.841458820694124) * error
-    assert row.interval_95 == pytest.approx((value - reach, value + reach), abs=2e-4 * error)
+    assert row.interval_95 == pytest.approx((value - reach, value + reach), abs=1e-6 * error)
     block = linear.covariance[np.ix_(own, own)]
     weight = np.linalg.inv(block)
     mean = weight.sum(axis=0) @ linear.values[own] / weight.sum()

@@ -23,7 +23,7 @@ def test_linear_problem_equals_the_closed_form(linear, name):
     value = line @ now.theta
     for interval, spread in ((row.now_68, now.covariance), (row.future_68, later.covariance)):
         error = math.sqrt(line @ spread @ line)
-        assert interval == pytest.approx((value - error, value + error), abs=2e-4 * error)
+        assert interval == pytest.approx((value - error, value + error), abs=1e-6 * error)
     assert row.value == pytest.approx(value, rel=1e-6)
     ratio = math.sqrt(line @ now.covariance @ line / (line @ later.covariance @ line))
     assert row.gain == pytest.approx(ratio, rel=4e-4)
@@ -44,7 +44,7 @@ def test_named_sources_shrink_together(make, tables):
         tables.measurement("b", "offset", 0.3, {"statistical": 0.3, "scale": 0.4}),
     )
     (row,) = outlook(problem, {"a": 0.5, "b": 0.5}, ["at_one"]).rows
-    assert row.now_68[1] - row.value == pytest.approx(math.sqrt(2 * 0.3**2 + 0.8**2), rel=2e-4)
+    assert row.now_68[1] - row.value == pytest.approx(math.sqrt(2 * 0.3**2 + 0.8**2), rel=1e-6)
     assert row.gain == pytest.approx(2.0, rel=1e-3)
 
 
