@@ -143,24 +143,19 @@ def test_many_times_faster_than_emcee_the_ordinary_way():
 
 
 @pytest.mark.slow
-def test_chain_file_costs_at_most_ten_percent(tmp_path, monkeypatch):
-    """Time spent storing steps over the rest of the same run: both sides share whatever else the machine does."""
-    from fitcore.sampling.chain_file import ChainFile
+def test_chain_file_costs_at_most_ten_percent(tmp_path):
+    """The same steps (same seed) into a file and into memory, interleaved, the shortest of three each.
 
+    A first run of each is thrown away: memory that a process uses for the first time costs extra on either side.
+    """
     problem = Problem.load("world-2026")
     modes = modes_of_fit(problem, problem.fit())
-    stored = []
-    save_step = ChainFile.save_step
-
-    def timed(self, state, accepted):
-        begin = time.perf_counter()
-        save_step(self, state, accepted)
-        stored.append(time.perf_counter() - begin)
-
-    monkeypatch.setattr(ChainFile, "save_step", timed)
-    result = sample(problem, modes=modes, until=2000, rng=1, chain_path=tmp_path / "c.h5", check_widths=False)
-    share = sum(stored) / (result.seconds - sum(stored))
-    megabytes = (tmp_path / "c.h5").stat().st_size / 2**20
-    print(f"\nstoring {megabytes:.0f} MiB took {share:.1%} of the time of sampling them")
-    assert len(stored) == 2000
+    seconds: dict[str, list[float]] = {"memory": [], "file": []}
+    for repeat in range(4):
+        for kind, times in seconds.items():
+            path = tmp_path / f"{repeat}.h5" if kind == "file" else None
+            result = sample(problem, modes=modes, until=1000, rng=1, chain_path=path, check_widths=False)
+            times.append(result.seconds)
+    share = min(seconds["file"][1:]) / min(seconds["memory"][1:]) - 1.0
+    print(f"\na chain file costs {share:+.1%} over memory")
     assert share < 0.10
